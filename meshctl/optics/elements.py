@@ -14,7 +14,8 @@ Conventions, each tested by number in tests/test_elements.py:
   value * (1 + angle_slope_per_nm (l - l0)).
 
 All functions take numpy or jax.numpy arrays: pass the module as `xp`.
-Public: KINDS, kind_row, through_and_cross, coupler_block, cell_block, guide_phase_rad.
+Public: KINDS, kind_row, through_and_cross, coupler_block, phase_block, cell_block, phase_scale,
+angle_scale, guide_phase_rad.
 """
 
 from __future__ import annotations
@@ -78,6 +79,16 @@ def cell_block(
     return coupler_block(quarter + error2_rad, xp) @ phase_block(xp.asarray(inner_rad), xp) @ first
 
 
+def phase_scale(wavelength_nm: float, centre_nm: float) -> float:
+    """What a phase is multiplied by at another wavelength than the centre."""
+    return centre_nm / wavelength_nm
+
+
+def angle_scale(wavelength_nm: float, centre_nm: float, angle_slope_per_nm: float) -> float:
+    """What a coupler's angle is multiplied by at another wavelength than the centre."""
+    return 1.0 + angle_slope_per_nm * (wavelength_nm - centre_nm)
+
+
 def guide_phase_rad(
     length_um: Any, wavelength_nm: float, centre_nm: float, n_eff: float, n_group: float
 ) -> Any:
@@ -117,8 +128,8 @@ def through_and_cross(
     -------
     t, x : complex arrays (E,)
     """
-    angle = value * (1.0 + angle_slope_per_nm * (wavelength_nm - centre_nm))
-    phase = value * (centre_nm / wavelength_nm) + guide_phase_rad(
+    angle = value * angle_scale(wavelength_nm, centre_nm, angle_slope_per_nm)
+    phase = value * phase_scale(wavelength_nm, centre_nm) + guide_phase_rad(
         length_um, wavelength_nm, centre_nm, n_eff, n_group
     )
     is_coupler, is_loss, is_crossing = kind == COUPLER, kind == LOSS, kind == CROSSING

@@ -1,0 +1,178 @@
+"""From a net, its as-built values and settings to its matrix: compiles the net and picks the kernel.
+
+Public: Response, circuit_of.
+"""
+
+from __future__ import annotations
+
+from weakref import WeakKeyDictionary
+
+import numpy as np
+
+from meshctl.errors import LoopInNet, WrongSize
+from meshctl.mesh.graph import AsBuilt, Net
+from meshctl.optics import elements as parts
+from meshctl.optics.feedforward import Circuit, compile_circuit, fuse, propagate
+from meshctl.units import UM_PER_CM, amplitude_from_loss_db
+
+_circuits: WeakKeyDictionary[Net, Circuit | None] = WeakKeyDictionary()
+
+
+def circuit_of(net: Net) -> Circuit | None:
+    """The net compiled for the loop-free kernels, or None where it has a loop; compiled once per net."""
+    if net not in _circuits:
+        _circuits[net] = compile_circuit(
+            net.port_start, net.mate, net.cell_of, net.input_ports, net.output_ports
+        )
+    return _circuits[net]
+
+
+def _light_order(net: Net) -> Circuit:
+    circuit = circuit_of(net)
+    if circuit is None:
+        raise LoopInNet("the net has a loop or a link that runs against the light")
+    return circuit
+
+
+class Response:
+    """What the chip does to light, for any settings and wavelengths.
+
+    Parameters
+    ----------
+    net : Net
+    as_built : AsBuilt
+        Splitting errors, losses and stuck settings of the die.
+
+    Raises
+    ------
+    LoopInNet
+        Where the net has a loop.
+    """
+
+    def __init__(self, net: Net, as_built: AsBuilt) -> None:
+        self.net, self.as_built = net, as_built
+        self.circuit = _light_order(net)
+        kind = net.kind
+        self._couplers = np.flatnonzero(kind == parts.COUPLER)
+        self._turning = np.flatnonzero((kind == parts.PHASE) | (kind == parts.GUIDE))
+        self._crossings = np.flatnonzero(kind == parts.CROSSING)
+        self._losses = np.flatnonzero(kind == parts.LOSS)
+        loss_db = as_built.loss_db + net.length_um / UM_PER_CM * net.guide_loss_db_per_cm
+        loss_db[self._losses] += net.nominal[self._losses]
+        self._amplitude = amplitude_from_loss_db(loss_db)
+        self._moved = np.flatnonzero(net.setting_of >= 0)
+        self._base = net.nominal + as_built.error_rad
+        self._base[self._moved] = as_built.error_rad[self._moved]
+        self._moved_by = net.setting_of[self._moved]
+        self._centre = self._prepare_centre()
+
+    def values(self, settings: np.ndarray) -> np.ndarray:
+        """Value in force of every element [E] at the centre wavelength."""
+        if settings.shape != (self.net.n_settings,):
+            raise WrongSize(
+                f"settings have shape {settings.shape}; this net takes ({self.net.n_settings},)"
+            )
+        value = self._base.copy()
+        value[self._moved] += self.as_built.in_force(settings)[self._moved_by]
+        return value
+
+    def _fill(
+        self, table: np.ndarray, couplers: np.ndarray, angle: np.ndarray, turning: np.ndarray, phase: np.ndarray
+    ) -> None:
+        amplitude = self._amplitude
+        table[0, couplers] = np.cos(angle) * amplitude[couplers]
+        table[3, couplers] = np.sin(angle) * amplitude[couplers]
+        table[0, turning] = np.cos(phase) * amplitude[turning]
+        table[1, turning] = np.sin(phase) * amplitude[turning]
+
+    def _prepare_centre(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Amplitudes of all parts with no setting in force, and the rows that settings move."""
+        net = self.net
+        table = np.zeros((4, net.n_elements))
+        table[0, self._losses] = self._amplitude[self._losses]
+        table[2, self._crossings] = self._amplitude[self._crossings]
+        self._fill(table, self._couplers, self._base[self._couplers], self._turning, self._base[self._turning])
+        moved = net.setting_of >= 0
+        return (
+            table,
+            np.flatnonzero(moved & (net.kind == parts.COUPLER)),
+            np.flatnonzero(moved & (net.kind == parts.PHASE)),
+        )
+
+    def _table(self, value: np.ndarray, wavelength_nm: float | None) -> np.ndarray:
+        """Amplitudes [4, E] of all parts at one wavelength; None is the centre."""
+        base, couplers, phases = self._centre
+        table = base.copy()
+        if wavelength_nm is None or wavelength_nm == self.net.wavelength_nm:
+            self._fill(table, couplers, value[couplers], phases, value[phases])
+            return table
+        net = self.net
+        scale = parts.angle_scale(wavelength_nm, net.wavelength_nm, net.angle_slope_per_nm)
+        phase = value * parts.phase_scale(wavelength_nm, net.wavelength_nm) + parts.guide_phase_rad(
+            net.length_um, wavelength_nm, net.wavelength_nm, net.n_eff, net.n_group
+        )
+        self._fill(
+            table, self._couplers, value[self._couplers] * scale, self._turning, phase[self._turning]
+        )
+        return table
+
+    def blocks(self, settings: np.ndarray, wavelength_nm: float | None = None) -> np.ndarray:
+        """The fused 2x2 blocks [B, 8] of the net at one wavelength (None: the centre)."""
+        return self._blocks(self.values(settings), wavelength_nm)
+
+    def _blocks(self, value: np.ndarray, wavelength_nm: float | None) -> np.ndarray:
+        circuit = self.circuit
+        blocks = np.empty((circuit.n_blocks, 8))
+        fuse(circuit.first, circuit.element, circuit.side, self._table(value, wavelength_nm), blocks)
+        return blocks
+
+    def _run(self, blocks: np.ndarray, fields: np.ndarray) -> np.ndarray:
+        circuit = self.circuit
+        real = np.zeros((circuit.n_lanes, fields.shape[1]))
+        imag = np.zeros_like(real)
+        real[: circuit.n_inputs], imag[: circuit.n_inputs] = fields.real, fields.imag
+        propagate(circuit.lane_a, circuit.lane_b, blocks, real, imag)
+        out: np.ndarray = real[circuit.output_lane] + 1j * imag[circuit.output_lane]
+        return out
+
+    def matrix(self, settings: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
+        """Field matrix of the chip.
+
+        Parameters
+        ----------
+        settings : float (S,), rad
+        wavelengths_nm : float (W,), or None for the centre wavelength alone
+
+        Returns
+        -------
+        complex (out, in), or (W, out, in) where wavelengths are given.
+
+        Cost: per wavelength a few real products of the matrix's size.
+        """
+        return self.fields(settings, np.eye(self.circuit.n_inputs), wavelengths_nm)
+
+    def fields(
+        self, settings: np.ndarray, entering: np.ndarray, wavelengths_nm: np.ndarray | None = None
+    ) -> np.ndarray:
+        """Fields at the outputs for fields entering the inputs, without forming the matrix.
+
+        Parameters
+        ----------
+        entering : complex (in,) or (in, k)
+
+        Returns
+        -------
+        complex (out,) or (out, k); with wavelengths an axis of W before.
+        """
+        columns = np.asarray(entering)
+        if columns.shape[0] != self.circuit.n_inputs:
+            raise WrongSize(
+                f"the entering field has {columns.shape[0]} rows; the chip has {self.circuit.n_inputs} inputs"
+            )
+        flat = columns.reshape(columns.shape[0], -1)
+        value = self.values(settings)
+        if wavelengths_nm is None:
+            out = self._run(self._blocks(value, None), flat)
+            return out.reshape(-1, *columns.shape[1:])
+        runs = [self._run(self._blocks(value, float(w)), flat) for w in wavelengths_nm]
+        return np.array(runs).reshape(len(runs), -1, *columns.shape[1:])
