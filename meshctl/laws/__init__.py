@@ -1,0 +1,22 @@
+"""Laws of one actuator, volts to phase or angle and back: the table of all of them.
+
+Public: LAWS, law_row, HEATER, TABLE.
+"""
+
+from __future__ import annotations
+
+from meshctl.laws.heater import HEATER_LAW
+from meshctl.laws.law import Law
+from meshctl.laws.table import TABLE_LAW
+
+LAWS: tuple[Law, ...] = (
+    HEATER_LAW,
+    TABLE_LAW,
+)
+HEATER, TABLE = range(2)
+_ROWS = {law.name: row for row, law in enumerate(LAWS)}
+
+
+def law_row(name: str) -> int | None:
+    """Row of a law in LAWS, or None for an unknown name."""
+    return _ROWS.get(name)

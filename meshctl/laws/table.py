@@ -1,0 +1,366 @@
+"""Measured tables: a monotone curve through (volts, value) rows, and its exact inverse.
+
+The curve is a piecewise cubic that keeps the rows' rise (Fritsch and Carlson 1980; inner slopes by the
+weighted harmonic mean of Fritsch and Butland 1984; three-point ends). Its axis is V^2 where no volts are
+negative, because heaters and gaps answer to V^2, else V. Nothing is ever extrapolated. Level stretches
+are allowed: there the inverse answers with the end that comes first in the table.
+
+Public: Table, TABLE_LAW, check_table, smoothed, Curves, LEAST_ROWS.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from meshctl.errors import MissingRow, NotFinite, OutOfRange, OutsideMeasuredRange, TableNotMonotone
+from meshctl.laws.law import Law, Param, Params, Rows, raise_where
+
+LEAST_ROWS = 4
+EDGE = 1e-13  # rounding that a value or volts at a table's very end may carry (relative)
+SMOOTHINGS = ("v2", "v4", "isotonic")
+HANDLING = (
+    Param("approach", "", 0.0, -1.0, 1.0, "1: come from lower volts, -1: from higher, 0: from either side"),
+    Param("release_v", "V", 0.0, -1e3, 1e3, "volts to pass through before a smaller travel; 0: none"),
+    Param("off_rad", "rad", np.nan, -np.inf, np.inf, "value with the power off; left out: the value at 0 V"),
+)
+
+
+def check_table(table: ArrayLike, where: str = "") -> None:
+    """Raise what keeps a table of (volts, value_rad, sigma_rad) rows from being a law.
+
+    Raises
+    ------
+    MissingRow
+        Fewer than 4 rows.
+    NotFinite, OutOfRange
+        A NaN or infinity; a negative sigma_rad.
+    TableNotMonotone
+        Volts that do not rise from row to row, or values that turn back (or never change).
+    """
+    rows = np.asarray(table, float)
+    if rows.ndim != 2 or rows.shape[1] != 3 or len(rows) < LEAST_ROWS:
+        raise MissingRow(
+            f"{len(rows)} rows of volts, value_rad and sigma_rad in the table, at least {LEAST_ROWS} are needed",
+            where=where,
+            remedy="measure more voltages",
+        )
+    if not np.isfinite(rows).all():
+        bad = int(np.flatnonzero(~np.isfinite(rows).all(1))[0])
+        raise NotFinite(f"row {bad + 1} of the table is not finite", where=where, remedy="take it out")
+    if (rows[:, 2] < 0.0).any():
+        bad = int(np.argmin(rows[:, 2]))
+        raise OutOfRange(
+            f"sigma_rad is {rows[bad, 2]:g} rad at {rows[bad, 0]:g} V, must be at least 0 rad",
+            where=where,
+            remedy="give 0 where it is not known",
+        )
+    stalls = np.flatnonzero(np.diff(rows[:, 0]) <= 0.0)
+    if len(stalls):
+        raise TableNotMonotone(
+            f"volts do not rise after {_listed(rows[stalls, 0])}",
+            where=where,
+            remedy="sort the rows by volts and merge equal ones",
+        )
+    step = np.diff(rows[:, 1])
+    sense = np.sign(rows[-1, 1] - rows[0, 1])
+    turns_back = np.flatnonzero(step * sense < 0.0)
+    if sense == 0.0 or len(turns_back):
+        back = f"value_rad turns back after {_listed(rows[turns_back, 0])}"
+        raise TableNotMonotone(
+            back if sense else "value_rad ends as it began",
+            where=where,
+            remedy="smooth it first: fit V^2 or V^4, or make it isotonic",
+        )
+
+
+def _listed(volts: NDArray[np.float64], shown: int = 6) -> str:
+    more = f" and {len(volts) - shown} more" if len(volts) > shown else ""
+    return ", ".join(f"{v:g} V" for v in volts[:shown]) + more
+
+
+class Curves:
+    """Monotone cubics through many tables at once; one curve per actuator row.
+
+    Nodes of all tables lie end to end; `start[r]` to `start[r + 1]` are those of row r.
+    """
+
+    def __init__(self, tables: Sequence[ArrayLike]) -> None:
+        parts = [np.asarray(t, float) for t in tables]
+        for row, part in enumerate(parts):
+            if len(part) < LEAST_ROWS or part.ndim != 2:
+                check_table(part, where=f"actuator {row}")
+        self.start = np.concatenate([[0], np.cumsum([len(t) for t in parts])]).astype(np.intp)
+        nodes = np.concatenate(parts) if parts else np.zeros((0, 3))
+        owner = np.repeat(np.arange(len(parts)), np.diff(self.start))
+        self.volts, self.value = nodes[:, 0], nodes[:, 1]
+        first, last = self.start[:-1], self.start[1:] - 1
+        self.sense = np.sign(self.value[last] - self.value[first])
+        self._check(parts, owner)
+        self.low_v, self.high_v = self.volts[first], self.volts[last]
+        self.squared = self.low_v >= 0.0
+        self.x = np.where(self.squared[owner], np.square(self.volts), self.volts)
+        self.slope = _slopes(self.x, self.value, self.start)
+        # cubic of the segment after each node in t = 0..1; entries of last nodes are never read
+        h = np.append(np.diff(self.x), 1.0)
+        rise = np.append(np.diff(self.value), 0.0)
+        left, right = h * self.slope, h * np.append(self.slope[1:], 0.0)
+        self.width = h
+        self.cubic = np.stack([self.value, left, 3.0 * rise - 2.0 * left - right, left + right - 2.0 * rise])
+
+    def _check(self, parts: list[Rows], owner: NDArray[np.intp]) -> None:
+        inner = owner[1:] == owner[:-1]
+        bad = ~(np.diff(self.volts) > 0.0) | ~(np.diff(self.value) * self.sense[owner[1:]] >= 0.0)
+        suspects = set(owner[1:][inner & bad]) | set(np.flatnonzero(~(np.abs(self.sense) > 0.0)))
+        for row in sorted(suspects):
+            check_table(parts[row], where=f"actuator {row}")
+
+    def at(self, volts: Rows) -> Rows:
+        """Values at volts inside the tables."""
+        t, segment = self._place(volts)
+        c = self.cubic[:, segment]
+        return c[0] + t * (c[1] + t * (c[2] + t * c[3]))
+
+    def slope_at(self, volts: Rows) -> Rows:
+        """Derivatives of the values by the volts."""
+        t, segment = self._place(volts)
+        c = self.cubic[:, segment]
+        by_axis = (c[1] + t * (2.0 * c[2] + t * 3.0 * c[3])) / self.width[segment]
+        return by_axis * np.where(self.squared, 2.0 * volts, 1.0)
+
+    def volts_at(self, value: Rows) -> Rows:
+        """Volts at values inside the tables, to the last digits of the value."""
+        rising = self.value * np.repeat(self.sense, np.diff(self.start))
+        wanted = value * self.sense
+        segment = self._segment(rising, wanted)
+        c = self.cubic[:, segment] * self.sense
+        t = _root(c, wanted)
+        x = self.x[segment] + t * self.width[segment]
+        return np.where(self.squared, np.sqrt(np.maximum(x, 0.0)), x)
+
+    def _place(self, volts: Rows) -> tuple[Rows, NDArray[np.intp]]:
+        x = np.where(self.squared, np.square(volts), volts)
+        segment = self._segment(self.x, x)
+        return np.clip((x - self.x[segment]) / self.width[segment], 0.0, 1.0), segment
+
+    def _segment(self, nodes: Rows, wanted: Rows) -> NDArray[np.intp]:
+        """Node before each wanted entry, so that entry equals at most the node after it."""
+        first, last = self.start[:-1], self.start[1:] - 1
+        low = np.broadcast_to(first, wanted.shape).copy()
+        high = np.broadcast_to(last, wanted.shape).copy()
+        while (high - low > 1).any():
+            middle = (low + high) // 2
+            below = nodes[middle] < wanted
+            low = np.where(below, middle, low)
+            high = np.where(below | (high - low <= 1), high, middle)
+        return low
+
+
+def _slopes(x: Rows, y: Rows, start: NDArray[np.intp]) -> Rows:
+    """Node slopes that keep a monotone cubic monotone, for tables that lie end to end."""
+    h, m = np.diff(x), np.diff(y)
+    m = m / np.where(h == 0.0, 1.0, h)
+    slope = np.zeros_like(y)
+    before, after = m[:-1], m[1:]
+    w1, w2 = 2.0 * h[1:] + h[:-1], h[1:] + 2.0 * h[:-1]
+    same = (before * after > 0.0) & (h[:-1] > 0.0) & (h[1:] > 0.0)
+    a, b = np.where(same, before, 1.0), np.where(same, after, 1.0)
+    slope[1:-1] = np.where(same, (w1 + w2) / np.where(same, w1 / a + w2 / b, 1.0), 0.0)
+    first, last = start[:-1], start[1:] - 1
+    slope[first] = _end_slope(h[first], h[first + 1], m[first], m[first + 1])
+    slope[last] = _end_slope(h[last - 1], h[last - 2], m[last - 1], m[last - 2])
+    return slope
+
+
+def _end_slope(h0: Rows, h1: Rows, m0: Rows, m1: Rows) -> Rows:
+    """One-sided three-point slope, held to the sign and three times the slope of the end segment."""
+    d = ((2.0 * h0 + h1) * m0 - h0 * m1) / (h0 + h1)
+    d = np.where(np.sign(d) == np.sign(m0), d, 0.0)
+    return np.where((np.sign(m0) != np.sign(m1)) & (np.abs(d) > 3.0 * np.abs(m0)), 3.0 * m0, d)
+
+
+def _root(c: Rows, wanted: Rows) -> Rows:
+    """t in 0..1 at which rising cubics c[4, ...] equal `wanted`: Newton held inside a shrinking bracket."""
+    low, high = np.zeros_like(wanted), np.ones_like(wanted)
+    rise = c[1] + c[2] + c[3]
+    t = np.clip((wanted - c[0]) / np.where(rise > 0.0, rise, 1.0), 0.0, 1.0)
+    for _ in range(80):
+        miss = c[0] + t * (c[1] + t * (c[2] + t * c[3])) - wanted
+        low, high = np.where(miss < 0.0, t, low), np.where(miss >= 0.0, t, high)
+        steep = c[1] + t * (2.0 * c[2] + t * 3.0 * c[3])
+        step = t - miss / np.where(steep > 0.0, steep, 1.0)
+        inside = (steep > 0.0) & (step > low) & (step < high)
+        new = np.where(miss == 0.0, t, np.where(inside, step, 0.5 * (low + high)))
+        if (np.abs(new - t) <= 2e-16).all():
+            break
+        t = new
+    return t
+
+
+class Table(Law):
+    """A phase or an angle as it was measured.
+
+    The rest is the value at 0 V. A table that does not cover 0 V has an unknown rest (NaN); changes then
+    count from its first row, as `reference_rad` says.
+    """
+
+    name = "table"
+    moves = ("phase", "coupler")
+    has_tables = True
+    params = (
+        Param("r_ohm", "ohm", np.inf, 0.0, np.inf, "resistance; left out: draws no current", open_low=True),
+        Param("capacitance_ff", "fF", np.nan, 0.0, np.inf, "capacitance; left out: not known"),
+        *HANDLING,
+    )
+
+    def rows(self, p: Params) -> int:
+        return len(p["tables"])
+
+    def rest_rad(self, p: Params) -> Rows:
+        curves = Curves(p["tables"])
+        covered = (curves.low_v <= 0.0) & (curves.high_v >= 0.0)
+        value = curves.at(np.where(covered, 0.0, curves.low_v))
+        return np.where(covered, value, np.nan)
+
+    def reference_rad(self, p: Params) -> Rows:
+        return _reference(Curves(p["tables"]))
+
+    def change_rad(self, volts: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002
+        curves = Curves(p["tables"])
+        return curves.at(_measured_volts(volts, curves)) - _reference(curves)
+
+    def volts(self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002
+        curves = Curves(p["tables"])
+        value = np.asarray(change_rad, float) + _reference(curves)
+        ends = curves.value[curves.start[:-1]], curves.value[curves.start[1:] - 1]
+        low, high = np.minimum(*ends), np.maximum(*ends)
+        slack = EDGE * (1.0 + np.maximum(np.abs(low), np.abs(high)))
+        raise_where(
+            ~((value >= low - slack) & (value <= high + slack)),
+            OutsideMeasuredRange,
+            np.maximum(low - value, value - high),
+            lambda i: (
+                f"{value[i]:.6g} rad is outside its measured range of "
+                f"{low[i[-1]]:.6g} to {high[i[-1]]:.6g} rad"
+            ),
+            "ask for another branch or turn, or measure further",
+        )
+        return curves.volts_at(value)
+
+    def slope_rad_per_v(
+        self,
+        volts: ArrayLike,
+        p: Params,
+        heat_turns: ArrayLike | None = None,  # noqa: ARG002
+    ) -> Rows:
+        curves = Curves(p["tables"])
+        return curves.slope_at(_measured_volts(volts, curves))
+
+    def limits_v(self, p: Params) -> tuple[Rows, Rows]:
+        curves = Curves(p["tables"])
+        return curves.low_v, curves.high_v
+
+    def resistance_ohm(self, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002
+        return self.column(p, "r_ohm")
+
+    def capacitance_ff(self, volts: ArrayLike, p: Params) -> Rows:
+        shape = np.broadcast_shapes(np.shape(volts), (self.rows(p),))
+        return np.broadcast_to(self.column(p, "capacitance_ff"), shape)
+
+
+def _reference(curves: Curves) -> Rows:
+    covered = (curves.low_v <= 0.0) & (curves.high_v >= 0.0)
+    return curves.at(np.where(covered, 0.0, curves.low_v))
+
+
+def _measured_volts(volts: ArrayLike, curves: Curves) -> Rows:
+    v = np.asarray(volts, float)
+    v = np.broadcast_to(v, np.broadcast_shapes(v.shape, curves.low_v.shape))
+    low, high = curves.low_v, curves.high_v
+    slack = EDGE * np.maximum(np.abs(low), np.abs(high))
+    raise_where(
+        ~((v >= low - slack) & (v <= high + slack)),
+        OutsideMeasuredRange,
+        np.maximum(low - v, v - high),
+        lambda i: f"{v[i]:.6g} V is outside its measured range of {low[i[-1]]:g} to {high[i[-1]]:g} V",
+        "stay inside, or measure further",
+    )
+    return np.clip(v, low, high)  # rounding within EDGE
+
+
+def smoothed(table: ArrayLike, how: Literal["v2", "v4", "isotonic"], where: str = "") -> NDArray[np.float64]:
+    """A monotone table from a noisy one: weighted fit of V^2, of V^2 and V^4, or isotonic.
+
+    Parameters
+    ----------
+    table : (n, 3) array of volts, value_rad, sigma_rad
+        In any order; repeated volts are merged. Rows weigh 1 / sigma_rad^2, or all the same where a
+        sigma_rad is 0.
+    how : "v2", "v4" or "isotonic"
+
+    Returns
+    -------
+    (m, 3) array
+        One row per voltage; sigma_rad is that of the fitted value, by the rows' own sigmas.
+
+    Raises
+    ------
+    TableNotMonotone
+        Where the fit itself turns back inside the measured range.
+    """
+    if how not in SMOOTHINGS:
+        raise ValueError(f"how is {how!r}, must be one of {', '.join(SMOOTHINGS)}")
+    rows = np.asarray(table, float)
+    if rows.ndim != 2 or rows.shape[1] != 3 or not np.isfinite(rows).all():
+        raise NotFinite("table must be finite rows of volts, value_rad, sigma_rad", where=where)
+    known = bool((rows[:, 2] > 0.0).all())
+    weight = 1.0 / np.square(rows[:, 2]) if known else np.ones(len(rows))
+    volts, of = np.unique(rows[:, 0], return_inverse=True)
+    total = np.bincount(of, weight).astype(float)
+    value = np.bincount(of, weight * rows[:, 1]).astype(float) / total
+    if how == "isotonic":
+        fitted, variance = _isotonic(value, total)
+    else:
+        fitted, variance = _even_fit(volts, value, total, 2 if how == "v2" else 3)
+    sigma = np.sqrt(variance) if known else np.zeros_like(fitted)
+    result = np.stack([volts, fitted, sigma], 1)
+    check_table(result, where=where)
+    return result
+
+
+def _even_fit(volts: Rows, value: Rows, weight: Rows, terms: int) -> tuple[Rows, Rows]:
+    scale = max(float(np.abs(volts).max()), 1e-300)
+    basis = np.square(volts / scale)[:, None] ** np.arange(terms)
+    root = np.sqrt(weight)
+    q, r = np.linalg.qr(basis * root[:, None])
+    fit: Any = basis @ np.linalg.solve(r, q.T @ (root * value))
+    return fit, np.square(q / root[:, None]).sum(1)
+
+
+def _isotonic(value: Rows, weight: Rows) -> tuple[Rows, Rows]:
+    """Nearest monotone values, rising or falling whichever is nearer (pool adjacent violators)."""
+    rising, falling = _pooled(value, weight), _pooled(-value, weight)
+    misses = [float(weight @ np.square(fit - v)) for (fit, _), v in ((rising, value), (falling, -value))]
+    return rising if misses[0] <= misses[1] else (-falling[0], falling[1])
+
+
+def _pooled(value: Rows, weight: Rows) -> tuple[Rows, Rows]:
+    means: list[float] = []
+    weights: list[float] = []
+    counts: list[int] = []
+    for v, w in zip(value.tolist(), weight.tolist(), strict=True):
+        means.append(v)
+        weights.append(w)
+        counts.append(1)
+        while len(means) > 1 and means[-2] > means[-1]:
+            m, w2, c = means.pop(), weights.pop(), counts.pop()
+            means[-1] = (means[-1] * weights[-1] + m * w2) / (weights[-1] + w2)
+            weights[-1] += w2
+            counts[-1] += c
+    return np.repeat(means, counts), np.repeat(1.0 / np.asarray(weights), counts)
+
+
+TABLE_LAW = Table()
