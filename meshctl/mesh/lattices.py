@@ -213,7 +213,7 @@ class Assembly:
     externals: dict[str, int]
     inputs: tuple[str, ...]
     outputs: tuple[str, ...]
-    names: LatticeNames
+    names: Names
 
 
 def _skipped(layout: Layout) -> tuple[np.ndarray, np.ndarray]:

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from meshctl.optics.kernels import kernel
+from meshctl.optics.kernels import filled, float64, given, int32, int64, kernel, uint8, void
 
 BOTH, FIRST, SECOND = 0, 1, 2  # lanes of its block that a part acts on
 
@@ -37,7 +37,7 @@ class Circuit:
         return len(self.lane_a)
 
 
-@kernel("int64(int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1])")
+@kernel(int64(*[given(int32)] * 3, *[filled(int32)] * 5))
 def _order(port_start, mate, owner, lane_of, waiting, queue, lane_a, lane_b):  # type: ignore[no-untyped-def]
     """Follow the light through elements whose entrances are all reached; returns how many were.
 
@@ -71,9 +71,7 @@ def _order(port_start, mate, owner, lane_of, waiting, queue, lane_a, lane_b):  #
     return tail
 
 
-@kernel(
-    "int64(int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1],int32[::1])"
-)
+@kernel(int64(*[given(int32)] * 4, *[filled(int32)] * 5))
 def _group(queue, lane_a, lane_b, cell_of, open_block, pending, block_of, block_a, block_b):  # type: ignore[no-untyped-def]
     """Assign every element to a block; returns the number of blocks.
 
@@ -195,7 +193,7 @@ def compile_circuit(
     )
 
 
-@kernel("void(int32[::1],int32[::1],uint8[::1],float64[:,::1],float64[:,::1])")
+@kernel(void(given(int32), given(int32), given(uint8), given(float64, 2), filled(float64, 2)))
 def fuse(first, element, side, parts, blocks):  # type: ignore[no-untyped-def]
     """Multiply the parts of every block.
 
@@ -224,7 +222,7 @@ def fuse(first, element, side, parts, blocks):  # type: ignore[no-untyped-def]
         row[4], row[5], row[6], row[7] = m10.real, m10.imag, m11.real, m11.imag
 
 
-@kernel("void(int32[::1],int32[::1],float64[:,::1],float64[:,::1],float64[:,::1])")
+@kernel(void(given(int32), given(int32), given(float64, 2), filled(float64, 2), filled(float64, 2)))
 def propagate(lane_a, lane_b, blocks, real, imag):  # type: ignore[no-untyped-def]
     """Apply the blocks in light order to fields [L, columns], two real arrays, in place."""
     columns = real.shape[1]

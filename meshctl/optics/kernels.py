@@ -2,6 +2,7 @@
 
 Full fastmath would let the compiler assume that NaN never happens and make isnan false; the four flags
 below allow fused multiply-add and reordered sums and nothing else.
+Public: kernel, given, filled, and numba's scalar types.
 """
 
 from __future__ import annotations
@@ -9,14 +10,27 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Any
 
-from numba import njit
+from numba import boolean, complex128, float64, int32, int64, njit, types, uint8, void
 
 FLAGS = {"contract", "reassoc", "nsz", "arcp"}
 
 
-def kernel(signature: str) -> Callable[[Callable[..., Any]], Callable[..., Any]]:
-    """Compile a function for exactly this numba signature, cached on disk."""
+def given(dtype: Any, dimensions: int = 1) -> Any:
+    """Type of an array that a kernel only reads: read-only arrays are taken, and writable ones too."""
+    return types.Array(dtype, dimensions, "C", readonly=True)
+
+
+def filled(dtype: Any, dimensions: int = 1) -> Any:
+    """Type of an array that a kernel writes."""
+    return types.Array(dtype, dimensions, "C")
+
+
+def kernel(signature: Any) -> Callable[[Callable[..., Any]], Callable[..., Any]]:
+    """Compile a function for exactly this numba signature (text or types), cached on disk."""
     compiled: Callable[[Callable[..., Any]], Callable[..., Any]] = njit(
         signature, cache=True, fastmath=FLAGS, nogil=True
     )
     return compiled
+
+
+__all__ = ["boolean", "complex128", "filled", "float64", "given", "int32", "int64", "kernel", "uint8", "void"]

@@ -1,0 +1,277 @@
+"""mesh.toml as a checked structure: what may stand in it, and clear messages where something else does.
+
+Public: Description, parse_description.
+"""
+
+from __future__ import annotations
+
+import math
+import tomllib
+from typing import Annotated, Any, Literal
+
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    ValidationError,
+    model_validator,
+)
+
+from meshctl.errors import Finding, MissingRow, NotFinite, OutOfRange, UnknownKey, UnsoundFile
+from meshctl.mesh.lattices import LATTICES
+from meshctl.mesh.quantities import QUANTITIES
+from meshctl.mesh.tables import unknown_name
+
+MESH_TOML = "mesh.toml"
+
+
+class _Refused(ValueError):
+    """Carries our own finding through pydantic."""
+
+    def __init__(self, finding: Finding) -> None:
+        self.finding = finding
+        super().__init__(str(finding))
+
+
+def _quantity(name: str) -> AfterValidator:
+    quantity = QUANTITIES[name]
+
+    def check(value: Any) -> Any:
+        if not math.isfinite(value):
+            raise _Refused(NotFinite(f"{value} is no number to use", remedy=f"write {quantity.allowed}"))
+        if not quantity.allows(value):
+            raise _Refused(
+                OutOfRange(f"{value:g} is out of range", remedy=f"allowed is {quantity.allowed}")
+            )
+        return value
+
+    return AfterValidator(check)
+
+
+def _no_bool(value: Any) -> Any:
+    if isinstance(value, bool):
+        raise _Refused(UnsoundFile(f"{str(value).lower()} stands where a number must", remedy="write a number"))
+    return value
+
+
+def _number(name: str) -> Any:
+    return Annotated[float, BeforeValidator(_no_bool), _quantity(name)]
+
+
+def _count(name: str) -> Any:
+    return Annotated[int, BeforeValidator(_no_bool), _quantity(name)]
+
+
+class _Strict(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=False)
+
+
+class LatticePart(_Strict):
+    shape: str
+    modes: _count("modes") | None = None  # type: ignore[valid-type]
+    cell: Literal["mzi", "gap"] = "mzi"
+    pitch_um: tuple[_number("pitch_um"), _number("pitch_um")] = (400.0, 127.0)  # type: ignore[valid-type]
+    spare: _count("spare") = 0  # type: ignore[valid-type]
+    output_phases: bool = True
+    balanced: bool = False
+
+    @model_validator(mode="after")
+    def _known_shape(self) -> LatticePart:
+        if self.shape not in LATTICES:
+            raise _Refused(unknown_name("shape", self.shape, LATTICES, ""))
+        if self.modes is None and self.shape != "switch":
+            raise _Refused(
+                MissingRow(f"a {self.shape} lattice needs 'modes'", remedy="write how many lanes it has")
+            )
+        return self
+
+
+class GuidePart(_Strict):
+    n_eff: _number("n_eff") = QUANTITIES["n_eff"].default  # type: ignore[valid-type]
+    n_group: _number("n_group") = QUANTITIES["n_group"].default  # type: ignore[valid-type]
+    loss_db_per_cm: _number("loss_db_per_cm") = 0.0  # type: ignore[valid-type]
+
+
+class CouplerPart(_Strict):
+    loss_db: _number("loss_db") = 0.0  # type: ignore[valid-type]
+    angle_slope_per_nm: _number("angle_slope_per_nm") = 0.0  # type: ignore[valid-type]
+
+
+class CrossingPart(_Strict):
+    loss_db: _number("loss_db") = 0.0  # type: ignore[valid-type]
+
+
+class ChannelPart(_Strict):
+    bits: _count("bits") = 16  # type: ignore[valid-type]
+    min_v: _number("min_v") = 0.0  # type: ignore[valid-type]
+    max_v: _number("max_v") = 10.0  # type: ignore[valid-type]
+    offset_v: _number("offset_v") = 0.0  # type: ignore[valid-type]
+    gain: _number("gain") = 1.0  # type: ignore[valid-type]
+    limit_v: _number("limit_v") | None = None  # type: ignore[valid-type]
+    limit_ma: _number("limit_ma") | None = None  # type: ignore[valid-type]
+    limit_mw: _number("limit_mw") | None = None  # type: ignore[valid-type]
+    ramp_v_per_s: _number("ramp_v_per_s") | None = None  # type: ignore[valid-type]
+    ground: str | None = None
+
+
+class GroundPart(_Strict):
+    resistance_ohm: _number("resistance_ohm")  # type: ignore[valid-type]
+
+
+class RestPart(_Strict):
+    state: Literal["bar", "cross", "unknown"] = "unknown"
+
+
+class BudgetPart(_Strict):
+    loss_db: _number("loss_db")  # type: ignore[valid-type]
+
+
+class SpreadPart(_Strict):
+    split_rad: _number("split_rad") = 0.0  # type: ignore[valid-type]
+    phase_rad: _number("sigma_rad") = 0.0  # type: ignore[valid-type]
+    loss_db: _number("loss_db") = 0.0  # type: ignore[valid-type]
+    p2pi_share: _number("p2pi_share") = 0.0  # type: ignore[valid-type]
+    r_share: _number("r_share") = 0.0  # type: ignore[valid-type]
+
+
+class InsertPart(_Strict):
+    name: str
+    kind: Literal["tap", "loss", "guide", "phase"]
+    at: str
+    monitor: str | None = None
+    cross_power: _number("cross_power") | None = None  # type: ignore[valid-type]
+    angle_rad: _number("angle_rad") | None = None  # type: ignore[valid-type]
+    loss_db: _number("loss_db") | None = None  # type: ignore[valid-type]
+    length_um: _number("length_um") | None = None  # type: ignore[valid-type]
+    phase_rad: _number("phase_rad") | None = None  # type: ignore[valid-type]
+
+
+class CellPart(_Strict):
+    elements: list[str]
+    at_um: tuple[float, float] | None = None
+
+
+class Description(_Strict):
+    """All of mesh.toml."""
+
+    format: Literal[1]
+    name: Annotated[str, Field(min_length=1)]
+    note: str = ""
+    wavelength_nm: _number("wavelength_nm")  # type: ignore[valid-type]
+    lattice: LatticePart | None = None
+    inputs: list[str] | None = None
+    outputs: list[str] | None = None
+    monitors: list[str] = []
+    elements: list[list[Any]] | None = None
+    tunable: list[str] = []
+    links: list[str] | None = None
+    cells: dict[str, CellPart] = {}
+    insert: list[InsertPart] = []
+    guide: GuidePart = GuidePart()
+    coupler: CouplerPart = CouplerPart()
+    crossing: CrossingPart = CrossingPart()
+    actuator: dict[Literal["phase", "coupler"], dict[str, Any]] = {}
+    channel: ChannelPart = ChannelPart()
+    ground: dict[str, GroundPart] = {}
+    rest: RestPart = RestPart()
+    budget: BudgetPart | None = None
+    spread: SpreadPart = SpreadPart()
+
+    @model_validator(mode="after")
+    def _one_kind_of_net(self) -> Description:
+        explicit = self.elements is not None or self.links is not None
+        if explicit == (self.lattice is not None):
+            raise _Refused(
+                UnsoundFile(
+                    "the net is given twice, as [lattice] and by elements and links"
+                    if explicit
+                    else "no net is given",
+                    remedy="give either [lattice], or both 'elements' and 'links'",
+                )
+            )
+        if explicit and (self.elements is None or self.links is None):
+            missing = "links" if self.links is None else "elements"
+            raise _Refused(MissingRow(f"'{missing}' is missing", remedy="an explicit net needs both"))
+        if self.lattice is not None and (self.inputs or self.outputs or self.tunable or self.cells):
+            raise _Refused(
+                UnsoundFile(
+                    "inputs, outputs, tunable and cells belong to explicit nets",
+                    remedy="a lattice names its own; remove them",
+                )
+            )
+        if self.channel.max_v <= self.channel.min_v:
+            raise _Refused(
+                OutOfRange(
+                    f"channel.max_v {self.channel.max_v:g} V is not above min_v {self.channel.min_v:g} V",
+                    remedy="raise max_v",
+                )
+            )
+        if self.channel.ground is not None and self.channel.ground not in self.ground:
+            raise _Refused(unknown_name("ground", self.channel.ground, self.ground, ""))
+        return self
+
+
+def _allowed_keys(location: tuple[Any, ...]) -> list[str]:
+    model: Any = Description
+    for step in location[:-1]:
+        if isinstance(step, int):
+            continue
+        field = getattr(model, "model_fields", {}).get(step)
+        if field is None:
+            return []
+        model = next(
+            (
+                a
+                for a in (field.annotation, *getattr(field.annotation, "__args__", ()))
+                if isinstance(a, type) and issubclass(a, BaseModel)
+            ),
+            None,
+        )
+    return list(getattr(model, "model_fields", {}))
+
+
+def _finding(problem: Any, source: str) -> Finding:
+    location = tuple(step for step in problem["loc"] if step not in ("[key]",))
+    key = ".".join(str(step + 1) if isinstance(step, int) else step for step in location)
+    where = f"{source} key '{key}'" if key else source
+    kind, value = problem["type"], problem.get("input")
+    carried = problem.get("ctx", {}).get("error")
+    if isinstance(carried, _Refused):
+        finding = carried.finding
+        finding.where = where
+        return finding
+    if kind == "extra_forbidden":
+        return unknown_name("key", str(location[-1]), _allowed_keys(location), where)
+    if kind == "missing":
+        return MissingRow("the key is missing", where=where, remedy="add it")
+    if kind == "literal_error":
+        allowed = problem["ctx"]["expected"]
+        wrong = UnknownKey if isinstance(value, str) else UnsoundFile
+        return wrong(f"the value is {value!r}; allowed is {allowed}", where=where, remedy="correct it")
+    shown = repr(value) if not isinstance(value, dict | list) else f"a {type(value).__name__}"
+    return UnsoundFile(f"the value is {shown}; {problem['msg'].lower()}", where=where, remedy="correct it")
+
+
+def parse_description(text: str, source: str = MESH_TOML) -> Description:
+    """Parse and check the text of a mesh.toml.
+
+    Raises
+    ------
+    UnsoundFile or a finding under it, naming the key, the value, what is allowed and what to do.
+    """
+    try:
+        raw = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as problem:
+        raise UnsoundFile(f"not readable as TOML: {problem}", where=source, remedy="mend that line") from None
+    if raw.get("format") not in (None, 1):
+        raise UnsoundFile(
+            f"format is {raw['format']!r}; this version reads format 1",
+            where=f"{source} key 'format'",
+            remedy="update meshctl, or write the folder again in format 1",
+        )
+    try:
+        return Description.model_validate(raw)
+    except ValidationError as problem:
+        raise _finding(problem.errors(include_url=False)[0], source) from None

@@ -1,0 +1,397 @@
+"""A mesh folder: read and checked, made new from a lattice, written.
+
+Public: load, lattice, write, MESH_TOML.
+"""
+
+from __future__ import annotations
+
+import math
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, WrongUsage
+from meshctl.laws import LAWS
+from meshctl.mesh.building import (
+    ACTUATOR_WORDS,
+    CHANNEL_HEAD,
+    CROSSTALK_HEAD,
+    ELEMENT_HEAD,
+    PARAM_NAMES,
+    TABLE_HEAD,
+    Tables,
+    build_mesh,
+)
+from meshctl.mesh.description import MESH_TOML, parse_description
+from meshctl.mesh.files import new_folder, write_whole
+from meshctl.mesh.graph import Mesh
+from meshctl.mesh.lattices import LATTICES
+from meshctl.mesh.quantities import QUANTITIES, Quantity
+from meshctl.mesh.spread import drawn
+from meshctl.mesh.tables import Table, read_table, table_text, unknown_name
+from meshctl.optics.elements import COUPLER
+
+KNOWN = {MESH_TOML, "elements.csv", "actuators.csv", "channels.csv", "tables.csv", "crosstalk.csv", "states"}
+
+
+def _param(name: str) -> Quantity | None:
+    """Any law's parameter as a column; each law checks its own range once the law is known."""
+    if name not in PARAM_NAMES:
+        return None
+    return Quantity(name, "", -math.inf, math.inf, "")
+
+
+_READERS: dict[str, tuple[tuple[str, ...], Any, tuple[str, ...], tuple[str, ...]]] = {
+    "elements": (("element",), QUANTITIES.get, ("element",), ELEMENT_HEAD),
+    "actuators": (ACTUATOR_WORDS, _param, ("actuator",), (*ACTUATOR_WORDS, *PARAM_NAMES)),
+    "channels": (("channel", "ground"), QUANTITIES.get, ("channel",), CHANNEL_HEAD),
+    "tables": (("actuator",), QUANTITIES.get, ("actuator", "volts_v", "value_rad"), TABLE_HEAD),
+    "crosstalk": (("from", "to"), QUANTITIES.get, CROSSTALK_HEAD, CROSSTALK_HEAD),
+}
+
+
+def _read_one(folder: Path, name: str) -> Table | None:
+    path = folder / f"{name}.csv"
+    if not path.exists():
+        return None
+    words, numbers, required, allowed = _READERS[name]
+
+    def known(column: str) -> Quantity | None:
+        return numbers(column) if column in allowed else None
+
+    return read_table(path, words, known, required, allowed)
+
+
+def load(folder: str | Path) -> Mesh:
+    """Read a mesh folder and check all of it.
+
+    Parameters
+    ----------
+    folder : path of a folder with a mesh.toml
+
+    Returns
+    -------
+    Mesh
+
+    Raises
+    ------
+    MissingFile, UnsoundFile or a finding under it
+        With file, line or key, the value, what is allowed and what to do.
+
+    Example
+    -------
+    >>> load("meshes/plover8").net.n_cells
+    28
+    """
+    folder = Path(folder)
+    toml = folder / MESH_TOML
+    if not folder.exists():
+        raise MissingFile("there is no such folder", where=str(folder), remedy="name a mesh folder, or make one with 'meshctl new'")
+    if not toml.is_file():
+        raise MissingFile(f"no {MESH_TOML} in it", where=str(folder), remedy="name a mesh folder")
+    try:
+        text = toml.read_text(encoding="utf-8")
+    except UnicodeDecodeError as problem:
+        raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=MESH_TOML, remedy="save it as UTF-8") from None
+    for entry in folder.iterdir():
+        if entry.suffix == ".csv" and entry.name not in KNOWN:
+            raise UnknownKey(
+                f"table '{entry.name}' is not known",
+                where=str(folder),
+                remedy=f"the tables of a mesh are {', '.join(sorted(n for n in KNOWN if n.endswith('.csv')))}",
+            )
+    description = parse_description(text)
+    tables = Tables(*(_read_one(folder, name) for name in _READERS))
+    return build_mesh(description, tables, text, folder)
+
+
+_HEATER = """\
+[actuator.phase]                # every phase shifter that actuators.csv does not list
+law = "heater"                  # phase = offset + 2 pi P / p2pi
+p2pi_mw = 24.0
+r_ohm = 600.0
+
+"""
+_TUNABLE_COUPLER = """\
+[actuator.coupler]
+law = "heater_coupler"
+"""
+
+
+def _gap_actuator() -> str:
+    """[actuator.coupler] of a new mesh with tunable couplers."""
+    return (
+        "[actuator.coupler]              # electrostatic gaps: closing raises the angle, bar at pi\n"
+        'law = "gap"\n'
+        "gap_nm = 200.0\nstiffness_n_per_m = 2.0\narea_um2 = 20.0\ndecay_nm = 50.0\nrest_rad = 3.05\nmargin = 0.8\n\n"
+    )
+
+
+def lattice_text(
+    shape: str, name: str, *, modes: int | None, cell: str, spare: int, balanced: bool = False
+) -> str:
+    """mesh.toml of a new lattice, with its defaults written out."""
+    size = "" if shape == "switch" else f"modes = {modes}\n"
+    extra = f"spare = {spare}\n" if spare else ""
+    extra += "balanced = true\n" if balanced else ""
+    phases = _HEATER if cell == "mzi" or shape != "switch" else ""
+    gaps = _gap_actuator() if cell == "gap" else ""
+    return f"""\
+format = 1
+name = "{name}"
+note = "as drawn; all numbers are placeholders until the chip is measured"
+wavelength_nm = 1550.0
+
+[lattice]
+shape = "{shape}"
+{size}cell = "{cell}"
+{extra}pitch_um = [400.0, 127.0]       # between columns, between lanes
+
+[guide]
+n_eff = 2.44
+n_group = 4.2
+loss_db_per_cm = 0.0
+
+[coupler]
+loss_db = 0.0
+
+{phases}{gaps}[channel]                       # every output of the source that channels.csv does not list
+bits = 16
+min_v = 0.0
+max_v = 10.0
+
+[rest]
+state = "{"cross" if cell == "mzi" else "unknown"}"                 # what a cell falls to without drive
+
+[spread]                        # how far parts scatter from die to die (standard deviations)
+split_rad = 0.02
+phase_rad = 1.8
+loss_db = 0.0
+p2pi_share = 0.02
+r_share = 0.02
+"""
+
+
+def lattice(
+    shape: str,
+    *,
+    modes: int | None = None,
+    cell: str = "mzi",
+    spare: int = 0,
+    balanced: bool = False,
+    name: str | None = None,
+    built: int | None = None,
+) -> Mesh:
+    """A regular mesh as drawn, or as built by chance.
+
+    Parameters
+    ----------
+    shape : a key of LATTICES: rectangular, triangular, tree, switch
+    modes : number of lanes; a switch needs none
+    cell : "mzi" (two fixed couplers, inner and outer phase) or "gap" (tunable coupler and phase)
+    spare : extra columns
+    balanced : a dummy loss wherever a lane skips a column
+    built : seed of a die drawn from the mesh's spread; None: as drawn
+
+    Raises
+    ------
+    UnknownKey, OutOfRange, WrongUsage
+
+    Example
+    -------
+    >>> lattice("rectangular", modes=8).net.n_cells
+    28
+    """
+    if shape not in LATTICES:
+        raise unknown_name("shape", shape, LATTICES, "")
+    if shape != "switch" and modes is None:
+        raise WrongUsage(f"a {shape} lattice needs a number of modes", remedy="give modes, such as 8")
+    if cell not in ("mzi", "gap"):
+        raise unknown_name("cell", cell, ("mzi", "gap"), "")
+    text = lattice_text(
+        shape, name or f"{shape}{modes or ''}", modes=modes, cell=cell, spare=spare, balanced=balanced
+    )
+    mesh = build_mesh(parse_description(text, "lattice"), Tables(), text)
+    return mesh if built is None else with_die(mesh, built)
+
+
+def with_die(mesh: Mesh, seed: int) -> Mesh:
+    """The mesh with one die drawn from its spread in place of the drawn values."""
+    tables = _tables_of_text(mesh, die_tables(mesh, seed))
+    return build_mesh(parse_description(mesh.text), tables, mesh.text)
+
+
+def die_tables(mesh: Mesh, seed: int) -> dict[str, str]:
+    """elements.csv and actuators.csv of one die drawn from the mesh's spread."""
+    net, actuators = mesh.net, mesh.actuators
+    draw = drawn(mesh.spread, net.kind == COUPLER, mesh.as_built.loss_db, len(actuators), seed)
+    names = net.names.elements
+    changed = np.flatnonzero((draw.error_rad != 0.0) | (draw.loss_db != mesh.as_built.loss_db))
+    elements = [
+        (names[e], draw.error_rad[e], draw.loss_db[e] if draw.loss_db[e] != mesh.as_built.loss_db[e] else None)
+        for e in changed.tolist()
+    ]
+    heads = ["offset_rad", "p2pi_mw", "r_ohm"]
+    heads = [h for h in heads if h in actuators.params]
+    factor = {"p2pi_mw": draw.p2pi_factor, "r_ohm": draw.r_factor}
+    columns = [
+        actuators.params[h] + draw.offset_rad if h == "offset_rad" else actuators.params[h] * factor[h] for h in heads
+    ]
+    rows = [
+        (name, *(column[a] for column in columns))
+        for a, name in enumerate(mesh.actuator_names)
+        if not math.isnan(columns[0][a])
+    ] if columns else []
+    texts = {}
+    if elements:
+        texts["elements"] = table_text(("element", "error_rad", "loss_db"), elements)
+    if rows:
+        texts["actuators"] = table_text(("actuator", *heads), rows)
+    return texts
+
+
+def _tables_of_text(mesh: Mesh, texts: dict[str, str]) -> Tables:
+    import tempfile
+
+    with tempfile.TemporaryDirectory() as work:
+        for name, text in texts.items():
+            (Path(work) / f"{name}.csv").write_text(text)
+        return Tables(*(_read_one(Path(work), name) for name in _READERS))
+
+
+def mesh_tables(mesh: Mesh) -> dict[str, str]:
+    """All tables of a mesh as CSV text, rows only where they differ from mesh.toml's defaults."""
+    plain = build_mesh(parse_description(mesh.text), Tables(), mesh.text) if _has_defaults(mesh) else None
+    return {
+        name: text
+        for name, text in (
+            ("elements", _elements_text(mesh, plain)),
+            ("actuators", _actuators_text(mesh, plain)),
+            ("channels", _channels_text(mesh, plain)),
+            ("tables", _measured_text(mesh)),
+            ("crosstalk", _crosstalk_text(mesh)),
+        )
+        if text
+    }
+
+
+def _has_defaults(mesh: Mesh) -> bool:
+    """True where mesh.toml alone makes a mesh, so that tables need hold only what differs."""
+    try:
+        build_mesh(parse_description(mesh.text), Tables(), mesh.text)
+    except UnsoundFile:
+        return False
+    return True
+
+
+def _same(a: float, b: float) -> bool:
+    return a == b or (math.isnan(a) and math.isnan(b))
+
+
+def _elements_text(mesh: Mesh, plain: Mesh | None) -> str:
+    built, net = mesh.as_built, mesh.net
+    base = (plain or mesh).as_built.loss_db
+    stuck = np.full(net.n_elements, math.nan)
+    stuck[net.first_element] = built.stuck_rad
+    loss_differs = built.loss_db != base if plain else np.ones(net.n_elements, bool)
+    rows = np.flatnonzero((built.error_rad != 0) | loss_differs | ~np.isnan(stuck) | (built.sigma_rad != 0))
+    names = net.names.elements
+    lines = [
+        (
+            names[e],
+            built.error_rad[e] if built.error_rad[e] else None,
+            built.loss_db[e] if loss_differs[e] else None,
+            stuck[e],
+            built.sigma_rad[e] if built.sigma_rad[e] else None,
+        )
+        for e in rows.tolist()
+    ]
+    return table_text(ELEMENT_HEAD, lines) if lines else ""
+
+
+def _actuators_text(mesh: Mesh, plain: Mesh | None) -> str:
+    actuators, net = mesh.actuators, mesh.net
+    names, channels, settings = mesh.actuator_names, mesh.channel_names, net.setting_names
+    heads = [h for h in PARAM_NAMES if h in actuators.params]
+    same_rows = plain is not None and np.array_equal(plain.actuators.setting, actuators.setting)
+    lines = []
+    for a, name in enumerate(names):
+        values = [float(actuators.params[h][a]) for h in heads]
+        channel = channels[actuators.channel[a]]
+        line = (
+            name,
+            settings[actuators.setting[a]] if settings[actuators.setting[a]] != name else None,
+            channel if channel != name else None,
+            LAWS[actuators.law[a]].name,
+            1 if actuators.dead[a] else None,
+            *values,
+        )
+        if same_rows:
+            assert plain is not None
+            was = plain.actuators
+            default = [float(was.params[h][a]) if h in was.params else math.nan for h in heads]
+            unchanged = (
+                line[1] is None
+                and line[2] is None
+                and line[4] is None
+                and was.law[a] == actuators.law[a]
+                and all(_same(v, d) for v, d in zip(values, default, strict=True))
+            )
+            if unchanged:
+                continue
+        lines.append(line)
+    return table_text((*ACTUATOR_WORDS, *heads), lines) if lines else ""
+
+
+def _channels_text(mesh: Mesh, plain: Mesh | None) -> str:
+    channels, names = mesh.channels, mesh.channel_names
+    heads = CHANNEL_HEAD[1:-1]
+    lines = []
+    default = parse_description(mesh.text).channel
+    for k, name in enumerate(names):
+        values = [float(getattr(channels, h)[k]) for h in heads]
+        usual = [math.inf if getattr(default, h) is None else float(getattr(default, h)) for h in heads]
+        ground = channels.ground_names[channels.ground[k]] if channels.ground[k] >= 0 else None
+        if values == usual and ground == default.ground and plain is not None:
+            continue
+        shown: list[Any] = [None if math.isinf(v) else v for v in values]
+        shown[0] = int(values[0])
+        lines.append((name, *shown, ground))
+    return table_text(CHANNEL_HEAD, lines) if lines else ""
+
+
+def _measured_text(mesh: Mesh) -> str:
+    names = mesh.actuator_names
+    lines = [(names[a], *row) for a, table in mesh.actuators.tables.items() for row in table.tolist()]
+    return table_text(TABLE_HEAD, lines) if lines else ""
+
+
+def _crosstalk_text(mesh: Mesh) -> str:
+    matrix = mesh.actuators.crosstalk
+    if matrix is None:
+        return ""
+    coo, names, settings = matrix.tocoo(), mesh.actuator_names, mesh.net.setting_names
+    lines = [
+        (names[a], settings[s], value) for s, a, value in zip(coo.row.tolist(), coo.col.tolist(), coo.data.tolist(), strict=True)
+    ]
+    return table_text(CROSSTALK_HEAD, lines)
+
+
+def write(mesh: Mesh, folder: str | Path) -> Path:
+    """Write a mesh to a new folder: filled beside its place, then renamed there.
+
+    Raises
+    ------
+    UnsoundFile
+        If the folder exists; an existing one is never rewritten.
+    """
+    folder = Path(folder)
+    with new_folder(folder) as work:
+        write_whole(work / MESH_TOML, mesh.text)
+        for name, text in mesh_tables(mesh).items():
+            write_whole(work / f"{name}.csv", text)
+    return folder
+
+
+__all__ = ["MESH_TOML", "OutOfRange", "lattice", "load", "write"]
