@@ -113,7 +113,7 @@ class Heater(Law):
     # ---- current sources
     def change_at_ma(self, current_ma: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:
         """Change under a current source; ThermalRunaway where a rising resistance feeds itself."""
-        current = np.asarray(current_ma, float)
+        current = np.asarray(current_ma, float) + np.zeros(self.rows(p))
         rise, p2pi = self.column(p, "r_rise"), self.column(p, "p2pi_mw")
         cold = np.square(current) / MA_PER_A * self.column(p, "r_ohm") / p2pi
         if heat_turns is not None:
@@ -165,13 +165,14 @@ class Heater(Law):
         if heat_turns is not None:
             return cold * self.column(p, "r_ohm") / self.resistance_ohm(p, heat_turns)
         under = 1.0 + 4.0 * rise * cold
+        volts = np.broadcast_to(volts, cold.shape)
         limit = np.sqrt(_own_at_turning(rise, np.zeros_like(rise)) / 2.0 * self._scale_v2(p))
         raise_where(
             ~(under >= 0.0),
             ThermalRunaway,
             -under,
             lambda i: (
-                f"{volts[i] if volts.ndim else float(volts):.4g} V is above {_at(limit, i):.4g} V, "
+                f"{abs(volts[i]):.4g} V is above {_at(limit, i):.4g} V, "
                 "beyond which its falling resistance runs away"
             ),
             "lower the voltage, or drive it from a current source",

@@ -5,7 +5,7 @@ equal length; laws that follow measured rows also find ``p["tables"]``, one (n, 
 value_rad and sigma_rad per row. Volts and changes are arrays whose last axis are those rows; leading
 axes (trials, codes) are allowed. A field that is NaN or left out stands for the default of its parameter.
 
-Public: Param, Breach, Law, check_params, raise_where, MW_PER_W, SLACK.
+Public: Param, HANDLING, Breach, Law, check_params, raise_where, MW_PER_W, SLACK.
 """
 
 from __future__ import annotations
@@ -62,6 +62,14 @@ class Param:
         if self.default is not None:
             good |= np.isnan(v) if np.isnan(self.default) else v == self.default
         return good
+
+
+# how a bench has to treat parts that move or latch; no law reads these
+HANDLING = (
+    Param("approach", "", 0.0, -1.0, 1.0, "1: come from lower volts, -1: from higher, 0: from either side"),
+    Param("release_v", "V", 0.0, -1e3, 1e3, "volts to pass through before travelling back; 0: none"),
+    Param("off_rad", "rad", np.nan, -np.inf, np.inf, "value with the power off; left out: the value at 0 V"),
+)
 
 
 @dataclass(frozen=True)
@@ -136,6 +144,10 @@ class Law:
 
     def parasitic_phase_rad(self, volts: ArrayLike, p: Params) -> Rows:
         """Phase that both arms of the moved part gain, over that at 0 V, while its angle moves."""
+        return np.zeros(np.broadcast_shapes(np.shape(volts), (self.rows(p),)))
+
+    def angle_slope_per_nm(self, volts: ArrayLike, p: Params) -> Rows:
+        """Relative slope of the value over wavelength that the drive adds to that of the net."""
         return np.zeros(np.broadcast_shapes(np.shape(volts), (self.rows(p),)))
 
     # ---- limits

@@ -17,16 +17,11 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from meshctl.errors import MissingRow, NotFinite, OutOfRange, OutsideMeasuredRange, TableNotMonotone
-from meshctl.laws.law import Law, Param, Params, Rows, raise_where
+from meshctl.laws.law import HANDLING, Law, Param, Params, Rows, raise_where
 
 LEAST_ROWS = 4
 EDGE = 1e-13  # rounding that a value or volts at a table's very end may carry (relative)
 SMOOTHINGS = ("v2", "v4", "isotonic")
-HANDLING = (
-    Param("approach", "", 0.0, -1.0, 1.0, "1: come from lower volts, -1: from higher, 0: from either side"),
-    Param("release_v", "V", 0.0, -1e3, 1e3, "volts to pass through before a smaller travel; 0: none"),
-    Param("off_rad", "rad", np.nan, -np.inf, np.inf, "value with the power off; left out: the value at 0 V"),
-)
 
 
 def check_table(table: ArrayLike, where: str = "") -> None:
@@ -44,7 +39,7 @@ def check_table(table: ArrayLike, where: str = "") -> None:
     rows = np.asarray(table, float)
     if rows.ndim != 2 or rows.shape[1] != 3 or len(rows) < LEAST_ROWS:
         raise MissingRow(
-            f"{len(rows)} rows of volts, value_rad and sigma_rad in the table, at least {LEAST_ROWS} are needed",
+            f"table has {len(rows)} rows, needs at least {LEAST_ROWS} of volts, value_rad and sigma_rad",
             where=where,
             remedy="measure more voltages",
         )
@@ -110,6 +105,14 @@ class Curves:
         left, right = h * self.slope, h * np.append(self.slope[1:], 0.0)
         self.width = h
         self.cubic = np.stack([self.value, left, 3.0 * rise - 2.0 * left - right, left + right - 2.0 * rise])
+
+    @staticmethod
+    def of(tables: Sequence[ArrayLike] | Curves) -> Curves:
+        """The curves through `tables`, or `tables` themselves where they are curves already."""
+        return tables if isinstance(tables, Curves) else Curves(tables)
+
+    def __len__(self) -> int:
+        return len(self.sense)
 
     def _check(self, parts: list[Rows], owner: NDArray[np.intp]) -> None:
         inner = owner[1:] == owner[:-1]
@@ -204,7 +207,8 @@ class Table(Law):
     """A phase or an angle as it was measured.
 
     The rest is the value at 0 V. A table that does not cover 0 V has an unknown rest (NaN); changes then
-    count from its first row, as `reference_rad` says.
+    count from its first row, as `reference_rad` says. ``p["tables"]`` may be `Curves`, made once for many
+    calls.
     """
 
     name = "table"
@@ -220,20 +224,20 @@ class Table(Law):
         return len(p["tables"])
 
     def rest_rad(self, p: Params) -> Rows:
-        curves = Curves(p["tables"])
+        curves = Curves.of(p["tables"])
         covered = (curves.low_v <= 0.0) & (curves.high_v >= 0.0)
         value = curves.at(np.where(covered, 0.0, curves.low_v))
         return np.where(covered, value, np.nan)
 
     def reference_rad(self, p: Params) -> Rows:
-        return _reference(Curves(p["tables"]))
+        return _reference(Curves.of(p["tables"]))
 
     def change_rad(self, volts: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002
-        curves = Curves(p["tables"])
+        curves = Curves.of(p["tables"])
         return curves.at(_measured_volts(volts, curves)) - _reference(curves)
 
     def volts(self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002
-        curves = Curves(p["tables"])
+        curves = Curves.of(p["tables"])
         value = np.asarray(change_rad, float) + _reference(curves)
         ends = curves.value[curves.start[:-1]], curves.value[curves.start[1:] - 1]
         low, high = np.minimum(*ends), np.maximum(*ends)
@@ -256,11 +260,11 @@ class Table(Law):
         p: Params,
         heat_turns: ArrayLike | None = None,  # noqa: ARG002
     ) -> Rows:
-        curves = Curves(p["tables"])
+        curves = Curves.of(p["tables"])
         return curves.slope_at(_measured_volts(volts, curves))
 
     def limits_v(self, p: Params) -> tuple[Rows, Rows]:
-        curves = Curves(p["tables"])
+        curves = Curves.of(p["tables"])
         return curves.low_v, curves.high_v
 
     def resistance_ohm(self, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002
