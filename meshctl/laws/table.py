@@ -86,7 +86,7 @@ class Curves:
     def __init__(self, tables: Sequence[ArrayLike]) -> None:
         parts = [np.asarray(t, float) for t in tables]
         for row, part in enumerate(parts):
-            if len(part) < LEAST_ROWS or part.ndim != 2:
+            if part.ndim != 2 or part.shape[1] != 3 or len(part) < LEAST_ROWS:
                 check_table(part, where=f"actuator {row}")
         self.start = np.concatenate([[0], np.cumsum([len(t) for t in parts])]).astype(np.intp)
         nodes = np.concatenate(parts) if parts else np.zeros((0, 3))
@@ -94,7 +94,7 @@ class Curves:
         self.volts, self.value = nodes[:, 0], nodes[:, 1]
         first, last = self.start[:-1], self.start[1:] - 1
         self.sense = np.sign(self.value[last] - self.value[first])
-        self._check(parts, owner)
+        self._check(parts, owner, nodes[:, 2])
         self.low_v, self.high_v = self.volts[first], self.volts[last]
         self.squared = self.low_v >= 0.0
         self.x = np.where(self.squared[owner], np.square(self.volts), self.volts)
@@ -114,10 +114,11 @@ class Curves:
     def __len__(self) -> int:
         return len(self.sense)
 
-    def _check(self, parts: list[Rows], owner: NDArray[np.intp]) -> None:
+    def _check(self, parts: list[Rows], owner: NDArray[np.intp], sigma: Rows) -> None:
         inner = owner[1:] == owner[:-1]
         bad = ~(np.diff(self.volts) > 0.0) | ~(np.diff(self.value) * self.sense[owner[1:]] >= 0.0)
-        suspects = set(owner[1:][inner & bad]) | set(np.flatnonzero(~(np.abs(self.sense) > 0.0)))
+        suspects = set(owner[1:][inner & bad]) | set(owner[~(sigma >= 0.0) | np.isinf(sigma)])
+        suspects |= set(np.flatnonzero(~(np.abs(self.sense) > 0.0)))
         for row in sorted(suspects):
             check_table(parts[row], where=f"actuator {row}")
 
