@@ -16,6 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from meshctl.laws.law import Rows
 
 EDGE_RAD = 1e-12  # an angle this near to an end of the range counts as inside
+TWIN_RAD = 1e-9  # two angles this near are one: the plain one stays
 
 
 @dataclass(frozen=True)
@@ -53,15 +54,24 @@ def branches(angle_rad: ArrayLike, low_rad: ArrayLike, high_rad: ArrayLike) -> B
         first = np.ceil((low - start) / np.pi)
         m = first[..., None] + np.arange(count)
         families.append((start[..., None] + m * np.pi, m))
-    # where k is a multiple of pi/2 the two families are one: keep the plain one
-    twin = np.abs(2.0 * k / np.pi - np.round(2.0 * k / np.pi)) < EDGE_RAD
     angle = np.concatenate([a for a, _ in families], -1)
     sign = 1.0 - 2.0 * np.mod(np.concatenate([m for _, m in families], -1), 2.0)
     flipped = np.broadcast_to(np.arange(2 * count) >= count, angle.shape)
-    outside = (angle > high[..., None]) | (angle < low[..., None]) | (flipped & twin[..., None])
+    outside = (angle > high[..., None]) | (angle < low[..., None])
     angle = np.where(outside, np.nan, angle)
-    order = np.argsort(angle, -1)  # NaN last
-    found = int((~outside).sum(-1).max(initial=0))
-    angle, sign, flipped = (np.take_along_axis(a, order, -1)[..., :found] for a in (angle, sign, flipped))
+    angle, sign, flipped = _sorted(angle, sign, flipped)
+    twins = angle[..., 1:] - angle[..., :-1] <= TWIN_RAD
+    doubled = np.zeros(angle.shape, bool)
+    doubled[..., 1:] |= twins & flipped[..., 1:]
+    doubled[..., :-1] |= twins & flipped[..., :-1]
+    angle, sign, flipped = _sorted(np.where(doubled, np.nan, angle), sign, flipped)
     gone = np.isnan(angle)
     return Branches(angle, np.where(gone, np.nan, sign), flipped & ~gone)
+
+
+def _sorted(angle: Rows, sign: Rows, flipped: NDArray[np.bool_]) -> tuple[Rows, Rows, NDArray[np.bool_]]:
+    """Rising along the last axis, cut after the longest row that is not NaN."""
+    order = np.argsort(angle, -1)  # NaN last
+    found = int(np.isfinite(angle).sum(-1).max(initial=0))
+    angle, sign = (np.take_along_axis(a, order, -1)[..., :found] for a in (angle, sign))
+    return angle, sign, np.take_along_axis(flipped, order, -1)[..., :found]
