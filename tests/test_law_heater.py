@@ -70,6 +70,16 @@ def test_inverse_keeps_off_the_turning_point():
     assert caught.value.rows == (0,)
 
 
+def test_warm_neighbours_bring_runaway_nearer():
+    # V^2 = P R0 (1 + a (P + 1)) with a = -0.25 has its maximum at P = 1.5 turns, found numerically
+    p, others = heater(r_rise=-0.25), 1.0
+    top = minimize_scalar(lambda t: -t * (1 - 0.25 * (t + others)), bounds=(0.0, 3.0)).x
+    below, above = (np.array([TWO_PI * STABLE_SHARE * top * s]) for s in (0.999, 1.001))
+    LAW.volts(below, p, heat_turns=below / TWO_PI + others)
+    with pytest.raises(ThermalRunaway):
+        LAW.volts(above, p, heat_turns=above / TWO_PI + others)
+
+
 def test_current_source_runs_away_when_rising():
     # independent: iterate T <- w (1 + a T), which settles only for a w < 1
     p, a = heater(r_rise=0.5), 0.5

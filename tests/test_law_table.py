@@ -9,7 +9,8 @@ from scipy.optimize import isotonic_regression
 
 from meshctl.errors import MissingRow, NotFinite, OutOfRange, OutsideMeasuredRange, TableNotMonotone
 from meshctl.laws import LAWS, TABLE
-from meshctl.laws.table import Curves, check_table, smoothed
+from meshctl.laws.curves import Curves, check_table
+from meshctl.laws.smoothing import smoothed
 
 LAW = LAWS[TABLE]
 

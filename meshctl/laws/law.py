@@ -204,7 +204,7 @@ class Law:
 def check_params(law: Law, p: Params) -> list[Breach]:
     """Every parameter of `law` that may not stand as it is in `p`, with its row and what is allowed.
 
-    Tables are checked by `table.check_table` and `levels.check_levels`.
+    Tables are checked by `curves.check_table` and `levels.check_levels`.
     """
     found: list[Breach] = []
     for param in law.params:
