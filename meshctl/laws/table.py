@@ -1,6 +1,6 @@
 """Measured tables as a law: a monotone curve through the rows and its own inverse, never extrapolated.
 
-Public: Table, TABLE_LAW.
+Public: Table, TABLE_LAW, check_table.
 """
 
 from __future__ import annotations
@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike
 
 from meshctl.errors import OutsideMeasuredRange
 from meshctl.laws.curves import Curves
+from meshctl.laws.curves import check_table as check_table  # part of this module's face
 from meshctl.laws.law import HANDLING, Law, Param, Params, Rows, raise_where
 
 EDGE = 1e-13  # rounding that a value or volts at a table's very end may carry (relative)
