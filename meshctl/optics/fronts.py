@@ -76,9 +76,7 @@ def compile_fronts(
 
 
 class _Compiler:
-    def __init__(
-        self, mate: np.ndarray, s_out: np.ndarray, s_in: np.ndarray, external_ports: np.ndarray
-    ) -> None:
+    def __init__(self, mate: np.ndarray, s_out: np.ndarray, s_in: np.ndarray, external_ports: np.ndarray) -> None:
         self.mate, self.s_out, self.s_in, self.external = mate, s_out, s_in, external_ports
         self.table: list[list[int]] = []
         self.children: list[tuple[int, int, int, int]] = []
@@ -219,9 +217,7 @@ class _Compiler:
             at_row, at_column = self.row_place[wave.rows], self.column_place[wave.columns]
             if wave.transposed:
                 at_row, at_column = at_column, at_row
-            self.children.append(
-                (wave.front, wave.transposed, self.map_length, self.map_length + child[ROWS])
-            )
+            self.children.append((wave.front, wave.transposed, self.map_length, self.map_length + child[ROWS]))
             self.maps += [at_row, at_column]
             self.map_length += len(at_row) + len(at_column)
         self.table.append(
@@ -303,35 +299,33 @@ def join(table, children, maps, entries, s_re, s_im, f_re, f_im, inv_re, inv_im)
                     f_re[t] += f_re[source + j]
                     f_im[t] += f_im[source + j]
         for i in range(height):
-            start = o + i * width
-            row_re, row_im = f_re[start : start + width], f_im[start : start + width]
-            last = min(i, m)
-            k = 0
-            while k < last:
+            start, last = o + i * width, min(i, m)
+            for k in range(0, last, 2):  # two pivots at a time
+                here, above, rest = start + k, o + k * width + k, width - k - 2
                 v_re, v_im = inv_re[pivot + k], inv_im[pivot + k]
-                x_re = row_re[k] * v_re - row_im[k] * v_im
-                x_im = row_re[k] * v_im + row_im[k] * v_re
-                above = o + k * width
-                p_re, p_im = f_re[above : above + width], f_im[above : above + width]
-                if k + 1 == last:
-                    if x_re != 0.0 or x_im != 0.0:
-                        for j in range(k + 1, width):
-                            row_re[j] += x_re * p_re[j] - x_im * p_im[j]
-                            row_im[j] += x_re * p_im[j] + x_im * p_re[j]
+                x_re = f_re[here] * v_re - f_im[here] * v_im
+                x_im = f_re[here] * v_im + f_im[here] * v_re
+                if rest < 0:
                     break
-                row_re[k + 1] += x_re * p_re[k + 1] - x_im * p_im[k + 1]
-                row_im[k + 1] += x_re * p_im[k + 1] + x_im * p_re[k + 1]
-                v_re, v_im = inv_re[pivot + k + 1], inv_im[pivot + k + 1]
-                y_re = row_re[k + 1] * v_re - row_im[k + 1] * v_im
-                y_im = row_re[k + 1] * v_im + row_im[k + 1] * v_re
-                q_re, q_im = f_re[above + width : above + 2 * width], f_im[above + width : above + 2 * width]
-                if x_re != 0.0 or x_im != 0.0 or y_re != 0.0 or y_im != 0.0:
-                    for j in range(k + 2, width):
-                        row_re[j] += x_re * p_re[j] - x_im * p_im[j] + y_re * q_re[j] - y_im * q_im[j]
-                        row_im[j] += x_re * p_im[j] + x_im * p_re[j] + y_re * q_im[j] + y_im * q_re[j]
-                k += 2
+                f_re[here + 1] += x_re * f_re[above + 1] - x_im * f_im[above + 1]
+                f_im[here + 1] += x_re * f_im[above + 1] + x_im * f_re[above + 1]
+                y_re, y_im, below = 0.0, 0.0, above
+                if k + 1 < last:
+                    v_re, v_im, below = inv_re[pivot + k + 1], inv_im[pivot + k + 1], above + width
+                    y_re = f_re[here + 1] * v_re - f_im[here + 1] * v_im
+                    y_im = f_re[here + 1] * v_im + f_im[here + 1] * v_re
+                if x_re == 0.0 and x_im == 0.0 and y_re == 0.0 and y_im == 0.0:
+                    continue
+                # views and one loop per written array: only so does the compiler vectorise
+                p_re, p_im = f_re[above + 2 : above + 2 + rest], f_im[above + 2 : above + 2 + rest]
+                q_re, q_im = f_re[below + 2 : below + 2 + rest], f_im[below + 2 : below + 2 + rest]
+                row_re, row_im = f_re[here + 2 : here + 2 + rest], f_im[here + 2 : here + 2 + rest]
+                for j in range(rest):
+                    row_re[j] += x_re * p_re[j] - x_im * p_im[j] + y_re * q_re[j] - y_im * q_im[j]
+                for j in range(rest):
+                    row_im[j] += x_re * p_im[j] + x_im * p_re[j] + y_re * q_im[j] + y_im * q_re[j]
             if i < m:
-                d_re, d_im = 1.0 - row_re[i], -row_im[i]
+                d_re, d_im = 1.0 - f_re[start + i], -f_im[start + i]
                 d = d_re * d_re + d_im * d_im
                 if d > TINY:
                     inv_re[pivot + i], inv_im[pivot + i] = d_re / d, -d_im / d
@@ -396,9 +390,7 @@ def substitute(table, ports, f_re, f_im, inv_re, inv_im, y_re, y_im, a_re, a_im)
     "void(int64[:,::1],int64[:,::1],int64[::1],int64[:,::1],float64[::1],float64[::1],float64[::1],float64[::1],"
     "float64[::1],float64[::1],float64[::1],float64[::1],float64[::1],float64[::1])"
 )
-def pull_back(
-    table, children, maps, entries, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im, e_re, e_im
-):  # type: ignore[no-untyped-def]
+def pull_back(table, children, maps, entries, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im, e_re, e_im):  # type: ignore[no-untyped-def]
     """The reverse of `join`: cotangents g of all fronts from that of the last, and e of the S entries.
 
     Bilinear, not conjugated: d objective = Re sum g dS. g is zero but in the last front; w [pivots] and e
@@ -410,63 +402,60 @@ def pull_back(
         width, height, pivot = m + nc, m + nr, table[b, 8]
         for up in range(height):
             i = height - 1 - up
-            start = o + i * width
-            row_re, row_im = g_re[start : start + width], g_im[start : start + width]
+            start, last = o + i * width, min(i, m)
             if i < m:
                 v_re, v_im = inv_re[pivot + i], inv_im[pivot + i]
-                q_re, q_im = v_re * v_re - v_im * v_im, 2.0 * v_re * v_im
-                row_re[i] += q_re * w_re[pivot + i] - q_im * w_im[pivot + i]
-                row_im[i] += q_re * w_im[pivot + i] + q_im * w_re[pivot + i]
-            k = min(i, m) - 1
-            while k >= 0:
+                x_re, x_im = v_re * v_re - v_im * v_im, 2.0 * v_re * v_im
+                g_re[start + i] += x_re * w_re[pivot + i] - x_im * w_im[pivot + i]
+                g_im[start + i] += x_re * w_im[pivot + i] + x_im * w_re[pivot + i]
+            for pair in range((last + 1) // 2):
+                k = 2 * ((last + 1) // 2 - 1 - pair)
+                here, above, rest = start + k, o + k * width + k, max(0, width - k - 2)
+                below = above + width if k + 1 < last else above
+                p_re, p_im = f_re[above + 2 : above + 2 + rest], f_im[above + 2 : above + 2 + rest]
+                q_re, q_im = f_re[below + 2 : below + 2 + rest], f_im[below + 2 : below + 2 + rest]
+                row_re, row_im = g_re[here + 2 : here + 2 + rest], g_im[here + 2 : here + 2 + rest]
+                gp_re, gp_im = g_re[above + 2 : above + 2 + rest], g_im[above + 2 : above + 2 + rest]
+                gq_re, gq_im = g_re[below + 2 : below + 2 + rest], g_im[below + 2 : below + 2 + rest]
+                d_re, d_im, h_re, h_im = 0.0, 0.0, 0.0, 0.0
+                for j in range(rest):
+                    d_re += row_re[j] * p_re[j] - row_im[j] * p_im[j]
+                    d_im += row_re[j] * p_im[j] + row_im[j] * p_re[j]
+                    h_re += row_re[j] * q_re[j] - row_im[j] * q_im[j]
+                    h_im += row_re[j] * q_im[j] + row_im[j] * q_re[j]
                 v_re, v_im = inv_re[pivot + k], inv_im[pivot + k]
-                s_re, s_im = f_re[start + k], f_im[start + k]
-                x_re, x_im = s_re * v_re - s_im * v_im, s_re * v_im + s_im * v_re
-                above = o + k * width
-                p_re, p_im = f_re[above : above + width], f_im[above : above + width]
-                gp_re, gp_im = g_re[above : above + width], g_im[above : above + width]
-                d_re, d_im = 0.0, 0.0
-                if k == 0:
-                    for j in range(1, width):
-                        r_re, r_im = row_re[j], row_im[j]
-                        d_re += r_re * p_re[j] - r_im * p_im[j]
-                        d_im += r_re * p_im[j] + r_im * p_re[j]
-                        gp_re[j] += x_re * r_re - x_im * r_im
-                        gp_im[j] += x_re * r_im + x_im * r_re
+                x_re = f_re[here] * v_re - f_im[here] * v_im
+                x_im = f_re[here] * v_im + f_im[here] * v_re
+                if k + 1 < last:
+                    v_re, v_im = inv_re[pivot + k + 1], inv_im[pivot + k + 1]
+                    y_re = f_re[here + 1] * v_re - f_im[here + 1] * v_im
+                    y_im = f_re[here + 1] * v_im + f_im[here + 1] * v_re
+                    g_re[here + 1] += h_re * v_re - h_im * v_im
+                    g_im[here + 1] += h_re * v_im + h_im * v_re
+                    w_re[pivot + k + 1] += h_re * f_re[here + 1] - h_im * f_im[here + 1]
+                    w_im[pivot + k + 1] += h_re * f_im[here + 1] + h_im * f_re[here + 1]
+                    for j in range(rest):
+                        gp_re[j] += x_re * row_re[j] - x_im * row_im[j]
+                        gq_re[j] += y_re * row_re[j] - y_im * row_im[j]
+                    for j in range(rest):
+                        gp_im[j] += x_re * row_im[j] + x_im * row_re[j]
+                        gq_im[j] += y_re * row_im[j] + y_im * row_re[j]
                 else:
-                    u_re, u_im = inv_re[pivot + k - 1], inv_im[pivot + k - 1]
-                    t_re, t_im = f_re[start + k - 1], f_im[start + k - 1]
-                    y_re, y_im = t_re * u_re - t_im * u_im, t_re * u_im + t_im * u_re
-                    top = above - width
-                    q_re, q_im = f_re[top : top + width], f_im[top : top + width]
-                    gq_re, gq_im = g_re[top : top + width], g_im[top : top + width]
-                    h_re, h_im = 0.0, 0.0
-                    for j in range(k + 1, width):
-                        r_re, r_im = row_re[j], row_im[j]
-                        d_re += r_re * p_re[j] - r_im * p_im[j]
-                        d_im += r_re * p_im[j] + r_im * p_re[j]
-                        gp_re[j] += x_re * r_re - x_im * r_im
-                        gp_im[j] += x_re * r_im + x_im * r_re
-                        h_re += r_re * q_re[j] - r_im * q_im[j]
-                        h_im += r_re * q_im[j] + r_im * q_re[j]
-                        gq_re[j] += y_re * r_re - y_im * r_im
-                        gq_im[j] += y_re * r_im + y_im * r_re
-                row_re[k] += d_re * v_re - d_im * v_im
-                row_im[k] += d_re * v_im + d_im * v_re
-                w_re[pivot + k] += d_re * s_re - d_im * s_im
-                w_im[pivot + k] += d_re * s_im + d_im * s_re
-                if k == 0:
-                    break
-                r_re, r_im = row_re[k], row_im[k]
-                h_re += r_re * q_re[k] - r_im * q_im[k]
-                h_im += r_re * q_im[k] + r_im * q_re[k]
-                gq_re[k] += y_re * r_re - y_im * r_im
-                gq_im[k] += y_re * r_im + y_im * r_re
-                row_re[k - 1] += h_re * u_re - h_im * u_im
-                row_im[k - 1] += h_re * u_im + h_im * u_re
-                w_re[pivot + k - 1] += h_re * t_re - h_im * t_im
-                w_im[pivot + k - 1] += h_re * t_im + h_im * t_re
-                k -= 2
+                    for j in range(rest):
+                        gp_re[j] += x_re * row_re[j] - x_im * row_im[j]
+                    for j in range(rest):
+                        gp_im[j] += x_re * row_im[j] + x_im * row_re[j]
+                if k + 1 < width:
+                    r_re, r_im = g_re[here + 1], g_im[here + 1]
+                    d_re += r_re * f_re[above + 1] - r_im * f_im[above + 1]
+                    d_im += r_re * f_im[above + 1] + r_im * f_re[above + 1]
+                    g_re[above + 1] += x_re * r_re - x_im * r_im
+                    g_im[above + 1] += x_re * r_im + x_im * r_re
+                v_re, v_im = inv_re[pivot + k], inv_im[pivot + k]
+                g_re[here] += d_re * v_re - d_im * v_im
+                g_im[here] += d_re * v_im + d_im * v_re
+                w_re[pivot + k] += d_re * f_re[here] - d_im * f_im[here]
+                w_im[pivot + k] += d_re * f_im[here] + d_im * f_re[here]
         for e in range(table[b, 4], table[b, 5]):
             e_re[entries[e, 1]] += g_re[entries[e, 0]]
             e_im[entries[e, 1]] += g_im[entries[e, 0]]
