@@ -38,9 +38,7 @@ def test_no_branch_in_range_is_missed(k, low, width):
 def test_rows_of_branches_end_in_nan():
     found = branches([0.5, 0.0, 1.0], 0.0, [7.0, 7.0, 0.3])
     assert found.angle_rad.shape == (3, 5)
-    np.testing.assert_allclose(
-        found.angle_rad[0], [0.5, np.pi - 0.5, np.pi + 0.5, 2 * np.pi - 0.5, 2 * np.pi + 0.5]
-    )
+    np.testing.assert_allclose(found.angle_rad[0], [0.5, np.pi - 0.5, np.pi + 0.5, 2 * np.pi - 0.5, 2 * np.pi + 0.5])
     np.testing.assert_array_equal(found.sign[0], [1, -1, -1, 1, 1])
     np.testing.assert_array_equal(np.isnan(found.angle_rad).sum(1), [0, 2, 5])
     assert not found.flipped[1:].any()

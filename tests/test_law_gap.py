@@ -122,9 +122,7 @@ def test_forward_beyond_pull_in_is_refused():
 def test_inverse_names_volts_limit_and_margin():
     p = gap(margin=[0.8, 0.8])
     inside, over, past = (3.05 * np.expm1(x / 50) for x in (20.0, 30.0, 70.0))
-    with pytest.raises(
-        PullIn, match=r"4\.\d+ V is above 4.139 V, margin 0.8 below the pull-in at 5.174 V"
-    ) as c:
+    with pytest.raises(PullIn, match=r"4\.\d+ V is above 4.139 V, margin 0.8 below the pull-in at 5.174 V") as c:
         LAW.volts([inside, over], p)
     assert c.value.rows == (1,)
     with pytest.raises(PullIn, match=r"travel of 70 nm is not below 66.67 nm.*margin 0.8 allows 4.139 V"):
@@ -132,9 +130,7 @@ def test_inverse_names_volts_limit_and_margin():
 
 
 def test_gap_never_opens_against_pull():
-    with pytest.raises(
-        GapOutOfRange, match=r"needs 8.952 nm of travel against the pull; it can only rise from 3.05"
-    ):
+    with pytest.raises(GapOutOfRange, match=r"needs 8.952 nm of travel against the pull; it can only rise from 3.05"):
         LAW.volts([-0.5], gap())
     with pytest.raises(GapOutOfRange, match=r"can only fall from 3.05"):
         LAW.volts([0.5], gap(direction=[-1.0]))

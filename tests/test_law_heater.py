@@ -38,9 +38,7 @@ def test_own_heat_settles_where_power_balances(rise):
 def test_given_heat_sets_the_resistance():
     # neighbours warm it by 2 turns: R = 600 (1 + 0.1 * 2) = 720 ohm
     p = heater(r_rise=0.1)
-    assert LAW.change_rad(3.0, p, heat_turns=[2.0]) == pytest.approx(
-        [TWO_PI * 9.0 / 720 * 1e3 / 24], rel=1e-14
-    )
+    assert LAW.change_rad(3.0, p, heat_turns=[2.0]) == pytest.approx([TWO_PI * 9.0 / 720 * 1e3 / 24], rel=1e-14)
     assert LAW.resistance_ohm(p, [2.0]) == pytest.approx([720.0])
     wanted = np.array([2.5])
     volts = LAW.volts(wanted, p, heat_turns=[2.0])
@@ -109,9 +107,7 @@ def test_nan_is_refused_not_passed():
 
 def test_resistance_must_stay_above_zero():
     assert resistance_ohm(2.0, 600.0, -0.4) == pytest.approx(120.0)
-    with pytest.raises(
-        ResistanceNotPositive, match=r"actuator 1: resistance is -120 ohm at a heat of 3 turns"
-    ):
+    with pytest.raises(ResistanceNotPositive, match=r"actuator 1: resistance is -120 ohm at a heat of 3 turns"):
         resistance_ohm([1.0, 3.0], [600.0, 600.0], [-0.4, -0.4])
 
 

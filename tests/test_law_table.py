@@ -121,9 +121,7 @@ def test_nothing_is_read_beyond_rows():
 
 def test_turning_tables_name_their_volts():
     table = rows_of([0, 1, 2, 3, 4], [0.0, 1.0, 0.9, 2.0, 1.9])
-    with pytest.raises(
-        TableNotMonotone, match=r"table x: .* after 1 V, 3 V; smooth it first: fit V\^2"
-    ) as caught:
+    with pytest.raises(TableNotMonotone, match=r"table x: .* after 1 V, 3 V; smooth it first: fit V\^2") as caught:
         check_table(table, where="table x")
     assert caught.value.exit_code == 3
     with pytest.raises(TableNotMonotone, match=r"actuator 1: value_rad turns back after 1 V, 3 V"):

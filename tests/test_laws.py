@@ -23,9 +23,7 @@ SAMPLES = {
     "table": {
         "tables": [
             np.array([[0.0, 3.051, 0.001], [2.0, 3.347, 0.001], [3.0, 3.9, 0.001], [4.0, 4.9, 0.001]]),
-            np.array(
-                [[-2.0, 1.0, 0.0], [-1.0, 0.7, 0.0], [0.5, 0.2, 0.0], [1.0, 0.2, 0.0], [2.0, -1.0, 0.0]]
-            ),
+            np.array([[-2.0, 1.0, 0.0], [-1.0, 0.7, 0.0], [0.5, 0.2, 0.0], [1.0, 0.2, 0.0], [2.0, -1.0, 0.0]]),
             np.stack([np.linspace(1.0, 5.0, 9), np.linspace(1.0, 5.0, 9) ** 2, np.zeros(9)], 1),
         ]
     },
@@ -189,6 +187,14 @@ def test_parameter_names_end_in_units(law):
     for param in law.params:
         assert param.name.endswith(endings.get(param.unit, ""))
         assert param.help
+
+
+@pytest.mark.parametrize("law", [law for law in LAWS if law.has_tables], ids=lambda law: law.name)
+def test_laws_check_their_own_rows(law):
+    for table in sample(law.name)["tables"]:
+        law.check_rows(table)
+    with pytest.raises(MissingRow, match=r"tables.csv, actuator 'a': "):
+        law.check_rows(np.zeros((1, 3)), "tables.csv, actuator 'a'")
 
 
 def test_missing_required_parameters_are_breaches():

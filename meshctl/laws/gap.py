@@ -106,9 +106,7 @@ class MovedCoupler(Law):
             ~(share <= 1.0),
             PullIn,
             share,
-            lambda i: (
-                f"{np.abs(distance[i]):.4g} V from charge_v is above {end[i[-1]]:.4g} V, where it pulls in"
-            ),
+            lambda i: f"{np.abs(distance[i]):.4g} V from charge_v is above {end[i[-1]]:.4g} V, where it pulls in",
             f"stay below {NOMINAL_MARGIN:g} to {MEASURED_MARGIN:g} of it",
         )
         travel, stop = self._travel_nm(share, p), self._stop_nm(p)
@@ -246,9 +244,7 @@ class Gap(MovedCoupler):
         Param("stiffness_n_per_m", "N/m", None, 0.0, np.inf, "stiffness of the springs", open_low=True),
         Param("area_um2", "um^2", None, 0.0, np.inf, "area of the electrodes", open_low=True),
         *COUPLING,
-        Param(
-            "v_pi_v", "V", np.nan, 0.0, np.inf, "measured pull-in; left out: from the plates", open_low=True
-        ),
+        Param("v_pi_v", "V", np.nan, 0.0, np.inf, "measured pull-in; left out: from the plates", open_low=True),
         Param(
             "margin",
             "",

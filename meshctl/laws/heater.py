@@ -142,9 +142,7 @@ class Heater(Law):
         """V^2 of one turn in a cold heater."""
         return self.column(p, "r_ohm") * self.column(p, "p2pi_mw") / MW_PER_W
 
-    def _own_and_heat(
-        self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None
-    ) -> tuple[Rows, Rows]:
+    def _own_and_heat(self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None) -> tuple[Rows, Rows]:
         own = np.asarray(turns(np.asarray(change_rad, float)))
         p2pi = self.column(p, "p2pi_mw")
         own = np.broadcast_to(own, np.broadcast_shapes(own.shape, p2pi.shape))
@@ -172,8 +170,7 @@ class Heater(Law):
             ThermalRunaway,
             -under,
             lambda i: (
-                f"{abs(volts[i]):.4g} V is above {_at(limit, i):.4g} V, "
-                "beyond which its falling resistance runs away"
+                f"{abs(volts[i]):.4g} V is above {_at(limit, i):.4g} V, beyond which its falling resistance runs away"
             ),
             "lower the voltage, or drive it from a current source",
         )

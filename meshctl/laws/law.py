@@ -121,6 +121,9 @@ class Law:
         """What single ranges cannot say: parameters that do not fit one another."""
         return []
 
+    def check_rows(self, table: ArrayLike, where: str = "") -> None:
+        """Raise what keeps one actuator's measured rows from serving this law; `where` opens the message."""
+
     # ---- volts to value and back
     def rest_rad(self, p: Params) -> Rows:
         """Value of the setting with the drive at 0 V; NaN where that is not known."""
@@ -204,7 +207,7 @@ class Law:
 def check_params(law: Law, p: Params) -> list[Breach]:
     """Every parameter of `law` that may not stand as it is in `p`, with its row and what is allowed.
 
-    Tables are checked by `curves.check_table` and `levels.check_levels`.
+    Measured rows are checked by the law's own `check_rows`.
     """
     found: list[Breach] = []
     for param in law.params:

@@ -21,9 +21,7 @@ def check_levels(table: ArrayLike, where: str = "") -> None:
     """Raise what keeps a list of (volts, value_rad, sigma_rad) rows from being levels."""
     rows = np.asarray(table, float)
     if rows.ndim != 2 or rows.shape[1] != 3 or len(rows) < 2:
-        raise MissingRow(
-            f"{len(rows)} levels, at least 2 rows of volts, value_rad, sigma_rad are needed", where=where
-        )
+        raise MissingRow(f"{len(rows)} levels, at least 2 rows of volts, value_rad, sigma_rad are needed", where=where)
     if not np.isfinite(rows).all():
         bad = int(np.flatnonzero(~np.isfinite(rows).all(1))[0])
         raise NotFinite(f"level {bad} is not finite", where=where, remedy="take it out")
@@ -62,15 +60,16 @@ class Levels(Law):
     def rows(self, p: Params) -> int:
         return len(p["tables"])
 
+    def check_rows(self, table: ArrayLike, where: str = "") -> None:
+        check_levels(table, where)
+
     def breaches(self, p: Params) -> list[Breach]:
         off = self.column(p, "off_level")
         found = []
         for row, table in enumerate(p["tables"]):
             last = len(table) - 1
             if off[row] > last or off[row] % 1.0:
-                found.append(
-                    Breach(row, self.param("off_level"), float(off[row]), f"a whole number, 0 to {last}")
-                )
+                found.append(Breach(row, self.param("off_level"), float(off[row]), f"a whole number, 0 to {last}"))
         return found
 
     def rest_rad(self, p: Params) -> Rows:

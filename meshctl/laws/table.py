@@ -36,6 +36,9 @@ class Table(Law):
     def rows(self, p: Params) -> int:
         return len(p["tables"])
 
+    def check_rows(self, table: ArrayLike, where: str = "") -> None:
+        check_table(table, where)
+
     def rest_rad(self, p: Params) -> Rows:
         curves = Curves.of(p["tables"])
         covered = (curves.low_v <= 0.0) & (curves.high_v >= 0.0)
@@ -59,10 +62,7 @@ class Table(Law):
             ~((value >= low - slack) & (value <= high + slack)),
             OutsideMeasuredRange,
             np.maximum(low - value, value - high),
-            lambda i: (
-                f"{value[i]:.6g} rad is outside its measured range of "
-                f"{low[i[-1]]:.6g} to {high[i[-1]]:.6g} rad"
-            ),
+            lambda i: f"{value[i]:.6g} rad is outside its measured range of {low[i[-1]]:.6g} to {high[i[-1]]:.6g} rad",
             "ask for another branch or turn, or measure further",
         )
         return curves.volts_at(value)
