@@ -126,9 +126,7 @@ class DriveFinding(OutOfReach):
 
     shown = 6
 
-    def __init__(
-        self, what: str, *, rows: Sequence[int] = (), remedy: str = "", where: str = ""
-    ) -> None:
+    def __init__(self, what: str, *, rows: Sequence[int] = (), remedy: str = "", where: str = "") -> None:
         self.rows = tuple(int(r) for r in rows)
         self.sentence = what
         super().__init__(what, where=where, remedy=remedy)

@@ -42,9 +42,7 @@ def _quantity(name: str) -> AfterValidator:
         if not math.isfinite(value):
             raise _Refused(NotFinite(f"{value} is no number to use", remedy=f"write {quantity.allowed}"))
         if not quantity.allows(value):
-            raise _Refused(
-                OutOfRange(f"{value:g} is out of range", remedy=f"allowed is {quantity.allowed}")
-            )
+            raise _Refused(OutOfRange(f"{value:g} is out of range", remedy=f"allowed is {quantity.allowed}"))
         return value
 
     return AfterValidator(check)
@@ -82,9 +80,7 @@ class LatticePart(_Strict):
         if self.shape not in LATTICES:
             raise _Refused(unknown_name("shape", self.shape, LATTICES, ""))
         if self.modes is None and self.shape != "switch":
-            raise _Refused(
-                MissingRow(f"a {self.shape} lattice needs 'modes'", remedy="write how many lanes it has")
-            )
+            raise _Refused(MissingRow(f"a {self.shape} lattice needs 'modes'", remedy="write how many lanes it has"))
         return self
 
 
@@ -185,9 +181,7 @@ class Description(_Strict):
         if explicit == (self.lattice is not None):
             raise _Refused(
                 UnsoundFile(
-                    "the net is given twice, as [lattice] and by elements and links"
-                    if explicit
-                    else "no net is given",
+                    "the net is given twice, as [lattice] and by elements and links" if explicit else "no net is given",
                     remedy="give either [lattice], or both 'elements' and 'links'",
                 )
             )

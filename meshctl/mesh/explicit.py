@@ -11,7 +11,15 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import DuplicateName, MissingRow, NotFinite, OutOfRange, UnknownKey, UnsoundFile, UnsoundNet
+from meshctl.errors import (
+    DuplicateName,
+    MissingRow,
+    NotFinite,
+    OutOfRange,
+    UnknownKey,
+    UnsoundFile,
+    UnsoundNet,
+)
 from meshctl.mesh.description import MESH_TOML, Description, InsertPart
 from meshctl.mesh.graph import FREE, ListedNames
 from meshctl.mesh.lattices import Assembly
@@ -57,7 +65,9 @@ class _Parts:
             fits = 2 <= len(row) <= 3 and isinstance(row[0], str) and isinstance(row[1], str)
             if not fits or (len(row) == 3 and not isinstance(row[2], dict)):
                 raise UnsoundFile(
-                    f"the value is {row!r}", where=where, remedy='write ["NAME", "KIND"] or ["NAME", "KIND", {..}]'
+                    f"the value is {row!r}",
+                    where=where,
+                    remedy='write ["NAME", "KIND"] or ["NAME", "KIND", {..}]',
                 )
             kind = kind_row(row[1])
             if kind is None:
@@ -95,13 +105,17 @@ def _linked(parts: _Parts, links: list[str], known: set[str] | None) -> tuple[np
         outside = [end for end in ends if "." not in end]
         if len(ends) != 2 or len(outside) == 2:
             raise UnsoundFile(
-                f"the value is '{link}'", where=where, remedy="write two ends, 'ELEMENT.PORT' or one port name"
+                f"the value is '{link}'",
+                where=where,
+                remedy="write two ends, 'ELEMENT.PORT' or one port name",
             )
         ports = [parts.port(end, where) for end in ends if "." in end]
         for port in ports:
             if port in taken:
                 raise UnsoundNet(
-                    f"'{link}' uses a port that '{taken[port]}' uses already", where=where, remedy="link it once"
+                    f"'{link}' uses a port that '{taken[port]}' uses already",
+                    where=where,
+                    remedy="link it once",
                 )
             taken[port] = link
         if outside:
@@ -136,7 +150,9 @@ def _settings(parts: _Parts, tunable: list[str]) -> np.ndarray:
         members = {parts.kinds[parts.row[n]] for n in group.split()}
         if len(members) != 1:
             raise UnsoundFile(
-                f"the value is '{group}'", where=where, remedy="one setting moves couplers only, or phases only"
+                f"the value is '{group}'",
+                where=where,
+                remedy="one setting moves couplers only, or phases only",
             )
     return setting_of
 
@@ -184,12 +200,16 @@ def explicit_net(description: Description) -> tuple[Assembly, np.ndarray]:
     for name in named:
         if "." in name or not name:
             raise UnknownKey(
-                f"port '{name}' is no port name", where=f"{MESH_TOML} key 'inputs'", remedy="use no dot or blank"
+                f"port '{name}' is no port name",
+                where=f"{MESH_TOML} key 'inputs'",
+                remedy="use no dot or blank",
             )
     if not both_ways and len(set(named)) < len(named):
         twice = next(n for n in named if named.count(n) > 1)
         raise DuplicateName(
-            f"port '{twice}' is named twice", where=f"{MESH_TOML} keys 'inputs', 'outputs'", remedy="name it once"
+            f"port '{twice}' is named twice",
+            where=f"{MESH_TOML} keys 'inputs', 'outputs'",
+            remedy="name it once",
         )
     mate, externals = _linked(parts, description.links or [], known)
     for name in named:
@@ -263,9 +283,7 @@ def _cell_port(assembly: Assembly, cell: int, letter: str, where: str) -> int:
     return ports[letter]
 
 
-def with_inserts(
-    assembly: Assembly, setting_of: np.ndarray, inserts: list[InsertPart]
-) -> tuple[Assembly, np.ndarray]:
+def with_inserts(assembly: Assembly, setting_of: np.ndarray, inserts: list[InsertPart]) -> tuple[Assembly, np.ndarray]:
     """The net with parts put into its links: taps to monitor ports, losses, guides, fixed phases."""
     for number, part in enumerate(inserts, 1):
         where = f"{MESH_TOML} key 'insert.{number}'"

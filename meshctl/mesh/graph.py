@@ -291,7 +291,6 @@ def check_net(net: Net) -> None:
     if len(wrong):
         port = int(wrong[0])
         raise UnsoundNet(
-            f"port {net.port_name(port)} is linked to {net.port_name(int(net.mate[port]))}, "
-            "which is linked elsewhere",
+            f"port {net.port_name(port)} is linked to {net.port_name(int(net.mate[port]))}, which is linked elsewhere",
             remedy="link each port once",
         )

@@ -107,9 +107,7 @@ def triangular(modes: int, spare: int = 0) -> Layout:
     depth = 2 * modes - 3
     more_column, more_upper = _alternating(modes, range(depth, depth + spare))
     column, upper = np.r_[column, more_column], np.r_[upper, more_upper]
-    return Layout(
-        modes, depth + spare, column, upper, upper + 1, _numbered("in", modes), _numbered("out", modes)
-    )
+    return Layout(modes, depth + spare, column, upper, upper + 1, _numbered("in", modes), _numbered("out", modes))
 
 
 def tree(modes: int, spare: int = 0) -> Layout:
@@ -129,9 +127,7 @@ def tree(modes: int, spare: int = 0) -> Layout:
             upper.append(first)
             lower.append(first + stride // 2)
     inputs = ("in1", *[""] * (modes - 1))
-    return Layout(
-        modes, levels, np.array(column), np.array(upper), np.array(lower), inputs, _numbered("out", modes)
-    )
+    return Layout(modes, levels, np.array(column), np.array(upper), np.array(lower), inputs, _numbered("out", modes))
 
 
 def switch(modes: int = 4, spare: int = 0) -> Layout:
@@ -157,9 +153,7 @@ def switch(modes: int = 4, spare: int = 0) -> Layout:
 
 def _no_spare(shape: str, spare: int) -> None:
     if spare:
-        raise OutOfRange(
-            f"a {shape} takes no spare columns, not {spare}", remedy="leave --spare out for this shape"
-        )
+        raise OutOfRange(f"a {shape} takes no spare columns, not {spare}", remedy="leave --spare out for this shape")
 
 
 LATTICES: dict[str, Callable[..., Layout]] = {
@@ -173,9 +167,7 @@ LATTICES: dict[str, Callable[..., Layout]] = {
 class LatticeNames(Names):
     """CELL.ROLE by arithmetic, so that a large mesh holds no list of strings until one is asked for."""
 
-    def __init__(
-        self, layout: Layout, form: CellForm, part_order: np.ndarray, loose: tuple[str, ...]
-    ) -> None:
+    def __init__(self, layout: Layout, form: CellForm, part_order: np.ndarray, loose: tuple[str, ...]) -> None:
         self.layout, self.form, self.part_order, self.loose = layout, form, part_order, loose
 
     def make_cells(self) -> list[str]:
@@ -262,9 +254,7 @@ def assemble(
     loose = tuple(f"d{c + 1}_{m + 1}" for c, m in zip(skip_column, skip_lane, strict=True)) + tuple(
         f"{name or f'dark{m + 1}'}.{role}" for role, _ in ends for m, name in enumerate(layout.outputs)
     )
-    loose_kind = np.r_[
-        np.full(len(skip_lane), LOSS), np.repeat([kind for _, kind in ends], n_lanes)
-    ].astype(np.uint8)
+    loose_kind = np.r_[np.full(len(skip_lane), LOSS), np.repeat([kind for _, kind in ends], n_lanes)].astype(np.uint8)
     n_parts = n_cells + len(loose)
     is_cell = np.arange(n_parts) < n_cells
     order = _in_light_order(column, first_lane)
@@ -312,9 +302,7 @@ def assemble(
     externals = {n: int(enter[along][k]) for n, k in zip(layout.inputs, start, strict=True) if n}
     externals |= {n: int(leave[along][k]) for n, k in zip(layout.outputs, stop, strict=True) if n}
 
-    xy = np.column_stack(
-        [(layout.column + 0.5) * pitch_um[0], -0.5 * (layout.upper + layout.lower) * pitch_um[1]]
-    )
+    xy = np.column_stack([(layout.column + 0.5) * pitch_um[0], -0.5 * (layout.upper + layout.lower) * pitch_um[1]])
     return Assembly(
         kind,
         nominal,

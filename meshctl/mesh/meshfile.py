@@ -11,18 +11,10 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, WrongUsage
+from meshctl.errors import MissingFile, UnknownKey, UnsoundFile, WrongUsage
 from meshctl.laws import LAWS
-from meshctl.mesh.building import (
-    ACTUATOR_WORDS,
-    CHANNEL_HEAD,
-    CROSSTALK_HEAD,
-    ELEMENT_HEAD,
-    PARAM_NAMES,
-    TABLE_HEAD,
-    Tables,
-    build_mesh,
-)
+from meshctl.mesh.actuation import CHANNEL_NUMBERS, PARAM_NAMES
+from meshctl.mesh.building import Tables, build_mesh
 from meshctl.mesh.description import MESH_TOML, parse_description
 from meshctl.mesh.files import new_folder, write_whole
 from meshctl.mesh.graph import Mesh
@@ -32,6 +24,11 @@ from meshctl.mesh.spread import drawn
 from meshctl.mesh.tables import Table, read_table, table_text, unknown_name
 from meshctl.optics.elements import COUPLER
 
+ELEMENT_HEAD = ("element", "error_rad", "loss_db", "stuck_rad", "sigma_rad")
+ACTUATOR_WORDS = ("actuator", "element", "channel", "law", "dead")
+CHANNEL_HEAD = ("channel", *CHANNEL_NUMBERS, "ground")
+TABLE_HEAD = ("actuator", "volts_v", "value_rad", "sigma_rad")
+CROSSTALK_HEAD = ("from", "to", "coefficient")
 KNOWN = {MESH_TOML, "elements.csv", "actuators.csv", "channels.csv", "tables.csv", "crosstalk.csv", "states"}
 
 
@@ -87,7 +84,11 @@ def load(folder: str | Path) -> Mesh:
     folder = Path(folder)
     toml = folder / MESH_TOML
     if not folder.exists():
-        raise MissingFile("there is no such folder", where=str(folder), remedy="name a mesh folder, or make one with 'meshctl new'")
+        raise MissingFile(
+            "there is no such folder",
+            where=str(folder),
+            remedy="name a mesh folder, or make one with 'meshctl new'",
+        )
     if not toml.is_file():
         raise MissingFile(f"no {MESH_TOML} in it", where=str(folder), remedy="name a mesh folder")
     try:
@@ -113,10 +114,6 @@ p2pi_mw = 24.0
 r_ohm = 600.0
 
 """
-_TUNABLE_COUPLER = """\
-[actuator.coupler]
-law = "heater_coupler"
-"""
 
 
 def _gap_actuator() -> str:
@@ -128,9 +125,7 @@ def _gap_actuator() -> str:
     )
 
 
-def lattice_text(
-    shape: str, name: str, *, modes: int | None, cell: str, spare: int, balanced: bool = False
-) -> str:
+def lattice_text(shape: str, name: str, *, modes: int | None, cell: str, spare: int, balanced: bool = False) -> str:
     """mesh.toml of a new lattice, with its defaults written out."""
     size = "" if shape == "switch" else f"modes = {modes}\n"
     extra = f"spare = {spare}\n" if spare else ""
@@ -209,16 +204,14 @@ def lattice(
         raise WrongUsage(f"a {shape} lattice needs a number of modes", remedy="give modes, such as 8")
     if cell not in ("mzi", "gap"):
         raise unknown_name("cell", cell, ("mzi", "gap"), "")
-    text = lattice_text(
-        shape, name or f"{shape}{modes or ''}", modes=modes, cell=cell, spare=spare, balanced=balanced
-    )
+    text = lattice_text(shape, name or f"{shape}{modes or ''}", modes=modes, cell=cell, spare=spare, balanced=balanced)
     mesh = build_mesh(parse_description(text, "lattice"), Tables(), text)
     return mesh if built is None else with_die(mesh, built)
 
 
 def with_die(mesh: Mesh, seed: int) -> Mesh:
     """The mesh with one die drawn from its spread in place of the drawn values."""
-    tables = _tables_of_text(mesh, die_tables(mesh, seed))
+    tables = _tables_of_text(die_tables(mesh, seed))
     return build_mesh(parse_description(mesh.text), tables, mesh.text)
 
 
@@ -229,7 +222,11 @@ def die_tables(mesh: Mesh, seed: int) -> dict[str, str]:
     names = net.names.elements
     changed = np.flatnonzero((draw.error_rad != 0.0) | (draw.loss_db != mesh.as_built.loss_db))
     elements = [
-        (names[e], draw.error_rad[e], draw.loss_db[e] if draw.loss_db[e] != mesh.as_built.loss_db[e] else None)
+        (
+            names[e],
+            draw.error_rad[e],
+            draw.loss_db[e] if draw.loss_db[e] != mesh.as_built.loss_db[e] else None,
+        )
         for e in changed.tolist()
     ]
     heads = ["offset_rad", "p2pi_mw", "r_ohm"]
@@ -238,11 +235,15 @@ def die_tables(mesh: Mesh, seed: int) -> dict[str, str]:
     columns = [
         actuators.params[h] + draw.offset_rad if h == "offset_rad" else actuators.params[h] * factor[h] for h in heads
     ]
-    rows = [
-        (name, *(column[a] for column in columns))
-        for a, name in enumerate(mesh.actuator_names)
-        if not math.isnan(columns[0][a])
-    ] if columns else []
+    rows = (
+        [
+            (name, *(column[a] for column in columns))
+            for a, name in enumerate(mesh.actuator_names)
+            if not math.isnan(columns[0][a])
+        ]
+        if columns
+        else []
+    )
     texts = {}
     if elements:
         texts["elements"] = table_text(("element", "error_rad", "loss_db"), elements)
@@ -251,7 +252,7 @@ def die_tables(mesh: Mesh, seed: int) -> dict[str, str]:
     return texts
 
 
-def _tables_of_text(mesh: Mesh, texts: dict[str, str]) -> Tables:
+def _tables_of_text(texts: dict[str, str]) -> Tables:
     import tempfile
 
     with tempfile.TemporaryDirectory() as work:
@@ -373,7 +374,8 @@ def _crosstalk_text(mesh: Mesh) -> str:
         return ""
     coo, names, settings = matrix.tocoo(), mesh.actuator_names, mesh.net.setting_names
     lines = [
-        (names[a], settings[s], value) for s, a, value in zip(coo.row.tolist(), coo.col.tolist(), coo.data.tolist(), strict=True)
+        (names[a], settings[s], value)
+        for s, a, value in zip(coo.row.tolist(), coo.col.tolist(), coo.data.tolist(), strict=True)
     ]
     return table_text(CROSSTALK_HEAD, lines)
 
@@ -392,6 +394,3 @@ def write(mesh: Mesh, folder: str | Path) -> Path:
         for name, text in mesh_tables(mesh).items():
             write_whole(work / f"{name}.csv", text)
     return folder
-
-
-__all__ = ["MESH_TOML", "OutOfRange", "lattice", "load", "write"]

@@ -21,9 +21,7 @@ _circuits: WeakKeyDictionary[Net, Circuit | None] = WeakKeyDictionary()
 def circuit_of(net: Net) -> Circuit | None:
     """The net compiled for the loop-free kernels, or None where it has a loop; compiled once per net."""
     if net not in _circuits:
-        _circuits[net] = compile_circuit(
-            net.port_start, net.mate, net.cell_of, net.input_ports, net.output_ports
-        )
+        _circuits[net] = compile_circuit(net.port_start, net.mate, net.cell_of, net.input_ports, net.output_ports)
     return _circuits[net]
 
 
@@ -69,15 +67,18 @@ class Response:
     def values(self, settings: np.ndarray) -> np.ndarray:
         """Value in force of every element [E] at the centre wavelength."""
         if settings.shape != (self.net.n_settings,):
-            raise WrongSize(
-                f"settings have shape {settings.shape}; this net takes ({self.net.n_settings},)"
-            )
+            raise WrongSize(f"settings have shape {settings.shape}; this net takes ({self.net.n_settings},)")
         value = self._base.copy()
         value[self._moved] += self.as_built.in_force(settings)[self._moved_by]
         return value
 
     def _fill(
-        self, table: np.ndarray, couplers: np.ndarray, angle: np.ndarray, turning: np.ndarray, phase: np.ndarray
+        self,
+        table: np.ndarray,
+        couplers: np.ndarray,
+        angle: np.ndarray,
+        turning: np.ndarray,
+        phase: np.ndarray,
     ) -> None:
         amplitude = self._amplitude
         table[0, couplers] = np.cos(angle) * amplitude[couplers]
@@ -111,9 +112,7 @@ class Response:
         phase = value * parts.phase_scale(wavelength_nm, net.wavelength_nm) + parts.guide_phase_rad(
             net.length_um, wavelength_nm, net.wavelength_nm, net.n_eff, net.n_group
         )
-        self._fill(
-            table, self._couplers, value[self._couplers] * scale, self._turning, phase[self._turning]
-        )
+        self._fill(table, self._couplers, value[self._couplers] * scale, self._turning, phase[self._turning])
         return table
 
     def blocks(self, settings: np.ndarray, wavelength_nm: float | None = None) -> np.ndarray:

@@ -36,9 +36,7 @@ class Draw:
     r_factor: np.ndarray  # f64[A]
 
 
-def drawn(
-    spread: Spread, is_coupler: np.ndarray, loss_db: np.ndarray, n_actuators: int, seed: int
-) -> Draw:
+def drawn(spread: Spread, is_coupler: np.ndarray, loss_db: np.ndarray, n_actuators: int, seed: int) -> Draw:
     """Draw one die.
 
     Parameters

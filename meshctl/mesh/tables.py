@@ -70,9 +70,7 @@ def _number(text: str, quantity: Quantity, where: str) -> float:
             remedy=f"write {quantity.allowed}, or leave the field empty for the default",
         )
     if not quantity.allows(value):
-        raise OutOfRange(
-            f"{quantity.name} is {text}; allowed is {quantity.allowed}", where=where, remedy="correct it"
-        )
+        raise OutOfRange(f"{quantity.name} is {text}; allowed is {quantity.allowed}", where=where, remedy="correct it")
     return value
 
 
@@ -116,7 +114,9 @@ def read_table(
     for r in required:
         if r not in head:
             raise MissingRow(
-                f"column '{r}' is missing", where=f"{name} line 1", remedy=f"the head needs {','.join(required)}"
+                f"column '{r}' is missing",
+                where=f"{name} line 1",
+                remedy=f"the head needs {','.join(required)}",
             )
     must = [h in required for h in head]
     columns: dict[str, list[Any]] = {h: [] for h in head}
@@ -138,7 +138,9 @@ def read_table(
             if not cell:
                 if needed:
                     raise MissingRow(
-                        f"column '{h}' is empty", where=f"{name} line {line}", remedy="this field has no default"
+                        f"column '{h}' is empty",
+                        where=f"{name} line {line}",
+                        remedy="this field has no default",
                     )
                 into.append(None)
             elif quantity is None:

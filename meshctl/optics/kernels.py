@@ -11,9 +11,11 @@ from collections.abc import Callable
 from typing import Any
 
 from numba import boolean, complex128, float64, int32, int64, njit, types, uint8, void
-from numba.types import UniTuple
 
 FLAGS = {"contract", "reassoc", "nsz", "arcp"}
+
+
+UniTuple = types.UniTuple
 
 
 def given(dtype: Any, dimensions: int = 1) -> Any:
@@ -34,4 +36,16 @@ def kernel(signature: Any) -> Callable[[Callable[..., Any]], Callable[..., Any]]
     return compiled
 
 
-__all__ = ["UniTuple", "boolean", "complex128", "filled", "float64", "given", "int32", "int64", "kernel", "uint8", "void"]
+__all__ = [
+    "UniTuple",
+    "boolean",
+    "complex128",
+    "filled",
+    "float64",
+    "given",
+    "int32",
+    "int64",
+    "kernel",
+    "uint8",
+    "void",
+]

@@ -44,9 +44,7 @@ def _columns(lane_a, lane_b, depth, column):  # type: ignore[no-untyped-def]
 def columns_of(lane_a: np.ndarray, lane_b: np.ndarray, n_lanes: int) -> np.ndarray:
     """Earliest column of every two-lane step, given in light order."""
     column = np.empty(len(lane_a), np.int32)
-    _columns(
-        lane_a.astype(np.int32), lane_b.astype(np.int32), np.zeros(n_lanes, np.int32), column
-    )
+    _columns(lane_a.astype(np.int32), lane_b.astype(np.int32), np.zeros(n_lanes, np.int32), column)
     return column
 
 

@@ -108,6 +108,4 @@ def closed_form(net: Net, as_built: AsBuilt, target: Target, reach: Reach) -> So
     else:
         reason = "exact"
     counts = {"cells": len(table.cell), "out_of_range": len(fitted.shortfalls)}
-    return Solution(
-        fitted.settings, 1.0 - error**2, error, reason, fitted.shortfalls, fitted.free_settings, counts
-    )
+    return Solution(fitted.settings, 1.0 - error**2, error, reason, fitted.shortfalls, fitted.free_settings, counts)

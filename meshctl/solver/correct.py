@@ -16,7 +16,18 @@ import numpy as np
 from meshctl.mesh.graph import AsBuilt, Net
 from meshctl.optics.elements import PHASE
 from meshctl.optics.feedforward import Circuit
-from meshctl.optics.kernels import UniTuple, complex128, filled, float64, given, int32, int64, kernel, uint8, void
+from meshctl.optics.kernels import (
+    UniTuple,
+    complex128,
+    filled,
+    float64,
+    given,
+    int32,
+    int64,
+    kernel,
+    uint8,
+    void,
+)
 from meshctl.solver.cells import CellTable
 from meshctl.solver.decompose import Steps
 from meshctl.solver.reach import Reach
@@ -276,5 +287,5 @@ def fit_cells(
         ends = output[:n]
         phase = np.angle(steps.output * np.conj(carried[:n]))
         shortfalls += _output_phases(net, ends, phase, base, reach, settings)
-        bare = np.flatnonzero(ends < 0)
-    return Fitted(settings, tuple(shortfalls), np.flatnonzero(aligned), bare)
+        bare = np.flatnonzero(ends < 0).astype(np.int32)
+    return Fitted(settings, tuple(shortfalls), np.flatnonzero(aligned).astype(np.int32), bare)

@@ -170,4 +170,7 @@ def triangular(matrix: np.ndarray) -> Steps:
     return _decomposed(matrix, _triangular)
 
 
-DECOMPOSITIONS: dict[str, Callable[[np.ndarray], Steps]] = {"rectangular": rectangular, "triangular": triangular}
+DECOMPOSITIONS: dict[str, Callable[[np.ndarray], Steps]] = {
+    "rectangular": rectangular,
+    "triangular": triangular,
+}

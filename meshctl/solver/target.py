@@ -77,18 +77,14 @@ def permutation(modes: int, order: str) -> np.ndarray:
     try:
         goes_to = [int(word) for word in order.split(",")]
     except ValueError:
-        raise WrongUsage(
-            f"permutation:{order} is not a list of numbers", remedy="write permutation:3,1,2,4"
-        ) from None
+        raise WrongUsage(f"permutation:{order} is not a list of numbers", remedy="write permutation:3,1,2,4") from None
     if len(goes_to) != modes:
         raise WrongSize(
             f"permutation:{order} names {len(goes_to)} outputs; the mesh has {modes}",
             remedy=f"name each output from 1 to {modes} once",
         )
     if sorted(goes_to) != list(range(1, modes + 1)):
-        raise WrongUsage(
-            f"permutation:{order} is no permutation", remedy=f"name each output from 1 to {modes} once"
-        )
+        raise WrongUsage(f"permutation:{order} is no permutation", remedy=f"name each output from 1 to {modes} once")
     matrix = np.zeros((modes, modes), complex)
     matrix[np.array(goes_to) - 1, np.arange(modes)] = 1.0
     return matrix
@@ -178,7 +174,9 @@ def make_target(matrix: Any, shape: tuple[int, int], free: str = "nothing", sour
     if not np.isfinite(array).all():
         row, column = np.argwhere(~np.isfinite(array))[0]
         raise NotFinite(
-            f"row {row + 1} column {column + 1} is {array[row, column]}", where=where, remedy="give finite numbers"
+            f"row {row + 1} column {column + 1} is {array[row, column]}",
+            where=where,
+            remedy="give finite numbers",
         )
     defect = unitarity_defect(array)
     if defect > UNITARY_WITHIN:
