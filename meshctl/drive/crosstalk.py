@@ -5,7 +5,7 @@ C = I + K: K[i, j] is what actuator j adds to i for each unit that it gives itse
 is sparse and factored once; a far part (dense, or a product U V^T of few columns) is kept beside it.
 Coefficients from the places of the heaters, and what leaving out the far ones costs, are in `neighbours`.
 
-Public: Crosstalk, CONDITION_LIMIT, DENSE_TO.
+Public: Crosstalk, CONDITION_LIMIT, DENSE_TO, NEGLIGIBLE, PARTNERS.
 """
 
 from __future__ import annotations
@@ -22,6 +22,8 @@ Floats = NDArray[np.float64]
 
 CONDITION_LIMIT = 1e6  # coefficients are measured to three digits; beyond this nothing of them is left
 DENSE_TO = 1000  # actuators up to which the whole inverse is formed (0.1 s and 8 MB at 1000)
+NEGLIGIBLE = 1e-4  # turns per turn; searches re-solve exactly what they found with the rest
+PARTNERS = 12
 _POSITIVE = 1e-13  # rounding of the inverse below which an entry counts as not positive
 _RESIDUAL = 1e-14  # relative, of the iteration with a dense far part
 
@@ -195,6 +197,46 @@ class Crosstalk:
         return whole
 
     @cached_property
+    def inverse_columns(self) -> Any:
+        """C^-1 as a scipy.sparse.csc_array [A, A], without what is negligible in a search.
+
+        Up to DENSE_TO actuators the whole inverse; above, of the near part, to about NEGLIGIBLE.
+        """
+        from scipy import sparse
+
+        if self.inverse is not None:
+            columns = sparse.csc_array(self.inverse)
+        else:
+            columns = _sparse_inverse(self._matrix, self._lu)
+        columns.sort_indices()
+        return columns
+
+    @cached_property
+    def partners(self) -> tuple[NDArray[np.int32], Floats]:
+        """Of each actuator: the PARTNERS others that it moves most through C^-1, and how each moves it.
+
+        Returns
+        -------
+        partner : int array [A, PARTNERS], -1 where there are fewer
+        cross : array [A, PARTNERS], entries [row, partner] of C^-1
+        """
+        entries = self.inverse_columns.tocoo()
+        row, column, value = (v.ravel() for v in (entries.row, entries.col, entries.data))
+        place = row.astype(np.int64) * self.size + column
+        in_order = np.argsort(place)
+        off = np.flatnonzero(row != column)
+        off = off[np.lexsort((row[off], -np.abs(value[off]), column[off]))]
+        rank = np.arange(len(off)) - np.searchsorted(column[off], column[off])
+        off, rank = off[rank < PARTNERS], rank[rank < PARTNERS]
+        partner = np.full((self.size, PARTNERS), -1, np.int32)
+        partner[column[off], rank] = row[off]
+        back = column[off].astype(np.int64) * self.size + row[off]
+        k = np.minimum(np.searchsorted(place, back, sorter=in_order), len(place) - 1)
+        cross = np.zeros((self.size, PARTNERS))
+        cross[column[off], rank] = np.where(place[in_order[k]] == back, value[in_order[k]], 0.0)
+        return partner, cross
+
+    @cached_property
     def inverse_falls_off_diagonal(self) -> bool | None:
         """Whether C^-1 has no positive entry off its diagonal and C none below zero; None if not known.
 
@@ -291,6 +333,30 @@ def _factor(matrix: Any) -> Any:
     raise CrosstalkUnsound(
         "crosstalk matrix is singular", remedy="look for two actuators with the same rows of coefficients"
     )
+
+
+def _sparse_inverse(matrix: Any, lu: Any) -> Any:
+    """Inverse of I + K without entries below NEGLIGIBLE: by its series where that falls fast, else by columns."""
+    from scipy import sparse
+
+    one = sparse.eye_array(matrix.shape[0], format="csc")
+    K = matrix - one
+    whole, power = one, one
+    if abs(K).sum(axis=0).max() < 0.5:
+        while power.nnz:
+            power = -(K @ power)
+            power.data[np.abs(power.data) < 0.1 * NEGLIGIBLE] = 0.0
+            power.eliminate_zeros()
+            whole = whole + power
+        return whole.tocsc()
+    columns = []
+    unit = np.zeros(matrix.shape[0])
+    for j in range(len(unit)):
+        unit[j] = 1.0
+        column = lu.solve(unit)
+        unit[j] = 0.0
+        columns.append(sparse.csc_array(np.where(np.abs(column) < NEGLIGIBLE, 0.0, column)[:, None]))
+    return sparse.hstack(columns, format="csc")
 
 
 def _positive_definite(matrix: Any) -> bool:
