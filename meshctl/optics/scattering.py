@@ -19,8 +19,9 @@ import numpy as np
 
 from meshctl.errors import UnsoundNet, WrongSize
 from meshctl.optics.dissection import dissect
-from meshctl.optics.fronts import Fronts, compile_fronts, join, pull_back, substitute
-from meshctl.optics.kernels import kernel
+from meshctl.optics.fronts import Fronts, compile_fronts
+from meshctl.optics.joining import join, pull_back, substitute
+from meshctl.optics.kernels import filled, float64, given, int64, kernel, void
 
 RECIPROCAL_WITHIN = 1e-9  # of a field amplitude: far above rounding, far below any measured part
 
@@ -134,7 +135,7 @@ def compile_pattern(
     alone = cells < 0
     part_of = cells.copy()
     part_of[alone] = n_cells + np.arange(np.count_nonzero(alone))
-    steps = _steps(mate, part_of[owner], n_cells + np.count_nonzero(alone), cell_xy)
+    steps = _steps(mate, part_of[owner], n_cells + int(np.count_nonzero(alone)), cell_xy)
     fronts = compile_fronts(mate, s_out, s_in, external, list(steps))
     return WavePattern(port_start, mate, s_out, s_in, mirror, external, part_of, steps, fronts)
 
@@ -294,9 +295,7 @@ def _check_reciprocal(pattern: WavePattern, values: np.ndarray) -> None:
         )
 
 
-@kernel(
-    "void(int64[::1],int64[::1],float64[::1],float64[::1],float64[:,::1],float64[:,::1],float64[:,::1],float64[:,::1])"
-)
+@kernel(void(*[given(int64)] * 2, *[given(float64)] * 2, *[given(float64, 2)] * 2, *[filled(float64, 2)] * 2))
 def _leave(s_out, s_in, s_re, s_im, a_re, a_im, b_re, b_im):  # type: ignore[no-untyped-def]
     """b += S a for waves [P, K]."""
     for e in range(len(s_out)):
@@ -317,7 +316,7 @@ def _waves(
     fronts = pattern.fronts
     a, b, y = (np.zeros((2, len(pattern.mate), entering.shape[1])) for _ in range(3))
     a[0, pattern.external_ports], a[1, pattern.external_ports] = entering.real, entering.imag
-    substitute(fronts.table, fronts.ports, *solved, y[0], y[1], a[0], a[1])
+    substitute(fronts.table, fronts.ports, *solved, y[0], y[1], a[0], a[1], 0)
     _leave(pattern.s_out_port, pattern.s_in_port, re, im, a[0], a[1], b[0], b[1])
     return a[0] + 1j * a[1], b[0] + 1j * b[1]
 
@@ -408,7 +407,8 @@ def vjp(solved: Scattered, cotangent: np.ndarray) -> np.ndarray:
         seed[solved.outputs[:, None], solved.inputs] = cotangent[w].conj()
         g, pivot = np.zeros((2, fronts.size)), np.zeros((2, fronts.pivots))
         entry = np.zeros((2, pattern.n_entries))
-        g[0, fronts.size - n * n :], g[1, fronts.size - n * n :] = seed.real.ravel(), seed.imag.ravel()
+        both = 0.5 * (seed + seed.T)
+        g[0, fronts.size - n * n :], g[1, fronts.size - n * n :] = both.real.ravel(), both.imag.ravel()
         pull_back(
             fronts.table,
             fronts.children,
@@ -517,7 +517,8 @@ class Updater:
         for w in range(n_waves):
             a, y = np.zeros((2, 2, len(pattern.mate), n))
             y[0, ports[outward], np.arange(n)] = 1.0
-            substitute(pattern.fronts.table, pattern.fronts.ports, *(k[w] for k in solved.kept), y[0], y[1], a[0], a[1])
+            kept, table = (k[w] for k in solved.kept), pattern.fronts.table
+            substitute(table, pattern.fronts.ports, *kept, y[0], y[1], a[0], a[1], 1)
             back[w] = a[0, ports[outward]] + 1j * a[1, ports[outward]]
             reach[w] = y[0, pattern.external_ports] + 1j * y[1, pattern.external_ports]
         around = _Around(entries, at, outward, inner, partner, back, back, reach)
