@@ -5,7 +5,7 @@ C = I + K: K[i, j] is what actuator j adds to i for each unit that it gives itse
 is sparse and factored once; a far part (dense, or a product U V^T of few columns) is kept beside it.
 Coefficients from the places of the heaters, and what leaving out the far ones costs, are in `neighbours`.
 
-Public: Crosstalk, CONDITION_LIMIT, DENSE_TO, NEGLIGIBLE, PARTNERS.
+Public: Crosstalk, CONDITION_LIMIT, DENSE_TO, PARTNERS.
 """
 
 from __future__ import annotations
@@ -16,13 +16,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from meshctl.drive.factor import factor, norm_of_inverse, positive_definite, sparse_inverse
 from meshctl.errors import CrosstalkNotDominant, CrosstalkUnsound
 
 Floats = NDArray[np.float64]
 
 CONDITION_LIMIT = 1e6  # coefficients are measured to three digits; beyond this nothing of them is left
 DENSE_TO = 1000  # actuators up to which the whole inverse is formed (0.1 s and 8 MB at 1000)
-NEGLIGIBLE = 1e-4  # turns per turn; searches re-solve exactly what they found with the rest
 PARTNERS = 12
 _POSITIVE = 1e-13  # rounding of the inverse below which an entry counts as not positive
 _RESIDUAL = 1e-14  # relative, of the iteration with a dense far part
@@ -69,7 +69,7 @@ class Crosstalk:
             self.far = np.array(far, float)
         self._check_values()
         self._matrix = (sparse.eye_array(self.size) + self.near).tocsc()
-        self._lu = _factor(self._matrix)
+        self._lu = factor(self._matrix)
         if self.low_rank is not None:
             U, V = self.low_rank
             self._near_u = np.column_stack([self._lu.solve(u) for u in U.T])
@@ -165,17 +165,14 @@ class Crosstalk:
     # ---- what is known of C
     @cached_property
     def condition(self) -> float:
-        """Estimate of the 1-norm condition number; with a dense far part, that of the near part.
-
-        Source: Hager 1984, with the alternating trial vector of Higham 1988.
-        """
+        """Estimate of the 1-norm condition number; with a dense far part, that of the near part."""
         columns = 1.0 + np.asarray(abs(self.near).sum(axis=0)).ravel()
         if self.low_rank is not None:
             columns = columns + np.abs(self.low_rank[1]) @ np.abs(self.low_rank[0]).sum(axis=0)
         solve: Any = self.solve if self.far is None else self._lu.solve
         transposed: Any = self.solve_transposed if self.far is None else lambda v: self._lu.solve(v, "T")
         with np.errstate(all="ignore"):
-            estimate = _norm_of_inverse(solve, transposed, self.size)
+            estimate = norm_of_inverse(solve, transposed, self.size)
         return float(columns.max(initial=1.0) * estimate)
 
     @cached_property
@@ -200,14 +197,14 @@ class Crosstalk:
     def inverse_columns(self) -> Any:
         """C^-1 as a scipy.sparse.csc_array [A, A], without what is negligible in a search.
 
-        Up to DENSE_TO actuators the whole inverse; above, of the near part, to about NEGLIGIBLE.
+        Up to DENSE_TO actuators the whole inverse; above, of the near part (`factor.sparse_inverse`).
         """
         from scipy import sparse
 
         if self.inverse is not None:
             columns = sparse.csc_array(self.inverse)
         else:
-            columns = _sparse_inverse(self._matrix, self._lu)
+            columns = sparse_inverse(self._matrix, self._lu)
         columns.sort_indices()
         return columns
 
@@ -278,7 +275,7 @@ class Crosstalk:
                 rows, columns = rows + far.sum(axis=1), columns + far.sum(axis=0)
             if rows.max(initial=0.0) < 1.0 or columns.max(initial=0.0) < 1.0:
                 return np.empty(0, np.int64)
-            if self.far is None and _positive_definite(self._matrix):
+            if self.far is None and positive_definite(self._matrix):
                 return np.empty(0, np.int64)
         return np.flatnonzero(self.diagonal_of_inverse() <= 0.0)
 
@@ -311,82 +308,3 @@ class Crosstalk:
 def _interval(part: Any, low: Floats, high: Floats) -> tuple[Floats, Floats]:
     middle, half = part @ (0.5 * (low + high)), abs(part) @ (0.5 * (high - low))
     return middle - half, middle + half
-
-
-def _factor(matrix: Any) -> Any:
-    """LU that keeps to the diagonal, which is fast, or one that pivots where that goes wrong."""
-    from scipy.sparse.linalg import splu
-
-    trial = np.where(np.arange(matrix.shape[0]) % 2, -1.0, 1.0)
-    fast = {"permc_spec": "MMD_AT_PLUS_A", "options": {"SymmetricMode": True}, "diag_pivot_thresh": 0.0}
-    for options in (fast, {}):
-        try:
-            lu = splu(matrix, **options)
-        except RuntimeError:  # how the factorisation says that a pivot is exactly zero
-            continue
-        with np.errstate(all="ignore"):
-            z = lu.solve(trial)
-            left = np.abs(matrix @ z - trial).max(initial=0.0)
-            sound = left <= 1e-13 * max(1.0, np.abs(z).max(initial=0.0))
-        if sound:
-            return lu
-    raise CrosstalkUnsound(
-        "crosstalk matrix is singular", remedy="look for two actuators with the same rows of coefficients"
-    )
-
-
-def _sparse_inverse(matrix: Any, lu: Any) -> Any:
-    """Inverse of I + K without entries below NEGLIGIBLE: by its series where that falls fast, else by columns."""
-    from scipy import sparse
-
-    one = sparse.eye_array(matrix.shape[0], format="csc")
-    K = matrix - one
-    whole, power = one, one
-    if abs(K).sum(axis=0).max() < 0.5:
-        while power.nnz:
-            power = -(K @ power)
-            power.data[np.abs(power.data) < 0.1 * NEGLIGIBLE] = 0.0
-            power.eliminate_zeros()
-            whole = whole + power
-        return whole.tocsc()
-    columns = []
-    unit = np.zeros(matrix.shape[0])
-    for j in range(len(unit)):
-        unit[j] = 1.0
-        column = lu.solve(unit)
-        unit[j] = 0.0
-        columns.append(sparse.csc_array(np.where(np.abs(column) < NEGLIGIBLE, 0.0, column)[:, None]))
-    return sparse.hstack(columns, format="csc")
-
-
-def _positive_definite(matrix: Any) -> bool:
-    """Whether the symmetric part is positive definite: elimination along the diagonal meets no pivot <= 0."""
-    from scipy.sparse.linalg import splu
-
-    half = (0.5 * (matrix + matrix.T)).tocsc()
-    try:
-        lu = splu(half, permc_spec="MMD_AT_PLUS_A", options={"SymmetricMode": True}, diag_pivot_thresh=0.0)
-    except RuntimeError:
-        return False
-    return bool((lu.perm_r == lu.perm_c).all() and (lu.U.diagonal() > 0.0).all())
-
-
-def _norm_of_inverse(solve: Any, transposed: Any, size: int) -> float:
-    if size == 0:
-        return 1.0
-    x, best = np.full(size, 1.0 / size), 0.0
-    for _ in range(5):
-        y = solve(x)
-        grown = float(np.abs(y).sum())
-        if not np.isfinite(grown):
-            return np.inf
-        z = transposed(np.where(y < 0.0, -1.0, 1.0))
-        best = max(best, grown)
-        row = int(np.argmax(np.abs(z)))
-        if np.abs(z[row]) <= z @ x:
-            break
-        x = np.zeros(size)
-        x[row] = 1.0
-    k = np.arange(size)
-    trial = np.where(k % 2, -1.0, 1.0) * (1.0 + k / max(1, size - 1))
-    return max(best, 2.0 * float(np.abs(solve(trial)).sum()) / (3.0 * size))
