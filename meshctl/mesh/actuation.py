@@ -13,9 +13,7 @@ import numpy as np
 
 from meshctl.errors import DuplicateName, MissingRow, OutOfRange, UnknownKey, UnsoundFile
 from meshctl.laws import LAWS, law_row
-from meshctl.laws.curves import check_table
 from meshctl.laws.law import Law, check_params
-from meshctl.laws.levels import check_levels
 from meshctl.mesh.description import MESH_TOML, Description
 from meshctl.mesh.graph import FREE, Actuators, Channels, Net, frozen
 from meshctl.mesh.tables import Table, unknown_name
@@ -259,9 +257,8 @@ def _check_laws(actuators: Actuators, net: Net, places: list[str]) -> None:
                 remedy=f"allowed is {breach.allowed}",
             )
         if group.law.has_tables:
-            check = check_levels if group.law.stepwise else check_table
             for a in group.rows.tolist():
-                check(actuators.tables[a], where=f"tables.csv, actuator '{actuators.names(net)[a]}'")
+                group.law.check_rows(actuators.tables[a], where=f"tables.csv, actuator '{actuators.names(net)[a]}'")
 
 
 def _channels(

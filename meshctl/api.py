@@ -1,0 +1,71 @@
+"""The Python interface: the same calls as the commands, on objects in place of files.
+
+Public: solve, predict.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from meshctl.mesh.graph import Mesh
+from meshctl.plan import pipeline
+from meshctl.plan.plan import Plan, check_fresh
+from meshctl.solver.target import Target, make_target, read_target
+
+
+def solve(mesh: Mesh, target: Any, *, free: str = "nothing", best_effort: bool = False) -> Plan:
+    """Voltages for a target.
+
+    Parameters
+    ----------
+    mesh : Mesh
+    target : complex array (out, in), Target, or words such as "haar:7"
+    free : port phases that do not count: nothing, outputs, inputs, both (a Target brings its own)
+    best_effort : hold what is out of reach at its limit rather than raise
+
+    Returns
+    -------
+    Plan
+
+    Raises
+    ------
+    NotUnitary, WrongSize, NotFinite, NoClosedForm, Unreachable, ..
+
+    Example
+    -------
+    >>> import meshctl
+    >>> plan = meshctl.solve(meshctl.lattice("rectangular", modes=4), "dft")
+    >>> plan.fidelity > 0.999999
+    True
+    """
+    shape = (len(mesh.net.outputs), len(mesh.net.inputs))
+    if isinstance(target, str):
+        target = read_target(target, shape, free)
+    elif isinstance(target, Target):
+        target = make_target(target.matrix, shape, target.free, target.source)
+    else:
+        target = make_target(target, shape, free)
+    return pipeline.solve(mesh, target, best_effort=best_effort)
+
+
+def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *, stale_ok: bool = False) -> np.ndarray:
+    """The matrix that a plan's codes give.
+
+    Parameters
+    ----------
+    wavelengths_nm : float (W,), or None for the centre wavelength
+
+    Returns
+    -------
+    complex (out, in), or (W, out, in) where wavelengths are given
+
+    Raises
+    ------
+    StalePlan
+        For a plan of another mesh.
+    """
+    check_fresh(mesh, plan, stale_ok=stale_ok)
+    wavelengths = None if wavelengths_nm is None else np.atleast_1d(np.asarray(wavelengths_nm, float))
+    return pipeline.predict(mesh, plan, wavelengths).matrix

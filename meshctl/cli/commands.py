@@ -1,0 +1,128 @@
+"""What each command does: one call of the session, then printing. stdout is data, stderr is remarks.
+
+Public: one function per command, named after it.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import json
+import shutil
+import sys
+from argparse import Namespace
+from typing import Any
+
+from meshctl.cli import printing
+from meshctl.errors import DONE
+from meshctl.session import Session, demo_mesh_folder, new_mesh, wavelength_range
+
+
+def _json(entry: dict[str, Any]) -> int:
+    print(json.dumps(entry, allow_nan=False, default=str))
+    return DONE
+
+
+def _remark(lines: list[str]) -> None:
+    for line in lines:
+        print(f"warning: {line}", file=sys.stderr)
+
+
+def new(words: Namespace) -> int:
+    mesh = new_mesh(
+        words.shape,
+        words.folder,
+        built=words.built,
+        modes=words.modes,
+        cell=words.cell,
+        spare=words.spare,
+        balanced=words.balanced,
+    )
+    if words.json:
+        return _json({"mesh": words.folder, "hash": mesh.hash, "cells": mesh.net.n_cells})
+    print(f"{words.folder}: {mesh.shape}, {mesh.net.n_cells} cells, {mesh.net.n_settings} settings")
+    return DONE
+
+
+def check(words: Namespace) -> int:
+    found = Session(words.mesh).check()
+    if words.json:
+        return _json(printing.finite(dataclasses.asdict(found)))
+    print(printing.inventory_text(found))
+    _remark(found.warnings)
+    return DONE
+
+
+def show(words: Namespace) -> int:
+    from meshctl.picture import describe, draw, light
+
+    session = Session(words.mesh)
+    settings = None
+    if words.plan:
+        plan = session.open_plan(words.plan, stale_ok=words.stale_ok)
+        settings = plan.actual
+    _remark(session.remarks)
+    mesh = session.mesh
+    lit = None
+    if words.input is not None:
+        printing.require_port(words.input, mesh.net.inputs)
+        if settings is None:
+            printing.needs_plan("--input")
+        lit = light(mesh, settings, words.input)
+    width = words.width or shutil.get_terminal_size((80, 24)).columns
+    text = describe(mesh, settings) if words.words else draw(mesh, settings, lit=lit, width=width, ascii=words.ascii)
+    if words.json:
+        return _json({"mesh": words.mesh, "plan": words.plan, "text": text})
+    print(text)
+    return DONE
+
+
+def solve(words: Namespace) -> int:
+    session = Session(words.mesh)
+    target = session.target(words.target, words.free)
+    plan = session.solve(target, best_effort=words.best_effort)
+    if words.out:
+        session.write_plan(words.out)
+    if words.json:
+        _json(printing.plan_entry(session.mesh, plan, session.seconds))
+        return DONE
+    print(printing.plan_table(session.mesh, plan))
+    print(printing.plan_summary(plan))
+    _remark(plan.warnings)
+    return DONE
+
+
+def predict(words: Namespace) -> int:
+    session = Session(words.mesh)
+    wavelengths = wavelength_range(words.wavelengths) if words.wavelengths else None
+    plan = session.open_plan(words.plan, stale_ok=words.stale_ok)
+    prediction = session.predict(wavelengths)
+    if words.matrix:
+        session.write_matrix(prediction, words.matrix)
+    if words.out:
+        session.write_spectrum(prediction, words.out)
+    _remark(session.remarks)
+    if words.json:
+        return _json(printing.prediction_entry(session.mesh, plan, prediction))
+    print(printing.prediction_text(session.mesh, plan, prediction))
+    return DONE
+
+
+def elements(words: Namespace) -> int:
+    session = Session(words.mesh)
+    session.open_plan(words.plan, stale_ok=words.stale_ok)
+    count = session.write_elements(words.out)
+    _remark(session.remarks)
+    if words.json:
+        return _json({"file": words.out, "rows": count})
+    print(f"{words.out}: {count} parts in light order")
+    return DONE
+
+
+def demo(words: Namespace) -> int:
+    session = Session(demo_mesh_folder())
+    plan = session.solve(session.target("dft"))
+    prediction = session.predict()
+    if words.json:
+        return _json(printing.plan_entry(session.mesh, plan, session.seconds))
+    print(printing.demo_text(session.mesh, plan, prediction, session.seconds))
+    return DONE

@@ -1,0 +1,232 @@
+"""Answers as text for people and as JSON objects for programs.
+
+Public: plan_entry, plan_table, plan_summary, prediction_entry, prediction_text, inventory_text, demo_text, finite.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any, NoReturn
+
+import numpy as np
+
+from meshctl.errors import WrongUsage
+from meshctl.mesh.graph import Mesh
+from meshctl.mesh.inventory import Inventory
+from meshctl.mesh.tables import unknown_name
+from meshctl.plan.pipeline import Prediction
+from meshctl.plan.plan import Plan
+from meshctl.solver.solution import REASONS
+
+
+def finite(entry: Any) -> Any:
+    """The same structure with NaN and infinity as null, for JSON."""
+    if isinstance(entry, dict):
+        return {key: finite(value) for key, value in entry.items()}
+    if isinstance(entry, list | tuple):
+        return [finite(value) for value in entry]
+    return None if isinstance(entry, float) and not math.isfinite(entry) else entry
+
+
+def require_port(name: str, ports: tuple[str, ...]) -> None:
+    """Refuse a port that is not among the mesh's."""
+    if name not in ports:
+        finding = unknown_name("port", name, ports, "")
+        raise WrongUsage(finding.what, remedy=finding.remedy)
+
+
+def needs_plan(word: str) -> NoReturn:
+    raise WrongUsage(f"{word} needs a plan", remedy="name a plan file that 'solve' wrote")
+
+
+# ---- plans
+def _actuator_rows(mesh: Mesh, plan: Plan) -> list[dict[str, Any]]:
+    net, actuators = mesh.net, mesh.actuators
+    settings, channels, is_angle = net.setting_names, mesh.channel_names, net.setting_is_angle
+    rows = []
+    for a, name in enumerate(mesh.actuator_names):
+        s, k = int(actuators.setting[a]), int(actuators.channel[a])
+        rows.append(
+            {
+                "actuator": name,
+                "element": settings[s],
+                "channel": channels[k],
+                "volts": float(plan.volts[k]),
+                "code": int(plan.codes[k]),
+                "angle_rad" if is_angle[s] else "phase_rad": float(plan.actual[s]),
+                "power_mw": float(plan.power_mw[a]),
+                "headroom_v": float(plan.headroom_v[k]),
+            }
+        )
+    return rows
+
+
+def plan_entry(mesh: Mesh, plan: Plan, seconds: float) -> dict[str, Any]:
+    """The JSON object of `solve`."""
+    return finite(
+        {
+            "mesh": mesh.name,
+            "mesh_hash": plan.mesh_hash,
+            "target": {k: v for k, v in plan.target.items() if k not in ("real", "imag")},
+            "fidelity": plan.fidelity,
+            "matrix_error": plan.matrix_error,
+            "continuous": plan.continuous,
+            "throughput": plan.throughput,
+            "throughput_per_input": plan.throughput_per_input,
+            "power_mw": float(plan.power_mw.sum()),
+            "actuators": _actuator_rows(mesh, plan),
+            "reason": plan.reason,
+            "reason_text": REASONS[plan.reason],
+            "out_of_range": plan.shortfalls,
+            "warnings": plan.warnings,
+            "seconds": seconds,
+        }
+    )
+
+
+def plan_table(mesh: Mesh, plan: Plan) -> str:
+    """One line per actuator: what to set, what it gives."""
+    rows = _actuator_rows(mesh, plan)
+    name = max([len("actuator"), *(len(r["actuator"]) for r in rows)])
+    channel = max([len("channel"), *(len(r["channel"]) for r in rows)])
+    head = (
+        f"{'actuator':<{name}}  {'channel':<{channel}}  {'volts':>9}  {'code':>7}  {'value_rad':>9}"
+        f"  {'power_mw':>8}  {'headroom_v':>10}"
+    )
+    lines = [head]
+    for r in rows:
+        value = r.get("phase_rad", r.get("angle_rad"))
+        lines.append(
+            f"{r['actuator']:<{name}}  {r['channel']:<{channel}}  {r['volts']:9.5f}  {r['code']:7d}  {value:9.5f}"
+            f"  {r['power_mw']:8.3f}  {r['headroom_v']:10.4f}"
+        )
+    return "\n".join(lines)
+
+
+def plan_summary(plan: Plan) -> str:
+    """How near the chip comes and why not nearer."""
+    worst = min(plan.throughput_per_input)
+    lines = [
+        f"fidelity      {plan.fidelity:.9f}   (before limits and codes {plan.continuous['fidelity']:.9f})",
+        f"matrix error  {plan.matrix_error:.3e}     (before limits and codes {plan.continuous['matrix_error']:.3e})",
+        f"throughput    {plan.throughput:.4f}        (least of any input {worst:.4f})",
+        f"power         {float(plan.power_mw.sum()):.1f} mW",
+        f"reason        {plan.reason}: {REASONS[plan.reason]}",
+    ]
+    return "\n".join(lines)
+
+
+# ---- predictions
+def prediction_entry(mesh: Mesh, plan: Plan, prediction: Prediction) -> dict[str, Any]:
+    """The JSON object of `predict`."""
+    waves = prediction.wavelengths_nm
+    return finite(
+        {
+            "mesh": mesh.name,
+            "mesh_hash": mesh.hash,
+            "target": {k: v for k, v in plan.target.items() if k not in ("real", "imag")},
+            "wavelengths_nm": None if waves is None else waves.tolist(),
+            "fidelity": prediction.fidelity,
+            "matrix_error": prediction.matrix_error,
+            "throughput": prediction.throughput,
+            "throughput_per_input": prediction.throughput_per_input.tolist(),
+            "power_mw": float(prediction.power_mw.sum()),
+            "inputs": list(mesh.net.inputs),
+            "outputs": list(mesh.net.outputs),
+        }
+    )
+
+
+def prediction_text(mesh: Mesh, plan: Plan, prediction: Prediction) -> str:
+    """Fidelity and throughput; for few ports also the power matrix in dB."""
+    waves = prediction.wavelengths_nm
+    at = f"{mesh.net.wavelength_nm:g} nm" if waves is None else f"{waves[0]:g} to {waves[-1]:g} nm, {len(waves)} points"
+    lines = [
+        f"mesh          {mesh.name} at {at}",
+        f"target        {plan.target.get('source', '')} (free phases: {plan.target.get('free', 'nothing')})",
+        f"fidelity      {prediction.fidelity:.9f}",
+        f"matrix error  {prediction.matrix_error:.3e}",
+        f"throughput    {prediction.throughput:.4f}",
+    ]
+    if waves is None and max(prediction.matrix.shape) <= 16:
+        lines.append(_power_table(mesh, prediction.matrix))
+    else:
+        per = ", ".join(
+            f"{n} {t:.4f}" for n, t in zip(mesh.net.inputs, prediction.throughput_per_input[:64], strict=False)
+        )
+        lines.append(f"per input     {per}")
+    return "\n".join(lines)
+
+
+def _power_table(mesh: Mesh, matrix: np.ndarray) -> str:
+    with np.errstate(divide="ignore"):
+        power = 10.0 * np.log10(np.abs(matrix) ** 2)
+    width = max(7, *(len(n) + 1 for n in mesh.net.inputs))
+    head = f"{'power in dB':<12}" + "".join(f"{n:>{width}}" for n in mesh.net.inputs)
+    lines = [head]
+    for name, row in zip(mesh.net.outputs, power, strict=True):
+        cells = "".join(f"{v:>{width}.2f}" if v > -99.5 else f"{'dark':>{width}}" for v in row)
+        lines.append(f"{name:<12}{cells}")
+    share = "".join(f"{t:>{width}.4f}" for t in np.sum(np.abs(matrix) ** 2, axis=0))
+    lines.append(f"{'throughput':<12}{share}")
+    return "\n".join(lines)
+
+
+# ---- meshes
+def _counted(counts: dict[str, int]) -> str:
+    return ", ".join(f"{n} {name}" for name, n in counts.items())
+
+
+def inventory_text(found: Inventory) -> str:
+    """What `check` prints."""
+    lines = [
+        f"mesh          {found.name}  ({found.shape}, {found.wavelength_nm:g} nm, hash {found.hash[:12]})",
+        f"note          {found.note}" if found.note else "",
+        f"ports         {len(found.inputs)} in, {len(found.outputs)} out"
+        + (f", monitors {', '.join(found.monitors)}" if found.monitors else ""),
+        f"cells         {found.cells}",
+        f"elements      {_counted(found.elements)}",
+        f"settings      {found.settings}",
+        f"actuators     {_counted(found.actuators)}",
+        f"channels      {found.channels}",
+        f"split errors  {found.split_error_rms_rad:.4f} rad rms known",
+        f"stuck         {', '.join(found.stuck) or 'none'}",
+        f"dead          {', '.join(found.dead) or 'none'}",
+        "loops         " + ("yes: light has no single order" if found.loops else "none"),
+    ]
+    if found.paths:
+        lines += ["", f"{'output':<10}{'least dB':>10}{'most dB':>10}{'couplers':>10}{'crossings':>11}{'guide mm':>10}"]
+        lines += [
+            f"{p.output:<10}{p.least_db:>10.3f}{p.most_db:>10.3f}{p.couplers:>10d}{p.crossings:>11d}{p.guide_mm:>10.3f}"
+            for p in found.paths
+        ]
+        lines.append("loss of the parts on the way from any input; how the light is split comes on top")
+    return "\n".join(line for line in lines if line)
+
+
+def demo_text(mesh: Mesh, plan: Plan, prediction: Prediction, seconds: float) -> str:
+    """The main job told step by step."""
+    rows = _actuator_rows(mesh, plan)
+    shown = "\n".join(plan_table(mesh, plan).splitlines()[:7])
+    loss = -10.0 * math.log10(prediction.throughput)
+    return f"""\
+The chip: '{mesh.name}', {mesh.net.n_cells} Mach-Zehnder cells on {len(mesh.net.inputs)} lanes, a heater on every phase.
+The wish: the discrete Fourier transform, so that every input is shared equally among all outputs.
+
+1. The matrix is taken apart into {mesh.net.n_cells} cells and {len(mesh.net.outputs)} output phases.
+2. Each phase becomes a heater power, each power a voltage, each voltage a code of the source:
+
+{shown}
+.. and {len(rows) - 6} more. 'meshctl solve {DEMO_COMMAND}' prints them all.
+
+3. The codes are sent through a model of the chip as it is known, not through the steps above turned round:
+
+fidelity    {plan.fidelity:.9f}   how alike the matrices are in shape; 1 is perfect
+throughput  {prediction.throughput:.4f}        the share of light that comes out: {loss:.2f} dB are lost on the way
+power       {float(plan.power_mw.sum()):.0f} mW       in all heaters together
+reason      {REASONS[plan.reason]}
+
+Done in {seconds * 1e3:.0f} ms. Next: 'meshctl new rectangular mychip --modes 8', then edit mychip/mesh.toml."""
+
+
+DEMO_COMMAND = "meshes/plover8 dft"

@@ -1,0 +1,117 @@
+"""Commands and their words, as data for argparse.
+
+Public: parser.
+"""
+
+from __future__ import annotations
+
+import argparse
+from collections.abc import Callable
+
+from meshctl import __version__
+
+EPILOG = "Exit codes: 0 done, 1 a bug, 2 wrong words, 3 unsound file, 4 out of reach, 5 bench, 130 interrupted."
+FREE = ("nothing", "outputs", "inputs", "both")
+TARGET = "FILE.npy, FILE.csv, identity, dft, hadamard, haar:SEED, permutation:3,1,2,4"
+
+
+class _Parser(argparse.ArgumentParser):
+    """argparse with one clear line for wrong words."""
+
+    def error(self, message: str) -> None:  # type: ignore[override]
+        self.exit(2, f"{self.prog}: {message}; see '{self.prog} --help'\n")
+
+
+def _whole(low: int) -> Callable[[str], int]:
+    def convert(text: str) -> int:
+        try:
+            value = int(text)
+        except ValueError:
+            raise argparse.ArgumentTypeError(f"'{text}' is no whole number") from None
+        if value < low:
+            raise argparse.ArgumentTypeError(f"{value} is below {low}")
+        return value
+
+    return convert
+
+
+def parser() -> argparse.ArgumentParser:
+    """The parser of all commands."""
+    top = _Parser(
+        prog="meshctl",
+        description="From a wished matrix to drive voltages on a programmable photonic chip.",
+        epilog=EPILOG,
+        allow_abbrev=False,
+    )
+    top.add_argument("--version", action="version", version=f"meshctl {__version__}")
+    verbs = top.add_subparsers(dest="command", metavar="COMMAND", title="commands")
+
+    def verb(name: str, help_: str, example: str, *, json: bool = True) -> argparse.ArgumentParser:
+        made = verbs.add_parser(
+            name,
+            help=help_,
+            description=f"{help_[0].upper()}{help_[1:]}.",
+            epilog=f"Example: {example}",
+            allow_abbrev=False,
+        )
+        made.set_defaults(run=name.replace("-", "_"))
+        if json:
+            made.add_argument("--json", action="store_true", help="print one JSON object")
+        return made
+
+    new = verb("new", "make a mesh folder from a lattice", "meshctl new rectangular mychip --modes 8 --built 1")
+    new.add_argument("shape", metavar="SHAPE", help="rectangular, triangular, tree, switch")
+    new.add_argument("folder", metavar="FOLDER", help="the new folder; it must not exist yet")
+    new.add_argument("--modes", type=_whole(1), metavar="N", help="number of lanes")
+    new.add_argument("--cell", choices=("mzi", "gap"), default="mzi", help="Mach-Zehnder or tunable coupler")
+    new.add_argument("--spare", type=_whole(0), default=0, metavar="K", help="extra columns")
+    new.add_argument("--balanced", action="store_true", help="dummy losses where lanes skip a column")
+    new.add_argument("--built", type=_whole(0), metavar="SEED", help="as built: errors drawn from the spread")
+
+    check = verb("check", "is the folder sound; what is on the chip; its losses", "meshctl check meshes/plover8")
+    check.add_argument("mesh", metavar="MESH")
+
+    show = verb("show", "the mesh and its states as text", "meshctl show meshes/plover8 plan.json --input in1")
+    show.add_argument("mesh", metavar="MESH")
+    show.add_argument("plan", metavar="PLAN", nargs="?")
+    show.add_argument("--input", metavar="PORT", help="show where this port's light goes")
+    show.add_argument("--width", type=_whole(40), metavar="COLUMNS", help="characters a line, default: the terminal's")
+    show.add_argument("--ascii", action="store_true", help="no line-drawing characters")
+    show.add_argument(
+        "--words", action="store_true", help="a line of words for every cell, for logs and screen readers"
+    )
+    _stale(show)
+
+    solve = verb("solve", "voltages for a target matrix", "meshctl solve meshes/plover8 haar:7 -o plan.json")
+    solve.add_argument("mesh", metavar="MESH")
+    solve.add_argument("target", metavar="TARGET", help=TARGET)
+    solve.add_argument("-o", "--out", metavar="PLAN", help="write the plan to this file")
+    solve.add_argument("--free", choices=FREE, default="nothing", help="port phases that do not count")
+    solve.add_argument("--best-effort", action="store_true", help="hold what is out of reach at its limit")
+
+    predict = verb(
+        "predict",
+        "what the chip does with a plan's codes",
+        "meshctl predict meshes/plover8 plan.json --wavelengths 1540:1560:5 -o spectrum.csv",
+    )
+    predict.add_argument("mesh", metavar="MESH")
+    predict.add_argument("plan", metavar="PLAN")
+    predict.add_argument("--matrix", metavar="FILE.npy", help="write the field matrix")
+    predict.add_argument("--wavelengths", metavar="FROM:TO:COUNT", help="in nm")
+    predict.add_argument("-o", "--out", metavar="FILE.csv", help="write powers and phases")
+    _stale(predict)
+
+    elements = verb(
+        "elements", "flat list of parts in light order", "meshctl elements meshes/plover8 plan.json -o list.csv"
+    )
+    elements.add_argument("mesh", metavar="MESH")
+    elements.add_argument("plan", metavar="PLAN")
+    elements.add_argument("-o", "--out", metavar="FILE.csv", required=True)
+    _stale(elements)
+
+    verb("demo", "the main job on a shipped mesh, with what it means", "meshctl demo")
+    return top
+
+
+def _stale(made: argparse.ArgumentParser) -> None:
+    made.add_argument("--stale-ok", action="store_true", help="take a plan made before the mesh changed")

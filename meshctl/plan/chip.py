@@ -1,0 +1,203 @@
+"""The one forward path, codes -> volts -> own changes -> settings -> light, and the limits along it.
+
+Prediction, trials and rehearsals all go this way; nothing here inverts anything.
+Public: Chip, Bounds.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from meshctl.errors import WrongSize
+from meshctl.laws.law import MA_PER_A, MW_PER_W
+from meshctl.mesh.actuation import law_groups
+from meshctl.mesh.graph import Mesh
+from meshctl.mesh.response import Response
+from meshctl.units import TWO_PI, turns
+
+
+@dataclass(frozen=True, eq=False)
+class Bounds:
+    """Terminal volts that each actuator may be given, all limits of source and actuator counted."""
+
+    low_v: np.ndarray  # f64[A]
+    high_v: np.ndarray  # f64[A]
+
+
+class Chip:
+    """A mesh with its electronics.
+
+    Parameters
+    ----------
+    mesh : Mesh
+    """
+
+    def __init__(self, mesh: Mesh) -> None:
+        self.mesh = mesh
+        self.net, self.actuators, self.channels = mesh.net, mesh.actuators, mesh.channels
+        self.groups = law_groups(mesh.actuators)
+
+    @cached_property
+    def response(self) -> Response:
+        return Response(self.net, self.mesh.as_built)
+
+    @cached_property
+    def code_range(self) -> np.ndarray:
+        """Highest code of every channel, i64[K]."""
+        return (np.int64(1) << self.channels.bits.astype(np.int64)) - 1
+
+    @cached_property
+    def step_v(self) -> np.ndarray:
+        """Terminal volts per code, f64[K]."""
+        source = self.channels
+        return (source.max_v - source.min_v) / self.code_range * source.gain
+
+    def volts(self, codes: np.ndarray) -> np.ndarray:
+        """Terminal volts [K] of codes [K]."""
+        if codes.shape != (len(self.channels),):
+            raise WrongSize(f"{codes.shape} codes for {len(self.channels)} channels")
+        return codes * self.step_v + self.zero_v
+
+    @cached_property
+    def zero_v(self) -> np.ndarray:
+        """Terminal volts of code 0, f64[K]."""
+        return self.channels.min_v * self.channels.gain + self.channels.offset_v
+
+    @cached_property
+    def reference_rad(self) -> np.ndarray:
+        """Value of every setting without drive, f64[S]."""
+        reference = np.zeros(self.net.n_settings)
+        for group in self.groups:
+            np.add.at(reference, self.actuators.setting[group.rows], group.law.reference_rad(group.p))
+        return reference
+
+    @cached_property
+    def resistive(self) -> np.ndarray:
+        """Actuators whose law dissipates through a resistance, i64."""
+        rows = [group.rows for group in self.groups if group.law.power_law]
+        return np.sort(np.concatenate(rows)) if rows else np.empty(0, np.int64)
+
+    @cached_property
+    def ground_ohm(self) -> np.ndarray:
+        """Resistance of the shared ground of every actuator, f64[A], 0 where there is none."""
+        ground = self.channels.ground[self.actuators.channel]
+        return np.append(self.channels.ground_ohm, 0.0)[ground]  # -1 is the last: none
+
+    @cached_property
+    def coupled(self) -> bool:
+        """True where actuators share a ground or warm one another's resistance."""
+        rows = self.resistive
+        rise = self.actuators.params.get("r_rise")
+        warms = rise is not None and bool((np.nan_to_num(rise[rows]) != 0.0).any())
+        return bool((self.ground_ohm[rows] > 0.0).any()) or (warms and self.actuators.crosstalk is not None)
+
+    def own_changes(self, volts: np.ndarray) -> np.ndarray:
+        """Change [A] that every actuator gives its own setting, for terminal volts [K]."""
+        at = volts[self.actuators.channel]
+        change = np.zeros(len(self.actuators))
+        for group in self.groups:
+            if not (group.law.power_law and self.coupled):
+                change[group.rows] = group.law.change_rad(at[group.rows], group.p)
+        if self.coupled:
+            from meshctl.plan.circuit import working_changes
+
+            change[self.resistive] = working_changes(self, at[self.resistive])
+        change[self.actuators.dead] = 0.0
+        return change
+
+    def total_changes(self, change: np.ndarray) -> np.ndarray:
+        """Change [S] of every setting from own changes [A], neighbours included."""
+        total = np.bincount(self.actuators.setting, change, minlength=self.net.n_settings)
+        if self.actuators.crosstalk is not None:
+            total = total + self.actuators.crosstalk @ change
+        return total
+
+    def actual(self, codes: np.ndarray) -> np.ndarray:
+        """Settings [S] that the codes give, stuck ones at their stuck values."""
+        settings = self.reference_rad + self.total_changes(self.own_changes(self.volts(codes)))
+        return self.mesh.as_built.in_force(settings)
+
+    def matrix(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
+        """Field matrix for codes: (out, in), or (W, out, in) where wavelengths are given."""
+        return self.response.matrix(self.actual(codes), wavelengths_nm)
+
+    def powers(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
+        """Power at every output for unit power in every input: |matrix|^2."""
+        return np.asarray(np.abs(self.matrix(codes, wavelengths_nm)) ** 2)
+
+    def power_mw(self, volts: np.ndarray) -> np.ndarray:
+        """Static power [A] of every actuator for terminal volts [K]."""
+        at = volts[self.actuators.channel]
+        power = np.zeros(len(self.actuators))
+        change = self.own_changes(volts)
+        for group in self.groups:
+            if group.law.power_law:
+                power[group.rows] = turns(change[group.rows]) * group.p["p2pi_mw"]
+            else:
+                power[group.rows] = group.law.power_mw(at[group.rows], group.p)
+        power[self.actuators.dead] = 0.0
+        return power
+
+    @cached_property
+    def terminal_range_v(self) -> tuple[np.ndarray, np.ndarray]:
+        """Lowest and highest terminal volts of every channel: range and voltage limit of the source."""
+        source = self.channels
+        high = self.zero_v + self.step_v * self.code_range
+        return np.maximum(self.zero_v, -source.limit_v), np.minimum(high, source.limit_v)
+
+    @cached_property
+    def bounds(self) -> Bounds:
+        """Terminal volts of every actuator within all limits of its channel and its law."""
+        low, high = (ends[self.actuators.channel] for ends in self.terminal_range_v)
+        for group in self.groups:
+            rows = group.rows
+            channel = self.actuators.channel[rows]
+            bottom, top = group.law.limits_v(group.p)
+            low[rows], high[rows] = np.maximum(low[rows], bottom), np.minimum(high[rows], top)
+            if group.law.power_law:
+                most = self._resistive_limit_v(
+                    group.p, self.channels.limit_ma[channel], self.channels.limit_mw[channel]
+                )
+                low[rows], high[rows] = np.maximum(low[rows], -most), np.minimum(high[rows], most)
+        return Bounds(low, high)
+
+    @staticmethod
+    def _resistive_limit_v(p: dict[str, np.ndarray], limit_ma: np.ndarray, limit_mw: np.ndarray) -> np.ndarray:
+        """Volts at which a heater takes its current or power limit, warm by its own heat."""
+        r, rise, p2pi = p["r_ohm"], p["r_rise"], p["p2pi_mw"]
+        # P = I^2 R0 (1 + rise P / p2pi)
+        limited = np.isfinite(limit_ma)
+        cold_mw = np.square(np.where(limited, limit_ma, 0.0) / MA_PER_A) * r * MW_PER_W
+        room = 1.0 - rise * cold_mw / p2pi
+        by_current = np.where(limited & (room > 0.0), cold_mw / np.where(room > 0.0, room, 1.0), np.inf)
+        most_mw = np.minimum(by_current, limit_mw)
+        finite = np.where(np.isfinite(most_mw), most_mw, 0.0)
+        volts = np.sqrt(finite * r * (1.0 + rise * finite / p2pi) / MW_PER_W)
+        return np.where(np.isfinite(most_mw), volts, np.inf)
+
+    @cached_property
+    def own_reach(self) -> tuple[np.ndarray, np.ndarray]:
+        """Lowest and highest own change [A] within all limits; dead ones 0."""
+        low, high = np.zeros(len(self.actuators)), np.zeros(len(self.actuators))
+        for group in self.groups:
+            rows = group.rows
+            low[rows], high[rows] = group.law.reach_rad(group.p, self.bounds.low_v[rows], self.bounds.high_v[rows])
+        dead = self.actuators.dead
+        low[dead], high[dead] = 0.0, 0.0
+        return low, high
+
+    @cached_property
+    def primary(self) -> np.ndarray:
+        """The actuator that moves each setting: its first live one, else its first, i64[S]."""
+        order = np.lexsort((np.arange(len(self.actuators)), self.actuators.dead))[::-1]
+        primary = np.full(self.net.n_settings, -1, np.int64)
+        primary[self.actuators.setting[order]] = order
+        return primary
+
+    @cached_property
+    def period_rad(self) -> np.ndarray:
+        """2 pi for phases, 0 for coupler angles, f64[S]."""
+        return np.where(self.net.setting_is_angle, 0.0, TWO_PI)

@@ -1,0 +1,222 @@
+"""The main job from end to end: target -> settings -> volts and codes -> what the chip will really do.
+
+Public: solve, predict, Prediction.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from meshctl.errors import Unreachable
+from meshctl.mesh.graph import Mesh, frozen
+from meshctl.optics.measures import matrix_error, throughput, throughput_per_input
+from meshctl.plan.chip import Chip
+from meshctl.plan.placing import Placed, fixed_settings, place, reach_of
+from meshctl.plan.plan import Plan
+from meshctl.solver.closed import closed_form
+from meshctl.solver.reach import Reach
+from meshctl.solver.solution import Shortfall, Solution
+from meshctl.solver.target import Target, described, from_description
+
+_DEAD_ROUNDS = 8  # settings -> drive -> warmth at dead heaters -> settings; crosstalk makes each far smaller
+_DEAD_WITHIN = 1e-9  # rad
+CODES_SHOW = 1e-6  # matrix error that codes add beyond which they are the reason
+
+
+@dataclass(frozen=True, eq=False)
+class Prediction:
+    """What the chip does with a plan's codes."""
+
+    matrix: np.ndarray  # c128[out, in], or [W, out, in]
+    actual: np.ndarray  # f64[S]
+    volts: np.ndarray  # f64[K]
+    power_mw: np.ndarray  # f64[A]
+    fidelity: float
+    matrix_error: float
+    throughput: float
+    throughput_per_input: np.ndarray  # f64[in]
+    wavelengths_nm: np.ndarray | None = None
+
+
+def _unlimited(chip: Chip, reach: Reach) -> Reach:
+    """The reach with the drive's limits off: full turns for phases, any angle for couplers."""
+    fixed = fixed_settings(chip)
+    is_angle = chip.net.setting_is_angle
+    low = np.where(fixed, reach.low, np.where(is_angle, reach.idle - 2 * np.pi, chip.reference_rad))
+    high = np.where(fixed, reach.high, np.where(is_angle, reach.idle + 2 * np.pi, low + 2 * np.pi))
+    return Reach(low, high, reach.period, np.clip(reach.idle, low, high))
+
+
+def _beyond_limits(chip: Chip, solution: Solution) -> list[Shortfall]:
+    """Shortfalls owed to limits of the drive and not to the cell or to a fault."""
+    fixed = fixed_settings(chip)
+    return [s for s in solution.shortfalls if abs(s.off_rad) > 1e-8 and not fixed[s.setting]]
+
+
+def _refuse_limits(chip: Chip, missed: list[Shortfall], reach: Reach) -> None:
+    names = chip.net.setting_names
+    worst = max(missed, key=lambda s: abs(s.off_rad))
+    a = int(chip.primary[worst.setting])
+    k = int(chip.actuators.channel[a])
+    kind = "angle" if chip.net.setting_is_angle[worst.setting] else "phase"
+    raise Unreachable(
+        f"{{names}}: a {kind} of {worst.wanted_rad:.4g} rad is needed at '{names[worst.setting]}'; within its limits "
+        f"it gives {reach.low[worst.setting]:.4g} to {reach.high[worst.setting]:.4g} rad "
+        f"({chip.bounds.low_v[a]:.4g} to {chip.bounds.high_v[a]:.4g} V on channel '{chip.mesh.channel_names[k]}')",
+        rows=[s.setting for s in missed],
+        remedy="raise limit_v, limit_ma or limit_mw if the chip allows, or take the nearest with --best-effort",
+    ).named(names)
+
+
+def _settled(chip: Chip, target: Target, best_effort: bool) -> tuple[Solution, Solution, Placed]:
+    """Solve and place; where dead heaters are warmed by their neighbours, again with that warmth known."""
+    background = np.zeros(chip.net.n_settings)
+    dead = fixed_settings(chip) & np.isnan(chip.mesh.as_built.stuck_rad)
+    for _ in range(_DEAD_ROUNDS):
+        reach = reach_of(chip, background)
+        free = closed_form(chip.net, chip.mesh.as_built, target, _unlimited(chip, reach))
+        solution = closed_form(chip.net, chip.mesh.as_built, target, reach)
+        missed = _beyond_limits(chip, solution)
+        if missed and not best_effort:
+            _refuse_limits(chip, missed, reach)
+        placed = place(chip, solution.settings, best_effort=best_effort)
+        if chip.actuators.crosstalk is None or not dead.any():
+            break
+        warmth = np.where(dead, chip.total_changes(placed.change), 0.0)
+        if np.abs(warmth - background).max() < _DEAD_WITHIN:
+            break
+        background = warmth
+    return free, solution, placed
+
+
+def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, seed: int = 0) -> Plan:
+    """Volts and codes for a target, and how near the chip will come.
+
+    Parameters
+    ----------
+    mesh : Mesh
+    target : Target, unitary
+    best_effort : hold actuators at their limits rather than raise
+
+    Returns
+    -------
+    Plan
+
+    Raises
+    ------
+    NoClosedForm
+        For nets that no decomposition fits.
+    Unreachable and other findings of the drive
+        Where limits are in the way and `best_effort` is off.
+
+    Cost: O(N^3) for N modes.
+    """
+    chip = Chip(mesh)
+    free, solution, placed = _settled(chip, target, best_effort)
+    ahead = predict_codes(chip, placed.codes, target)
+    reason = solution.reason
+    if placed.held or _beyond_limits(chip, solution):
+        reason = "limits"
+    elif reason == "exact" and ahead.matrix_error > max(CODES_SHOW, 2 * solution.matrix_error):
+        reason = "codes"
+    warnings = _warnings(chip, solution, placed)
+    return Plan(
+        mesh.name,
+        mesh.hash,
+        described(target),
+        frozen(solution.settings),
+        frozen(ahead.volts),
+        frozen(placed.codes),
+        frozen(ahead.actual),
+        frozen(ahead.power_mw),
+        frozen(headroom_v(chip, ahead.volts)),
+        ahead.fidelity,
+        ahead.matrix_error,
+        {"fidelity": free.fidelity, "matrix_error": free.matrix_error},
+        ahead.throughput,
+        ahead.throughput_per_input.tolist(),
+        reason,
+        warnings,
+        [_shown(chip, s) for s in solution.shortfalls],
+        seed,
+    )
+
+
+def headroom_v(chip: Chip, volts: np.ndarray) -> np.ndarray:
+    """Volts left on every channel up to its limit, or that of the weakest actuator on it, f64[K]."""
+    highest = chip.terminal_range_v[1].copy()
+    np.minimum.at(highest, chip.actuators.channel, chip.bounds.high_v)
+    return highest - volts
+
+
+def _shown(chip: Chip, shortfall: Shortfall) -> dict[str, Any]:
+    return {
+        "element": chip.net.setting_names[shortfall.setting],
+        "wanted_rad": shortfall.wanted_rad,
+        "used_rad": shortfall.used_rad,
+        "off_rad": shortfall.off_rad,
+        "cross_power_off": shortfall.cross_power_off,
+    }
+
+
+def _warnings(chip: Chip, solution: Solution, placed: Placed) -> list[str]:
+    names, said = chip.net.setting_names, list(placed.warnings)
+    fixed = fixed_settings(chip)
+    for s in sorted(solution.shortfalls, key=lambda s: -abs(s.cross_power_off) - abs(s.off_rad))[:8]:
+        cause = "is stuck or dead" if fixed[s.setting] else "is out of its range"
+        off = f"{s.off_rad:+.4g} rad" if abs(s.off_rad) > 1e-8 else f"{s.cross_power_off:+.4g} in cross power"
+        said.append(f"'{names[s.setting]}' {cause}: {off} from what the closed form wants")
+    if len(solution.shortfalls) > 8:
+        said.append(f"{len(solution.shortfalls) - 8} more settings are out of range")
+    if placed.held:
+        actuators = chip.mesh.actuator_names
+        listed = ", ".join(f"'{actuators[a]}'" for a in placed.held[:6])
+        said.append(f"held at a limit: {listed}{' and more' if len(placed.held) > 6 else ''}")
+    if solution.reason == "no_output_phases":
+        said.append(
+            "the target fixes output phases that nothing on the mesh sets; if they do not matter use --free outputs"
+        )
+    return said
+
+
+def predict_codes(
+    chip: Chip, codes: np.ndarray, target: Target, wavelengths_nm: np.ndarray | None = None
+) -> Prediction:
+    """Run codes through the forward path and compare with a target."""
+    volts = chip.volts(codes)
+    actual = chip.actual(codes)
+    matrix = chip.response.matrix(actual, wavelengths_nm)
+    wanted = target.matrix if wavelengths_nm is None else np.broadcast_to(target.matrix, matrix.shape)
+    error = matrix_error(matrix, wanted, target.free)
+    return Prediction(
+        matrix,
+        actual,
+        volts,
+        chip.power_mw(volts),
+        1.0 - error**2,
+        error,
+        throughput(matrix),
+        throughput_per_input(matrix),
+        wavelengths_nm,
+    )
+
+
+def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None) -> Prediction:
+    """What the chip does with a plan's codes: codes -> volts -> settings -> matrix.
+
+    Parameters
+    ----------
+    wavelengths_nm : float (W,), or None for the centre wavelength
+
+    Returns
+    -------
+    Prediction
+        Over several wavelengths fidelity is 1 - mean E^2, the target being the same at each.
+    """
+    return predict_codes(Chip(mesh), plan.codes, from_description(plan.target), wavelengths_nm)
+
+
+__all__ = ["Prediction", "headroom_v", "predict", "predict_codes", "solve"]

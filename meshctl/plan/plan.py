@@ -1,0 +1,167 @@
+"""A plan: settings, volts and codes for one mesh and one wish, and how near the chip will come.
+
+Public: Plan, plan_text, read_plan, check_fresh.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from meshctl import __version__
+from meshctl.errors import MissingFile, MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
+from meshctl.mesh.graph import Mesh, frozen
+
+FORMAT = 1
+ARRAYS = {
+    "settings": "n_settings",
+    "volts": "n_channels",
+    "codes": "n_channels",
+    "actual": "n_settings",
+    "power_mw": "n_actuators",
+    "headroom_v": "n_channels",
+}
+
+
+@dataclass(frozen=True, eq=False)
+class Plan:
+    """What `solve` and `route` return; all arrays are read-only.
+
+    `fidelity`, `matrix_error` and the throughputs come from the codes through the forward path, all known
+    errors in; `continuous` holds fidelity and matrix_error before limits and codes.
+    """
+
+    mesh_name: str
+    mesh_hash: str
+    target: dict[str, Any]
+    settings: np.ndarray  # f64[S], rad, wanted
+    volts: np.ndarray  # f64[K], what the codes give at the terminals
+    codes: np.ndarray  # i64[K]
+    actual: np.ndarray  # f64[S], rad, what the codes give
+    power_mw: np.ndarray  # f64[A]
+    headroom_v: np.ndarray  # f64[K], up to the channel's limit
+    fidelity: float
+    matrix_error: float
+    continuous: dict[str, float]
+    throughput: float
+    throughput_per_input: list[float]
+    reason: str
+    warnings: list[str] = field(default_factory=list)
+    shortfalls: list[dict[str, Any]] = field(default_factory=list)
+    seed: int = 0
+    version: str = __version__
+
+    def _repr_html_(self) -> str:
+        rows = (
+            ("mesh", self.mesh_name),
+            ("target", self.target.get("source", "")),
+            ("fidelity", f"{self.fidelity:.9f}"),
+            ("matrix error", f"{self.matrix_error:.3g}"),
+            ("throughput", f"{self.throughput:.4f}"),
+            ("power", f"{float(self.power_mw.sum()):.1f} mW"),
+            ("reason", self.reason),
+        )
+        body = "".join(f"<tr><th>{name}</th><td>{value}</td></tr>" for name, value in rows)
+        return f"<table><caption>plan for {self.mesh_name}</caption>{body}</table>"
+
+
+def plan_text(plan: Plan) -> str:
+    """The plan as JSON, in columns; numbers are written so that they read back equal."""
+    entry: dict[str, Any] = {"format": FORMAT}
+    for name, value in vars(plan).items():
+        entry[name] = value.tolist() if isinstance(value, np.ndarray) else value
+    return json.dumps(entry, allow_nan=False, indent=None, separators=(",", ":")) + "\n"
+
+
+def _array(entry: dict[str, Any], name: str, where: str) -> np.ndarray:
+    kind = np.int64 if name == "codes" else np.float64
+    try:
+        array = np.array(entry[name], kind)
+    except (TypeError, ValueError, OverflowError):
+        raise UnsoundFile(f"'{name}' is no list of numbers", where=where, remedy="solve again") from None
+    if array.ndim != 1:
+        raise WrongSize(f"'{name}' has {array.ndim} dimensions, must have 1", where=where, remedy="solve again")
+    if not np.isfinite(array).all():
+        raise NotFinite(f"'{name}' holds NaN or infinity", where=where, remedy="solve again")
+    return frozen(array)
+
+
+def read_plan(path: str | Path) -> Plan:
+    """Read a plan file.
+
+    Raises
+    ------
+    MissingFile, UnsoundFile, MissingRow, UnknownKey, NotFinite, WrongSize
+    """
+    where = str(path)
+    try:
+        entry = json.loads(Path(path).read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise MissingFile("there is no such file", where=where, remedy="name a plan that 'solve' wrote") from None
+    except IsADirectoryError:
+        raise UnsoundFile("is a folder", where=where, remedy="name a plan file") from None
+    except (json.JSONDecodeError, UnicodeDecodeError) as problem:
+        raise UnsoundFile(f"not readable as JSON: {problem}", where=where, remedy="solve again") from None
+    if not isinstance(entry, dict) or entry.pop("format", None) != FORMAT:
+        raise UnsoundFile("not a plan of format 1", where=where, remedy="name a plan that 'solve' wrote")
+    known = set(Plan.__dataclass_fields__)
+    for name in entry:
+        if name not in known:
+            raise UnknownKey(f"key '{name}' is not known", where=where, remedy="remove it, or solve again")
+    for name in known:
+        if name not in entry:
+            raise MissingRow(f"key '{name}' is missing", where=where, remedy="solve again")
+    for name in ("fidelity", "matrix_error", "throughput"):
+        value = entry[name]
+        if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+            raise NotFinite(f"'{name}' is {value!r}, must be a number", where=where, remedy="solve again")
+    for name in ARRAYS:
+        entry[name] = _array(entry, name, where)
+    return Plan(**entry)
+
+
+def check_fresh(mesh: Mesh, plan: Plan, *, stale_ok: bool = False, where: str = "plan") -> list[str]:
+    """Refuse a plan made for another mesh, or before this one's physics changed.
+
+    Returns
+    -------
+    list of warnings, not empty only where `stale_ok` let a plan pass.
+
+    Raises
+    ------
+    StalePlan
+        With both hashes.
+    WrongSize
+        Where the arrays do not fit the mesh, whatever the hash.
+    """
+    sizes = {
+        "n_settings": mesh.net.n_settings,
+        "n_channels": len(mesh.channels),
+        "n_actuators": len(mesh.actuators),
+    }
+    fits = all(getattr(plan, name).shape == (sizes[size],) for name, size in ARRAYS.items())
+    if plan.mesh_hash == mesh.hash and fits:
+        highest = (np.int64(1) << mesh.channels.bits.astype(np.int64)) - 1
+        wrong = np.flatnonzero((plan.codes < 0) | (plan.codes > highest))
+        if len(wrong):
+            k = int(wrong[0])
+            raise UnsoundFile(
+                f"code {plan.codes[k]} of channel '{mesh.channel_names[k]}' is outside 0 to {highest[k]}",
+                where=where,
+                remedy="solve again",
+            )
+        return []
+    said = (
+        f"made for mesh '{plan.mesh_name}' ({plan.mesh_hash[:12]}); "
+        f"this is '{mesh.name}' ({mesh.hash[:12]}), whose physics differs"
+    )
+    if not stale_ok:
+        raise StalePlan(said, where=where, remedy="solve again, or pass --stale-ok if you know why they differ")
+    if not fits:
+        raise WrongSize(f"{said} in size too", where=where, remedy="solve again")
+    return [f"{where}: {said}"]
