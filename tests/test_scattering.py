@@ -137,6 +137,21 @@ def test_two_mirrors_follow_airy(phase):
     assert abs(found[0, 0]) ** 2 + abs(found[1, 0]) ** 2 == pytest.approx(1, abs=EXACT)
 
 
+def test_nearly_dark_ring_stays_within_its_condition():
+    k = 1e-5  # lossless, at resonance: the round trip is within k^2 / 2 of one
+    found = respond([coupler(k), guide(1.0)], [(3, 4), (5, 1)], [0, 2])
+    # Yariv as above: (c - 1) / (1 - c) = -1; condition 2 / k^2, ten times rounding allowed
+    assert found[1, 0] == pytest.approx(-1, abs=10 * np.finfo(float).eps * 2 / k**2)
+
+
+def test_pieces_apart_do_not_meet():
+    # two all-pass rings and a closed ring of its own, which stays dark
+    parts = [coupler(0.4), coupler(0.9), guide(np.exp(0.3j))]
+    found = respond(parts, [(1, 3), (5, 7), (8, 9)], [0, 2, 4, 6])
+    # Yariv as above with a round trip of one: full transmission with sign -1
+    assert np.allclose(found, -np.kron(np.eye(2), [[0, 1], [1, 0]]), rtol=0, atol=EXACT)
+
+
 def test_part_without_links_is_itself():
     found = respond([coupler(0.4)], [], [0, 1, 2, 3])
     assert np.array_equal(found, coupler(0.4))
@@ -322,6 +337,35 @@ def test_derivative_agrees_with_jax():
     # jax differentiates by each entry alone; a reciprocal part moves an entry and its reverse together
     expected = 0.5 * (expected + expected[pattern.mirror])
     assert abs(found - expected).max() < 1e-11 * abs(expected).max()
+
+
+def test_derivative_at_exact_bar_is_complete():
+    rng = np.random.default_rng(21)
+    lattice = hexagonal(2)
+    angles = np.where(rng.random(lattice.n_cells) < 0.5, 0.0, np.pi / 2)  # zeros where light may turn up
+    parts = [0.98 * coupler(k) for k in angles]
+    links = [(p, q) for p, q in enumerate(lattice.mate) if q > p]
+    made = net(parts, links, lattice.rim, full=True)
+    solved = scatter(made.pattern, made.values, keep=True)
+    change = random_change(made.pattern, rng)
+    cotangent = rng.normal(size=solved.response.shape) + 1j * rng.normal(size=solved.response.shape)
+    step = 1e-6
+    up, down = (scatter(made.pattern, made.values + s * change).response for s in (step, -step))
+    numeric = (cotangent.conj() * (up - down)).sum().real / (2 * step)
+    # central differences, as above
+    assert (vjp(solved, cotangent).conj() * change).sum().real == pytest.approx(numeric, rel=1e-6)
+
+
+def test_kept_numbers_are_reused_only_once():
+    made = lattice_net(hexagonal(2), np.random.default_rng(22))
+    first = scatter(made.pattern, made.values, keep=True)
+    expected = vjp(first, first.response)
+    second = scatter(made.pattern, made.values, keep=True, reuse=first)
+    assert np.array_equal(vjp(second, second.response), expected)
+    with pytest.raises(ValueError, match="overwritten"):
+        vjp(first, first.response)
+    with pytest.raises(ValueError, match="keep=True"):
+        vjp(scatter(made.pattern, made.values), first.response)
 
 
 # ---- one changed part

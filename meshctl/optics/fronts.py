@@ -22,7 +22,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from meshctl.optics.kernels import filled, given, int64, kernel, void
+from meshctl.optics.kernels import filled, given, int64, kernel, uint8, void
 
 # columns of Fronts.table
 OFFSET, LINKS, ROWS, COLUMNS, ENTRY, ENTRY_END, CHILD, CHILD_END, PIVOT, PAIRED, PORT_ROW, PORT_COLUMN = range(12)
@@ -39,6 +39,7 @@ class Fronts:
     ports: np.ndarray  # i64, ports of rows and columns of all fronts
     size: int  # numbers in all fronts
     pivots: int
+    live: np.ndarray  # u8[size], 0 where a front is zero whatever the values of S
 
 
 class _Wave:
@@ -136,15 +137,15 @@ class _Compiler:
                 waves[id(wave)] = wave
         inner = np.empty(0, np.int64)
         self._front(list(waves.values()), inner, inner, self.external, self.external, paired=False)
-        return Fronts(
+        compiled = (
             np.array(self.table, np.int64),
             np.array(self.children, np.int64).reshape(-1, 4),
             np.concatenate([*self.maps, inner]),
             np.concatenate([*self.entries, inner.reshape(0, 2)]),
-            np.concatenate([*self.ports, inner]),
-            self.size,
-            self.pivots,
         )
+        live = np.zeros(self.size, np.uint8)
+        _mark_live(*compiled, live)
+        return Fronts(*compiled, np.concatenate([*self.ports, inner]), self.size, self.pivots, live)
 
     def _close(self, low_ports: list[int]) -> None:
         """Join the waves that meet on these links."""
@@ -266,3 +267,29 @@ def _unite(label, first, second):  # type: ignore[no-untyped-def]
             label[a] = b
     for k in range(len(label)):
         label[k] = label[label[k]]
+
+
+@kernel(void(given(int64, 2), given(int64, 2), given(int64), given(int64, 2), filled(uint8)))
+def _mark_live(table, children, maps, entries, live):  # type: ignore[no-untyped-def]
+    """The join done with "may differ from zero" in place of numbers; live is zero on entry."""
+    for e in range(len(entries)):
+        live[entries[e, 0]] = 1
+    for b in range(len(table)):
+        o, m, width = table[b, 0], table[b, 1], table[b, 1] + table[b, 3]
+        for c in range(table[b, 6], table[b, 7]):
+            child, turned, at_row, at_column = children[c, 0], children[c, 1], children[c, 2], children[c, 3]
+            m_c, nr_c, nc_c = table[child, 1], table[child, 2], table[child, 3]
+            for i in range(nr_c):
+                source = table[child, 0] + (m_c + i) * (m_c + nc_c) + m_c
+                for j in range(nc_c):
+                    if turned:
+                        t = o + maps[at_column + j] * width + maps[at_row + i]
+                    else:
+                        t = o + maps[at_row + i] * width + maps[at_column + j]
+                    live[t] |= live[source + j]
+        for i in range(m + table[b, 2]):
+            row = o + i * width
+            for k in range(min(i, m)):
+                if live[row + k]:
+                    for j in range(k + 1, width):
+                        live[row + j] |= live[o + k * width + j]

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from meshctl.optics.kernels import filled, float64, given, int64, kernel, void
+from meshctl.optics.kernels import filled, float64, given, int64, kernel, uint8, void
 
 TINY = (8 * float(np.finfo(float).eps)) ** 2  # a pivot below this belongs to a loop that no light enters
 
@@ -168,8 +168,8 @@ def substitute(table, ports, f_re, f_im, inv_re, inv_im, y_re, y_im, a_re, a_im,
 _FRONT = (*[int64] * 5, *[given(float64)] * 4)  # o, m, height, width, pivot; f and inv
 
 
-@kernel(void(*_FRONT, *[filled(float64)] * 4))
-def _pull_paired(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im):  # type: ignore[no-untyped-def]
+@kernel(void(*_FRONT, *[filled(float64)] * 4, given(uint8)))
+def _pull_paired(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im, live):  # type: ignore[no-untyped-def]
     """Reverse of one elimination: g from that of the rest to that of what was assembled."""
     for up in range(height):
         i = height - 1 - up
@@ -182,6 +182,8 @@ def _pull_paired(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re, g
         for pair in range((last + 1) // 2):
             k = 2 * ((last + 1) // 2 - 1 - pair)
             here, above, rest = start + k, o + k * width + k, max(0, width - k - 2)
+            if not (live[here] or (k + 1 < last and live[here + 1])):
+                continue
             below = above + width if k + 1 < last else above
             p_re, p_im = f_re[above + 2 : above + 2 + rest], f_im[above + 2 : above + 2 + rest]
             q_re, q_im = f_re[below + 2 : below + 2 + rest], f_im[below + 2 : below + 2 + rest]
@@ -283,9 +285,10 @@ def _pull_symmetric(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re
         given(int64, 2),
         *[given(float64)] * 4,
         *[filled(float64)] * 6,
+        given(uint8),
     )
 )
-def pull_back(table, children, maps, entries, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im, e_re, e_im):  # type: ignore[no-untyped-def]
+def pull_back(table, children, maps, entries, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im, e_re, e_im, live):  # type: ignore[no-untyped-def]
     """The reverse of `join`: cotangents g of all fronts from that of the last, and e of the S entries.
 
     Bilinear, not conjugated: d objective = Re sum g dS. g is zero but in the last front, where it must be
@@ -296,7 +299,7 @@ def pull_back(table, children, maps, entries, f_re, f_im, inv_re, inv_im, g_re, 
         o, m, pivot = table[b, 0], table[b, 1], table[b, 8]
         height, width = m + table[b, 2], m + table[b, 3]
         if table[b, 9]:
-            _pull_paired(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im)
+            _pull_paired(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re, g_im, w_re, w_im, live)
         elif m:
             _pull_symmetric(o, m, height, width, pivot, f_re, f_im, inv_re, inv_im, g_re, g_im)
         for e in range(table[b, 4], table[b, 5]):

@@ -7,7 +7,7 @@ remains at the end is the response between the external ports, [out, in].
 
 Every part must be reciprocal (S symmetric), so the response is symmetric too. A loop that no light can enter
 (a pivot of zero) holds none; such loops are counted in `dark_loops`.
-Public: WavePattern, compile_pattern, Scattered, scatter, fields, vjp, jvp, Updater.
+Public: WavePattern, compile_pattern, Scattered, Room, scatter, fields, vjp, jvp, Updater.
 """
 
 from __future__ import annotations
@@ -67,6 +67,30 @@ class WavePattern:
         return self._narrowed[key]
 
 
+class Room:
+    """Memory for the fronts at W wavelengths; fresh pages cost more than the solve that fills them."""
+
+    def __init__(self, n_waves: int, fronts: Fronts) -> None:
+        self.fronts = fronts
+        self._numbers = [np.empty((n_waves, n)) for n in (fronts.size, fronts.size, fronts.pivots, fronts.pivots)]
+        self._slopes: np.ndarray | None = None
+        self.turn = 0
+
+    def fits(self, n_waves: int, fronts: Fronts) -> bool:
+        return self.fronts is fronts and len(self._numbers[0]) == n_waves
+
+    def at(self, wave: int) -> tuple[np.ndarray, ...]:
+        """Fronts and pivots of one wavelength: real, imaginary, real, imaginary."""
+        return tuple(numbers[wave] for numbers in self._numbers)
+
+    def slopes(self) -> np.ndarray:
+        """Zeros for the cotangents of one wavelength's fronts."""
+        if self._slopes is None:
+            self._slopes = np.empty((2, self.fronts.size))
+        self._slopes.fill(0.0)
+        return self._slopes
+
+
 @dataclass(frozen=True, eq=False)
 class Scattered:
     """What `scatter` found at W wavelengths."""
@@ -78,7 +102,8 @@ class Scattered:
     inputs: np.ndarray  # i64, positions among pattern.external_ports
     outputs: np.ndarray
     s_values: np.ndarray = field(repr=False)  # c128[W, N]
-    kept: tuple[np.ndarray, ...] = field(default=(), repr=False)  # fronts and pivots, real and imaginary
+    room: Room | None = field(default=None, repr=False)  # fronts at all wavelengths, with keep=True
+    turn: int = 0  # which use of the room this is
 
 
 def compile_pattern(
@@ -124,9 +149,9 @@ def compile_pattern(
     >>> abs(scatter(ring, np.array([[c, s, s, c] * 2])).response[0, 1, 0]).round(12)
     np.float64(1.0)
     """
-    port_start, mate = np.asarray(port_start, np.int32), np.asarray(mate, np.int32)
-    s_out, s_in = np.asarray(s_out_port, np.int64), np.asarray(s_in_port, np.int64)
-    external = np.asarray(external_ports, np.int64)
+    port_start, mate = np.array(port_start, np.int32), np.array(mate, np.int32)
+    s_out, s_in = np.array(s_out_port, np.int64), np.array(s_in_port, np.int64)
+    external = np.array(external_ports, np.int64)
     owner = np.repeat(np.arange(len(port_start) - 1), np.diff(port_start))
     _check_links(mate, external)
     mirror = _mirror_entries(owner, s_out, s_in, len(mate))
@@ -137,6 +162,8 @@ def compile_pattern(
     part_of[alone] = n_cells + np.arange(np.count_nonzero(alone))
     steps = _steps(mate, part_of[owner], n_cells + int(np.count_nonzero(alone)), cell_xy)
     fronts = compile_fronts(mate, s_out, s_in, external, list(steps))
+    for array in (port_start, mate, s_out, s_in, mirror, external, part_of):
+        array.flags.writeable = False
     return WavePattern(port_start, mate, s_out, s_in, mirror, external, part_of, steps, fronts)
 
 
@@ -217,6 +244,7 @@ def scatter(
     outputs: Sequence[int] | np.ndarray | None = None,
     *,
     keep: bool = False,
+    reuse: Scattered | None = None,
 ) -> Scattered:
     """The response of a net between its external ports.
 
@@ -225,6 +253,7 @@ def scatter(
     s_values : complex (W, N), the entries of the parts' S at every wavelength, in the pattern's order
     inputs, outputs : positions among the external ports; None: all
     keep : keep what `fields`, `vjp`, `jvp` and `Updater` need (16 bytes x `fronts.size` per wavelength)
+    reuse : an earlier result of the same call with keep=True; its kept numbers are overwritten
 
     Returns
     -------
@@ -251,34 +280,22 @@ def scatter(
     inputs, outputs = np.searchsorted(used, inputs), np.searchsorted(used, outputs)
 
     fronts, n, n_waves = pattern.fronts, len(used), len(values)
-    rows = n_waves if keep else 1
-    f_re, f_im = np.empty((rows, fronts.size)), np.empty((rows, fronts.size))
-    inv_re, inv_im = np.empty((rows, fronts.pivots)), np.empty((rows, fronts.pivots))
+    room = reuse.room if reuse is not None else None
+    if room is None or not room.fits(n_waves if keep else 1, fronts):
+        room = Room(n_waves if keep else 1, fronts)
+    room.turn += 1
     response = np.empty((n_waves, n, n), np.complex128)
     residual, dark = np.empty(n_waves), np.empty(n_waves, np.int64)
     re, im = np.ascontiguousarray(values.real), np.ascontiguousarray(values.imag)
     for w in range(n_waves):
-        k = w if keep else 0
-        dark[w] = join(
-            fronts.table,
-            fronts.children,
-            fronts.maps,
-            fronts.entries,
-            re[w],
-            im[w],
-            f_re[k],
-            f_im[k],
-            inv_re[k],
-            inv_im[k],
-        )
-        last = slice(fronts.size - n * n, fronts.size)
-        response[w].real, response[w].imag = f_re[k, last].reshape(n, n), f_im[k, last].reshape(n, n)
-        solved = f_re[k], f_im[k], inv_re[k], inv_im[k]
+        solved = room.at(w if keep else 0)
+        dark[w] = join(fronts.table, fronts.children, fronts.maps, fronts.entries, re[w], im[w], *solved)
+        response[w].real, response[w].imag = (part[fronts.size - n * n :].reshape(n, n) for part in solved[:2])
         residual[w] = _residual(pattern, re[w], im[w], solved, response[w])
     if len(inputs) < n or len(outputs) < n or (inputs != np.arange(n)).any() or (outputs != inputs).any():
         response = response[:, outputs[:, None], inputs]
-    kept = (f_re, f_im, inv_re, inv_im) if keep else ()
-    return Scattered(pattern, response, residual, dark, inputs, outputs, values, kept)
+    kept = (room, room.turn) if keep else (None, 0)
+    return Scattered(pattern, response, residual, dark, inputs, outputs, values, *kept)
 
 
 def _check_reciprocal(pattern: WavePattern, values: np.ndarray) -> None:
@@ -337,10 +354,12 @@ def _residual(
     return float(breach / abs(a).max(initial=1.0))
 
 
-def _kept(solved: Scattered) -> tuple[np.ndarray, ...]:
-    if not solved.kept:
+def _kept(solved: Scattered) -> Room:
+    if solved.room is None:
         raise ValueError("solve with keep=True first")
-    return solved.kept
+    if solved.room.turn != solved.turn:
+        raise ValueError("what was kept has been overwritten by a later solve that reused it")
+    return solved.room
 
 
 def fields(solved: Scattered, entering: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -357,7 +376,7 @@ def fields(solved: Scattered, entering: np.ndarray) -> tuple[np.ndarray, np.ndar
 
     Cost: K times a few operations per number in the fronts.
     """
-    kept, pattern = _kept(solved), solved.pattern
+    room, pattern = _kept(solved), solved.pattern
     columns = np.asarray(entering, complex)
     if columns.shape[:1] != solved.inputs.shape:
         raise WrongSize(f"entering fields have {columns.shape[0]} rows; there are {len(solved.inputs)} inputs")
@@ -369,7 +388,7 @@ def fields(solved: Scattered, entering: np.ndarray) -> tuple[np.ndarray, np.ndar
             pattern,
             np.ascontiguousarray(values[w].real),
             np.ascontiguousarray(values[w].imag),
-            tuple(k[w] for k in kept),
+            room.at(w),
             flat,
         )
         for w in range(len(values))
@@ -396,7 +415,7 @@ def vjp(solved: Scattered, cotangent: np.ndarray) -> np.ndarray:
     Source: reverse accumulation through the elimination (Griewank and Walther 2008, ch. 3); it equals the
     reciprocity form dR_ij = a(i)^T dS a(j), which `jvp` uses.
     """
-    kept, pattern = _kept(solved), solved.pattern
+    room, pattern = _kept(solved), solved.pattern
     fronts, n = pattern.fronts, len(pattern.external_ports)
     shape = (len(solved.s_values), len(solved.outputs), len(solved.inputs))
     if cotangent.shape != shape:
@@ -405,7 +424,7 @@ def vjp(solved: Scattered, cotangent: np.ndarray) -> np.ndarray:
     gradient = np.empty(solved.s_values.shape, complex)
     for w in range(len(gradient)):
         seed[solved.outputs[:, None], solved.inputs] = cotangent[w].conj()
-        g, pivot = np.zeros((2, fronts.size)), np.zeros((2, fronts.pivots))
+        g, pivot = room.slopes(), np.zeros((2, fronts.pivots))
         entry = np.zeros((2, pattern.n_entries))
         both = 0.5 * (seed + seed.T)
         g[0, fronts.size - n * n :], g[1, fronts.size - n * n :] = both.real.ravel(), both.imag.ravel()
@@ -414,13 +433,14 @@ def vjp(solved: Scattered, cotangent: np.ndarray) -> np.ndarray:
             fronts.children,
             fronts.maps,
             fronts.entries,
-            *(k[w] for k in kept),
+            *room.at(w),
             g[0],
             g[1],
             pivot[0],
             pivot[1],
             entry[0],
             entry[1],
+            fronts.live,
         )
         gradient[w] = entry[0] - 1j * entry[1]
     return 0.5 * (gradient + gradient[:, pattern.mirror])
@@ -440,12 +460,12 @@ def jvp(solved: Scattered, s_change: np.ndarray) -> np.ndarray:
 
     Cost: one substitution with as many columns as there are ports in use.
     """
-    kept, pattern = _kept(solved), solved.pattern
+    room, pattern = _kept(solved), solved.pattern
     change = np.empty(solved.response.shape, complex)
     values, every = solved.s_values, np.eye(len(pattern.external_ports))
     for w in range(len(values)):
         re, im = np.ascontiguousarray(values[w].real), np.ascontiguousarray(values[w].imag)
-        a, _ = _waves(pattern, re, im, tuple(k[w] for k in kept), every)
+        a, _ = _waves(pattern, re, im, room.at(w), every)
         b = np.zeros((2, *a.shape))
         d_re, d_im = np.ascontiguousarray(s_change[w].real), np.ascontiguousarray(s_change[w].imag)
         a_re, a_im = np.ascontiguousarray(a.real), np.ascontiguousarray(a.imag)
@@ -517,8 +537,8 @@ class Updater:
         for w in range(n_waves):
             a, y = np.zeros((2, 2, len(pattern.mate), n))
             y[0, ports[outward], np.arange(n)] = 1.0
-            kept, table = (k[w] for k in solved.kept), pattern.fronts.table
-            substitute(table, pattern.fronts.ports, *kept, y[0], y[1], a[0], a[1], 1)
+            kept, fronts = _kept(solved).at(w), pattern.fronts
+            substitute(fronts.table, fronts.ports, *kept, y[0], y[1], a[0], a[1], 1)
             back[w] = a[0, ports[outward]] + 1j * a[1, ports[outward]]
             reach[w] = y[0, pattern.external_ports] + 1j * y[1, pattern.external_ports]
         around = _Around(entries, at, outward, inner, partner, back, back, reach)
