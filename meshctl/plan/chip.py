@@ -11,6 +11,7 @@ from functools import cached_property
 
 import numpy as np
 
+from meshctl.drive.codes import Source
 from meshctl.errors import WrongSize
 from meshctl.laws.law import MA_PER_A, MW_PER_W
 from meshctl.mesh.actuation import law_groups
@@ -45,26 +46,16 @@ class Chip:
         return Response(self.net, self.mesh.as_built)
 
     @cached_property
-    def code_range(self) -> np.ndarray:
-        """Highest code of every channel, i64[K]."""
-        return (np.int64(1) << self.channels.bits.astype(np.int64)) - 1
-
-    @cached_property
-    def step_v(self) -> np.ndarray:
-        """Terminal volts per code, f64[K]."""
-        source = self.channels
-        return (source.max_v - source.min_v) / self.code_range * source.gain
+    def source(self) -> Source:
+        """Codes to terminal volts and back."""
+        c = self.channels
+        return Source(c.bits, c.min_v, c.max_v, c.offset_v, c.gain)
 
     def volts(self, codes: np.ndarray) -> np.ndarray:
         """Terminal volts [K] of codes [K]."""
         if codes.shape != (len(self.channels),):
             raise WrongSize(f"{codes.shape} codes for {len(self.channels)} channels")
-        return codes * self.step_v + self.zero_v
-
-    @cached_property
-    def zero_v(self) -> np.ndarray:
-        """Terminal volts of code 0, f64[K]."""
-        return self.channels.min_v * self.channels.gain + self.channels.offset_v
+        return self.source.volts_of(codes)
 
     @cached_property
     def reference_rad(self) -> np.ndarray:
@@ -76,9 +67,10 @@ class Chip:
 
     @cached_property
     def resistive(self) -> np.ndarray:
-        """Actuators whose law dissipates through a resistance, i64."""
+        """Live actuators whose law dissipates through a resistance, i64."""
         rows = [group.rows for group in self.groups if group.law.power_law]
-        return np.sort(np.concatenate(rows)) if rows else np.empty(0, np.int64)
+        every = np.sort(np.concatenate(rows)) if rows else np.empty(0, np.int64)
+        return every[~self.actuators.dead[every]]
 
     @cached_property
     def ground_ohm(self) -> np.ndarray:
@@ -144,9 +136,8 @@ class Chip:
     @cached_property
     def terminal_range_v(self) -> tuple[np.ndarray, np.ndarray]:
         """Lowest and highest terminal volts of every channel: range and voltage limit of the source."""
-        source = self.channels
-        high = self.zero_v + self.step_v * self.code_range
-        return np.maximum(self.zero_v, -source.limit_v), np.minimum(high, source.limit_v)
+        source, limit = self.source, self.channels.limit_v
+        return np.maximum(source.first_v, -limit), np.minimum(source.first_v + source.step_v * source.highest, limit)
 
     @cached_property
     def bounds(self) -> Bounds:

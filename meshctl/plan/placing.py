@@ -103,30 +103,21 @@ class _Placement:
         change[self.actuator] = radians(own_turns)
         heat = turns(chip.total_changes(change)[chip.actuators.setting])
         at = np.zeros(len(chip.actuators))
-        driven = np.zeros(len(chip.actuators), bool)
-        driven[self.actuator] = True
         for group in chip.groups:
-            mine = driven[group.rows]
-            rows = group.rows[mine]
-            p = {
-                k: v[mine] if isinstance(v, np.ndarray) else [t for t, m in zip(v, mine, strict=True) if m]
-                for k, v in group.p.items()
-            }
-            if not len(rows):
+            if group.law.power_law and chip.coupled:
                 continue
             try:
-                # the heat that warms a resistance is its own and what neighbours give
-                at[rows] = group.law.volts(
-                    change[rows], p, heat[rows] if chip.coupled and group.law.power_law else None
-                )
+                at[group.rows] = group.law.volts(change[group.rows], group.p)
             except DriveFinding as finding:
-                raise finding.named([chip.mesh.actuator_names[a] for a in rows.tolist()]) from None
+                raise finding.named([chip.mesh.actuator_names[a] for a in group.rows.tolist()]) from None
         if chip.coupled:
             from meshctl.plan.circuit import terminal_volts
 
-            at = terminal_volts(chip, at, change, heat)
-        volts = np.zeros(len(chip.channels))
-        volts[chip.actuators.channel[self.actuator]] = at[self.actuator]
+            heat = turns(chip.total_changes(change)[chip.actuators.setting])
+            at[chip.resistive] = terminal_volts(chip, change, heat)
+        volts = np.clip(0.0, *chip.terminal_range_v)
+        live = ~chip.actuators.dead
+        volts[chip.actuators.channel[live]] = at[live]
         return change, volts
 
 
@@ -178,10 +169,8 @@ def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False) -> Pla
             ).named(chip.mesh.channel_names)
         held += tuple(int(a) for a in np.flatnonzero(np.isin(chip.actuators.channel, bad)))
     volts = np.clip(volts, lowest, highest)
-    codes = np.clip(np.rint((volts - chip.zero_v) / chip.step_v), 0, chip.code_range).astype(np.int64)
-    # rounding must not step over a voltage limit
-    above = chip.volts(codes) > highest + _V_TOLERANCE
-    codes[above] -= 1
+    codes = chip.source.nearest_codes(volts)
+    codes[chip.volts(codes) > highest + _V_TOLERANCE] -= 1  # rounding must not step over a limit
     return Placed(codes, volts, change, found.verdict, tuple(sorted(set(held))))
 
 
