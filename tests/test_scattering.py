@@ -1,4 +1,7 @@
-"""Light through nets with loops and reflections, against closed forms and other solvers."""
+"""Light through nets with loops and reflections, against closed forms and other solvers.
+
+Numbers of equations and sections of the works named below are from memory.
+"""
 
 from types import SimpleNamespace
 
@@ -9,7 +12,8 @@ from meshctl.errors import UnsoundNet, WrongSize
 from meshctl.mesh.plane import hexagonal, square, trigrid
 from meshctl.optics.dissection import dissect
 from meshctl.optics.elements import coupler_block
-from meshctl.optics.scattering import Updater, compile_pattern, fields, jvp, scatter, vjp
+from meshctl.optics.scattering import compile_pattern, fields, jvp, scatter, vjp
+from meshctl.optics.updater import Updater
 
 EXACT = 1e-13  # some hundred rounding errors of fields of order one
 

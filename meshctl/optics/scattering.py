@@ -7,7 +7,7 @@ remains at the end is the response between the external ports, [out, in].
 
 Every part must be reciprocal (S symmetric), so the response is symmetric too. A loop that no light can enter
 (a pivot of zero) holds none; such loops are counted in `dark_loops`.
-Public: WavePattern, compile_pattern, Scattered, Room, scatter, fields, vjp, jvp, Updater.
+Public: Scattered, Room, scatter, fields, vjp, jvp, kept_room; from `pattern`: WavePattern, compile_pattern.
 """
 
 from __future__ import annotations
@@ -18,53 +18,12 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from meshctl.errors import UnsoundNet, WrongSize
-from meshctl.optics.dissection import dissect
-from meshctl.optics.fronts import Fronts, compile_fronts
+from meshctl.optics.fronts import Fronts
 from meshctl.optics.joining import join, pull_back, substitute
 from meshctl.optics.kernels import filled, float64, given, int64, kernel, void
+from meshctl.optics.pattern import WavePattern, compile_pattern
 
 RECIPROCAL_WITHIN = 1e-9  # of a field amplitude: far above rounding, far below any measured part
-
-
-@dataclass(frozen=True, eq=False)
-class WavePattern:
-    """A net compiled for `scatter`. E elements, P ports, N entries of the parts' S, X external ports."""
-
-    port_start: np.ndarray  # i32[E + 1]
-    mate: np.ndarray  # i32[P]
-    s_out_port: np.ndarray  # i64[N]
-    s_in_port: np.ndarray  # i64[N]
-    mirror: np.ndarray  # i64[N], the entry with out and in exchanged
-    external_ports: np.ndarray  # i64[X]
-    part_of: np.ndarray  # i32[E]: its cell, or a number of its own above all cells
-    steps: tuple[np.ndarray, ...]  # links that are closed together, by their lower ports
-    fronts: Fronts
-    _narrowed: dict[tuple[int, ...], WavePattern] = field(default_factory=dict, repr=False)
-
-    @property
-    def n_entries(self) -> int:
-        return len(self.s_out_port)
-
-    def narrowed(self, positions: Sequence[int] | np.ndarray) -> WavePattern:
-        """The same net with all external ports dark but these (positions); compiled once for each choice."""
-        key = tuple(int(k) for k in positions)
-        if key == tuple(range(len(self.external_ports))):
-            return self
-        if key not in self._narrowed:
-            ports = self.external_ports[list(key)]
-            fronts = compile_fronts(self.mate, self.s_out_port, self.s_in_port, ports, list(self.steps))
-            self._narrowed[key] = WavePattern(
-                self.port_start,
-                self.mate,
-                self.s_out_port,
-                self.s_in_port,
-                self.mirror,
-                ports,
-                self.part_of,
-                self.steps,
-                fronts,
-            )
-        return self._narrowed[key]
 
 
 class Room:
@@ -106,137 +65,6 @@ class Scattered:
     turn: int = 0  # which use of the room this is
 
 
-def compile_pattern(
-    port_start: np.ndarray,
-    mate: np.ndarray,
-    s_out_port: np.ndarray,
-    s_in_port: np.ndarray,
-    cell_of: np.ndarray,
-    external_ports: np.ndarray,
-    cell_xy: np.ndarray | None = None,
-) -> WavePattern:
-    """Compile a net for `scatter`.
-
-    Parameters
-    ----------
-    port_start : int (E + 1,), first port of each element
-    mate : int (P,), partner of each port, -1: free
-    s_out_port, s_in_port : int (N,), the entries of the parts' S that may differ from zero
-    cell_of : int (E,), -1: in no cell
-    external_ports : int (X,), free ports by position; other free ports are dark
-    cell_xy : float (C, 2), where cells stand; None: the order is found from the links alone
-
-    Returns
-    -------
-    WavePattern
-
-    Raises
-    ------
-    UnsoundNet
-        For links that are not mutual, external ports that are linked, entries given twice or between two
-        elements, and entries whose reverse is missing.
-
-    Cost: n log n; 0.4 s for 2862 hexagon cells.
-
-    Example
-    -------
-    A ring: one coupler whose b2 is linked to its a2.
-
-    >>> ports = np.array([(2, 0), (2, 1), (3, 0), (3, 1)])  # b1, b2 from a1, a2
-    >>> both = np.concatenate([ports, ports[:, ::-1]])
-    >>> ring = compile_pattern([0, 4], [-1, 3, -1, 1], both[:, 0], both[:, 1], [-1], [0, 2])
-    >>> c, s = np.cos(0.3), 1j * np.sin(0.3)
-    >>> abs(scatter(ring, np.array([[c, s, s, c] * 2])).response[0, 1, 0]).round(12)
-    np.float64(1.0)
-    """
-    port_start, mate = np.array(port_start, np.int32), np.array(mate, np.int32)
-    s_out, s_in = np.array(s_out_port, np.int64), np.array(s_in_port, np.int64)
-    external = np.array(external_ports, np.int64)
-    owner = np.repeat(np.arange(len(port_start) - 1), np.diff(port_start))
-    _check_links(mate, external)
-    mirror = _mirror_entries(owner, s_out, s_in, len(mate))
-    cells = np.asarray(cell_of, np.int32)
-    n_cells = int(cells.max(initial=-1)) + 1
-    alone = cells < 0
-    part_of = cells.copy()
-    part_of[alone] = n_cells + np.arange(np.count_nonzero(alone))
-    steps = _steps(mate, part_of[owner], n_cells + int(np.count_nonzero(alone)), cell_xy)
-    fronts = compile_fronts(mate, s_out, s_in, external, list(steps))
-    for array in (port_start, mate, s_out, s_in, mirror, external, part_of):
-        array.flags.writeable = False
-    return WavePattern(port_start, mate, s_out, s_in, mirror, external, part_of, steps, fronts)
-
-
-def _check_links(mate: np.ndarray, external: np.ndarray) -> None:
-    linked = np.flatnonzero(mate >= 0)
-    wrong = linked[(mate[mate[linked]] != linked) | (mate[linked] == linked)]
-    if len(wrong):
-        raise UnsoundNet(
-            f"port {wrong[0]} is linked to port {mate[wrong[0]]}, which is linked elsewhere",
-            remedy="link each port once",
-        )
-    if len(np.unique(external)) < len(external):
-        raise UnsoundNet("an external port is listed twice")
-    taken = external[mate[external] >= 0]
-    if len(taken):
-        raise UnsoundNet(f"port {taken[0]} is external and linked", remedy="leave external ports free")
-
-
-def _mirror_entries(owner: np.ndarray, s_out: np.ndarray, s_in: np.ndarray, n_ports: int) -> np.ndarray:
-    across = np.flatnonzero(owner[s_out] != owner[s_in])
-    if len(across):
-        k = across[0]
-        raise UnsoundNet(f"entry {k} of S goes from port {s_in[k]} of one element to {s_out[k]} of another")
-    key, back = s_out * n_ports + s_in, s_in * n_ports + s_out
-    order = np.argsort(key)
-    if (np.diff(key[order]) == 0).any():
-        raise UnsoundNet("an entry of S is listed twice")
-    place = np.searchsorted(key[order], back).clip(max=max(0, len(key) - 1))
-    missing = np.flatnonzero(key[order][place] != back) if len(key) else place
-    if len(missing):
-        k = missing[0]
-        raise UnsoundNet(
-            f"S has an entry from port {s_in[k]} to port {s_out[k]} and none back; parts must be reciprocal"
-        )
-    mirror: np.ndarray = order[place]
-    return mirror
-
-
-def _steps(mate: np.ndarray, part: np.ndarray, n_parts: int, cell_xy: np.ndarray | None) -> tuple[np.ndarray, ...]:
-    """Links inside each part first, then those between parts along nested halves."""
-    low = np.flatnonzero(mate > np.arange(len(mate)))
-    ends = np.column_stack([part[low], part[mate[low]]]).astype(np.int64)
-    own = ends[:, 0] == ends[:, 1]
-    inner = low[own][np.argsort(ends[own, 0], kind="stable")]
-    split = np.flatnonzero(np.diff(part[inner])) + 1
-    steps = [s for s in np.split(inner, split) if len(s)]
-    between, low = ends[~own], low[~own]
-    halving = dissect(n_parts, between, _part_places(n_parts, between, cell_xy))
-    steps += np.split(low[halving.closed], halving.first[1:-1]) if len(low) else []
-    return tuple(steps)
-
-
-def _part_places(n_parts: int, links: np.ndarray, cell_xy: np.ndarray | None) -> np.ndarray | None:
-    """Places of all parts; those in no cell stand amid the parts they are linked to. None: unknown."""
-    if cell_xy is None or len(cell_xy) > n_parts:
-        return None
-    place = np.full((n_parts, 2), np.nan)
-    place[: len(cell_xy)] = cell_xy
-    both = np.concatenate([links, links[:, ::-1]])
-    while True:
-        known = ~np.isnan(place[:, 0])
-        if known.all():
-            return place
-        reach = both[~known[both[:, 0]] & known[both[:, 1]]]
-        if not len(reach):
-            return None
-        total, count = np.zeros((n_parts, 2)), np.zeros(n_parts)
-        np.add.at(total, reach[:, 0], place[reach[:, 1]])
-        np.add.at(count, reach[:, 0], 1.0)
-        now = count > 0
-        place[now] = total[now] / count[now, None]
-
-
 def scatter(
     pattern: WavePattern,
     s_values: np.ndarray,
@@ -264,8 +92,8 @@ def scatter(
     WrongSize, UnsoundNet
         UnsoundNet where a part is not reciprocal.
 
-    Cost: per wavelength n^1.5 of the number of cells; 0.03, 0.9, 25 ms for all ports of 30, 306, 2862 hexagon
-    cells, less for fewer ports (their first use compiles a narrowed pattern).
+    Cost: per wavelength about n^1.5 of the number of cells: 0.06, 0.9, 22 ms for all ports of 30, 306, 2862
+    hexagon cells, less for fewer ports (their first use compiles a narrowed pattern).
     Source: George 1973 (nested dissection); no pivoting is needed as Re(x* (I - P S) x) >= 0 for passive parts.
     """
     values = np.ascontiguousarray(s_values, np.complex128)
@@ -354,7 +182,8 @@ def _residual(
     return float(breach / abs(a).max(initial=1.0))
 
 
-def _kept(solved: Scattered) -> Room:
+def kept_room(solved: Scattered) -> Room:
+    """The fronts of a solve that kept them and that no later one has overwritten."""
     if solved.room is None:
         raise ValueError("solve with keep=True first")
     if solved.room.turn != solved.turn:
@@ -376,7 +205,7 @@ def fields(solved: Scattered, entering: np.ndarray) -> tuple[np.ndarray, np.ndar
 
     Cost: K times a few operations per number in the fronts.
     """
-    room, pattern = _kept(solved), solved.pattern
+    room, pattern = kept_room(solved), solved.pattern
     columns = np.asarray(entering, complex)
     if columns.shape[:1] != solved.inputs.shape:
         raise WrongSize(f"entering fields have {columns.shape[0]} rows; there are {len(solved.inputs)} inputs")
@@ -415,7 +244,7 @@ def vjp(solved: Scattered, cotangent: np.ndarray) -> np.ndarray:
     Source: reverse accumulation through the elimination (Griewank and Walther 2008, ch. 3); it equals the
     reciprocity form dR_ij = a(i)^T dS a(j), which `jvp` uses.
     """
-    room, pattern = _kept(solved), solved.pattern
+    room, pattern = kept_room(solved), solved.pattern
     fronts, n = pattern.fronts, len(pattern.external_ports)
     shape = (len(solved.s_values), len(solved.outputs), len(solved.inputs))
     if cotangent.shape != shape:
@@ -460,7 +289,7 @@ def jvp(solved: Scattered, s_change: np.ndarray) -> np.ndarray:
 
     Cost: one substitution with as many columns as there are ports in use.
     """
-    room, pattern = _kept(solved), solved.pattern
+    room, pattern = kept_room(solved), solved.pattern
     change = np.empty(solved.response.shape, complex)
     values, every = solved.s_values, np.eye(len(pattern.external_ports))
     for w in range(len(values)):
@@ -474,103 +303,4 @@ def jvp(solved: Scattered, s_change: np.ndarray) -> np.ndarray:
     return change
 
 
-@dataclass(frozen=True, eq=False)
-class _Around:
-    """What one part sees of the net: n its lit outward ports, Q its entries."""
-
-    entries: np.ndarray  # i64[Q], rows of the pattern's entries
-    at: tuple[np.ndarray, np.ndarray]  # where they stand in the part's own S, out and in
-    outward: np.ndarray  # places of outward ports in the part's own S
-    inner: np.ndarray  # places of ports linked within the part
-    partner: np.ndarray  # of each inner port, its position in `inner`
-    before: np.ndarray  # c128[W, n, n], S of the part as it was solved
-    back: np.ndarray  # c128[W, n, n], light that returns to the part from what leaves it
-    reach: np.ndarray  # c128[W, X, n], light at external ports from what leaves the part
-
-
-class Updater:
-    """New responses after one part (a cell, or an element in no cell) has changed.
-
-    Parameters
-    ----------
-    solved : Scattered, with keep=True
-
-    `prepare(part)` costs one substitution with as many columns as the part has ports and happens by itself
-    on first use; each `response` then costs two small products.
-    Source: the matrix inversion lemma (Woodbury 1950); light reaches a part as it leaves it, by reciprocity.
-    """
-
-    def __init__(self, solved: Scattered) -> None:
-        _kept(solved)
-        self.solved = solved
-        self._around: dict[int, _Around] = {}
-
-    def entries(self, part: int) -> np.ndarray:
-        """Which entries of S belong to a part, in the order in which `response` takes their values."""
-        return self.prepare(part).entries
-
-    def prepare(self, part: int) -> _Around:
-        """Solve once for light leaving each port of a part."""
-        if part not in self._around:
-            self._around[part] = self._look_around(part)
-        return self._around[part]
-
-    def _look_around(self, part: int) -> _Around:
-        solved, pattern = self.solved, self.solved.pattern
-        owner = np.repeat(np.arange(len(pattern.part_of)), np.diff(pattern.port_start))
-        ports = np.flatnonzero(pattern.part_of[owner] == part)
-        if not len(ports):
-            raise WrongSize(f"there is no part {part}; they run from 0 to {pattern.part_of.max()}")
-        place = np.full(len(pattern.mate), -1)
-        place[ports] = np.arange(len(ports))
-        mates = pattern.mate[ports]
-        inside = (mates >= 0) & (place[mates] >= 0)
-        lit = (mates >= 0) | np.isin(ports, pattern.external_ports)
-        inner, outward = np.flatnonzero(inside), np.flatnonzero(lit & ~inside)
-        entries = np.flatnonzero(place[pattern.s_out_port] >= 0)
-        at = place[pattern.s_out_port[entries]], place[pattern.s_in_port[entries]]
-        partner = np.searchsorted(inner, place[mates[inner]])
-
-        n, n_waves = len(outward), len(solved.s_values)
-        back = np.empty((n_waves, n, n), complex)
-        reach = np.empty((n_waves, len(pattern.external_ports), n), complex)
-        for w in range(n_waves):
-            a, y = np.zeros((2, 2, len(pattern.mate), n))
-            y[0, ports[outward], np.arange(n)] = 1.0
-            kept, fronts = _kept(solved).at(w), pattern.fronts
-            substitute(fronts.table, fronts.ports, *kept, y[0], y[1], a[0], a[1], 1)
-            back[w] = a[0, ports[outward]] + 1j * a[1, ports[outward]]
-            reach[w] = y[0, pattern.external_ports] + 1j * y[1, pattern.external_ports]
-        around = _Around(entries, at, outward, inner, partner, back, back, reach)
-        before = _fused(around, len(ports), solved.s_values[:, entries])
-        return _Around(entries, at, outward, inner, partner, before, back, reach)
-
-    def response(self, part: int, values: np.ndarray) -> np.ndarray:
-        """The response [W, out, in] with new values [W, Q] of a part's entries, in the order of `entries`."""
-        around, solved = self.prepare(part), self.solved
-        if values.shape != (len(solved.s_values), len(around.entries)):
-            raise WrongSize(
-                f"values have shape {values.shape}; part {part} takes ({len(solved.s_values)}, {len(around.entries)})"
-            )
-        n_ports = len(around.outward) + len(around.inner)
-        n_ports = max(n_ports, 1 + max((int(k.max(initial=-1)) for k in around.at), default=-1))
-        change = _fused(around, n_ports, values) - around.before
-        n = change.shape[-1]
-        # waves into the part: a = to + back change a
-        seen = np.linalg.solve(np.eye(n) - around.back @ change, around.reach[:, solved.inputs].swapaxes(1, 2))
-        extra: np.ndarray = around.reach[:, solved.outputs] @ (change @ seen)
-        return solved.response + extra
-
-
-def _fused(around: _Around, n_ports: int, values: np.ndarray) -> np.ndarray:
-    """S [W, n, n] of a part over its outward ports from its entries [W, Q]."""
-    s = np.zeros((len(values), n_ports, n_ports), complex)
-    s[:, around.at[0], around.at[1]] = values
-    out, inner = around.outward, around.inner
-    fused = s[:, out[:, None], out]
-    if len(inner):
-        onto = s[:, inner[around.partner][:, None], inner]  # rows exchanged across the links
-        into = s[:, inner[around.partner][:, None], out]
-        waves = np.linalg.solve(np.eye(len(inner)) - onto, into)
-        fused = fused + s[:, out[:, None], inner] @ waves
-    return fused
+__all__ = ["Room", "Scattered", "WavePattern", "compile_pattern", "fields", "jvp", "kept_room", "scatter", "vjp"]
