@@ -14,6 +14,7 @@ import os
 import subprocess
 import sys
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -58,7 +59,7 @@ def prove(programme: Programme, seconds: float) -> Proof:
             [sys.executable, "-m", "meshctl.drive.integer"],
             input=given.getvalue(),
             capture_output=True,
-            timeout=seconds + _START_UP_S,
+            timeout=2.0 * seconds + _START_UP_S,
             env={**os.environ, "PYTHONPATH": path},
             check=True,
         )
@@ -70,20 +71,27 @@ def prove(programme: Programme, seconds: float) -> Proof:
 
 
 def solve(programme: Programme, seconds: float) -> Proof:
-    """Solve the programme in this process."""
+    """Solve the programme in this process; "infeasible" only where it is so without presolving too."""
+    result = _milp(programme, seconds, presolve=True)
+    status = {_OPTIMAL: "optimal", _INFEASIBLE: "infeasible"}.get(result.status, "undecided")
+    # with equality rows beside the turns this solver was seen to call feasible programmes infeasible
+    if status == "infeasible" and _milp(programme, seconds, presolve=False).status != _INFEASIBLE:
+        status = "undecided"
+    bound = result.get("mip_dual_bound")
+    n = None if result.x is None else np.round(result.x)
+    return Proof(status, n, -np.inf if bound is None else float(bound))
+
+
+def _milp(programme: Programme, seconds: float, presolve: bool) -> Any:
     from scipy.optimize import Bounds, LinearConstraint, milp
 
-    result = milp(
+    return milp(
         programme.cost,
         constraints=LinearConstraint(programme.inverse, programme.low, programme.high),
         integrality=np.ones(len(programme.cost)),
         bounds=Bounds(programme.n_low, programme.n_high),
-        options={"time_limit": seconds, "mip_rel_gap": 0.0},
+        options={"time_limit": seconds, "mip_rel_gap": 0.0, "presolve": presolve},
     )
-    status = {_OPTIMAL: "optimal", _INFEASIBLE: "infeasible"}.get(result.status, "undecided")
-    bound = result.get("mip_dual_bound")
-    n = None if result.x is None else np.round(result.x)
-    return Proof(status, n, -np.inf if bound is None else float(bound))
 
 
 def _main() -> None:

@@ -265,7 +265,7 @@ class _Search:
             self.n_high[columns].astype(float),
         )
         proved = prove(programme, seconds)
-        if proved.status == "infeasible":
+        if proved.status == "infeasible":  # what was found within limits outdoes any such claim
             return self._answer(found.wraps, self._solve(found.wraps), "found", "unreachable")
         best, own = found.wraps, self._solve(found.wraps)
         if proved.n is not None:
