@@ -11,6 +11,7 @@ import numpy as np
 
 from meshctl.errors import WrongSize
 from meshctl.optics.joining import substitute
+from meshctl.optics.kernels import filled, float64, given, kernel, void
 from meshctl.optics.scattering import Scattered, kept_room
 
 
@@ -96,8 +97,27 @@ class Updater:
         n = change.shape[-1]
         # waves into the part: a = to + back change a
         seen = np.linalg.solve(np.eye(n) - around.back @ change, around.reach[:, solved.inputs].swapaxes(1, 2))
-        extra: np.ndarray = around.reach[:, solved.outputs] @ (change @ seen)
-        return solved.response + extra
+        extra = change @ seen
+        response = solved.response.copy()
+        # as real numbers: x y = Re x (y) + Im x (i y); not by @, which may wait 100 ms for its threads
+        _add_product(
+            np.ascontiguousarray(around.reach[:, solved.outputs]).view(np.float64),
+            np.stack([extra, 1j * extra], axis=2).reshape(len(extra), 2 * n, -1).view(np.float64),
+            response.view(np.float64),
+        )
+        return response
+
+
+@kernel(void(given(float64, 3), given(float64, 3), filled(float64, 3)))
+def _add_product(left, right, total):  # type: ignore[no-untyped-def]
+    """total += left @ right at every wavelength."""
+    for w in range(left.shape[0]):
+        for i in range(left.shape[1]):
+            row = total[w, i]
+            for k in range(left.shape[2]):
+                x, source = left[w, i, k], right[w, k]
+                for j in range(len(row)):
+                    row[j] += x * source[j]
 
 
 def _fused(around: _Around, values: np.ndarray) -> np.ndarray:
