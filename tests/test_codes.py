@@ -182,7 +182,7 @@ def test_few_channels_come_near_exhaustive_search(tied):
         found.append(rounded.cost)
         best.append(min(cost(np.array(c)) for c in itertools.product(range(95, 107), repeat=3)))
     assert all(f >= b * (1 - 1e-9) for f, b in zip(found, best, strict=True))
-    assert np.sum(found) <= 1.25 * np.sum(best)
+    assert np.sum(found) <= 1.1 * np.sum(best)  # the codes given are 5 times off or more
 
 
 def test_aware_rounding_keeps_within_limits():

@@ -81,13 +81,20 @@ class HeatBalance:
             own, shared, size = new, new_shared, new_size
         raise self._failure(own)
 
-    def _start(self) -> tuple[Floats, Floats]:
-        """Currents through the cold heaters, and the heat of each by itself at the voltage these leave."""
+    def _cold_shared(self) -> Floats:
+        """Currents through the grounds while all heaters have their cold resistance."""
         through = np.where(self.by_current, 0.0, 1.0 / self.r_cold)
         feeding = ground_sums(self.current + self.volts * through, self.at, self.n_grounds)
-        shared = feeding / (1.0 + self.ground * ground_sums(through, self.at, self.n_grounds))
-        across = self.volts - at_ground(self.ground * shared, self.at)
-        cold = across**2 / self.r_cold / self.turn_w
+        return np.asarray(feeding / (1.0 + self.ground * ground_sums(through, self.at, self.n_grounds)))
+
+    def _cold_turns(self) -> Floats:
+        """Heat of voltage-driven heaters at their cold resistance."""
+        across = self.volts - at_ground(self.ground * self._cold_shared(), self.at)
+        return np.where(self.by_current, 0.0, across**2 / self.r_cold / self.turn_w)
+
+    def _start(self) -> tuple[Floats, Floats]:
+        """Currents through the cold heaters, and the heat of each by itself at the voltage these leave."""
+        shared, cold = self._cold_shared(), self._cold_turns()
         under = np.maximum(1.0 + 4.0 * self.rise * cold, 0.0)
         by_volts = 2.0 * cold / (1.0 + np.sqrt(under))
         own = np.where(self.by_current, self.current**2 * self.r_cold / self.turn_w, by_volts)
@@ -168,7 +175,8 @@ class HeatBalance:
             raise self._runaway(np.flatnonzero(bad), own)
 
     def _runaway(self, rows: NDArray[np.int64], own: Floats) -> ThermalRunaway:
-        worst = int(rows[np.argmax(np.abs(np.nan_to_num(own[rows], nan=np.inf)))])
+        hottest = np.maximum(np.abs(np.nan_to_num(own, nan=np.inf)), self._cold_turns())
+        worst = int(rows[np.argmax(hottest[rows])])
         if self.by_current[worst]:
             drive, why = f"{self.current[worst] * MA_PER_A:.4g} mA", "rising resistance on a current source"
         else:
@@ -184,6 +192,7 @@ class HeatBalance:
         felt = 1.0 if self.warming is None else 1.0 + np.asarray(abs(self.warming).sum(axis=1)).ravel()
         heat = self.heat(own)
         near = ~(1.0 + self.rise * heat > 0.0) | ~(self._gain(own, heat) * felt < _NEAR_RUNAWAY)
+        near |= -4.0 * self.rise * self._cold_turns() * felt > 1.0  # alone, past its turning point
         if near.any():
             return self._runaway(np.flatnonzero(near), own)
         rows = np.flatnonzero(self.at >= 0)
