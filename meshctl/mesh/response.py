@@ -118,6 +118,10 @@ class Response:
         self._fill(table, self._couplers, value[self._couplers] * scale, self._turning, phase[self._turning])
         return table
 
+    def parts(self, settings: np.ndarray, wavelength_nm: float | None = None) -> np.ndarray:
+        """Through and cross amplitudes of every part, [4, E]: real, imaginary of each."""
+        return self._table(self.values(settings), wavelength_nm)
+
     def blocks(self, settings: np.ndarray, wavelength_nm: float | None = None) -> np.ndarray:
         """The fused 2x2 blocks [B, 8] of the net at one wavelength (None: the centre)."""
         return self._blocks(self.values(settings), wavelength_nm)

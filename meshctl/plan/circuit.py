@@ -1,6 +1,6 @@
 """Heaters of a chip on their shared grounds: the rows that `drive.ground` takes, both ways.
 
-Public: working_changes, terminal_volts.
+Public: working_changes, terminal_volts, ground_rise.
 """
 
 from __future__ import annotations
@@ -42,10 +42,22 @@ def working_changes(chip: Chip, volts: np.ndarray) -> np.ndarray:
     return np.asarray(radians(point.own_turns))
 
 
-def terminal_volts(chip: Chip, change: np.ndarray, heat_turns: np.ndarray) -> np.ndarray:
-    """Terminal volts of the live heaters for own changes [A] and the heat [A] that they feel."""
+def _terminals(chip: Chip, change: np.ndarray) -> tuple[ground.Terminals, np.ndarray]:
+    """What the source has to give for own changes [A], and the ground of each live heater."""
     rows, electrical = _heaters(chip)
+    heat = turns(chip.total_changes(change)[chip.actuators.setting[rows]])
     try:
-        return ground.terminal_volts(turns(change[rows]), heat_turns[rows], **electrical).volts
+        return ground.terminal_volts(turns(change[rows]), heat, **electrical), electrical["group"]
     except DriveFinding as finding:
         raise finding.named([chip.mesh.actuator_names[a] for a in rows.tolist()]) from None
+
+
+def terminal_volts(chip: Chip, change: np.ndarray) -> np.ndarray:
+    """Terminal volts of the live heaters for own changes [A]."""
+    return _terminals(chip, change)[0].volts
+
+
+def ground_rise(chip: Chip, change: np.ndarray) -> np.ndarray:
+    """Volts by which the ground of each live heater rises for own changes [A]."""
+    terminals, group = _terminals(chip, change)
+    return np.append(terminals.ground_v, 0.0)[group]

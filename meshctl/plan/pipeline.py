@@ -16,6 +16,7 @@ from meshctl.optics.measures import matrix_error, throughput, throughput_per_inp
 from meshctl.plan.chip import Chip
 from meshctl.plan.placing import Placed, fixed_settings, place, reach_of
 from meshctl.plan.plan import Plan
+from meshctl.plan.rounding import rounded
 from meshctl.solver.closed import closed_form
 from meshctl.solver.reach import Reach
 from meshctl.solver.solution import Shortfall, Solution
@@ -23,6 +24,7 @@ from meshctl.solver.target import Target, described, from_description
 
 _DEAD_ROUNDS = 8  # settings -> drive -> warmth at dead heaters -> settings; crosstalk makes each far smaller
 _DEAD_WITHIN = 1e-9  # rad
+CODES_WORTH = 0.01  # share of E^2 that codes must add before they are rounded against the matrix
 CODES_SHOW = 1e-6  # matrix error that codes add beyond which they are the reason
 
 
@@ -92,7 +94,7 @@ def _settled(chip: Chip, target: Target, best_effort: bool) -> tuple[Solution, S
     return free, solution, placed
 
 
-def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, seed: int = 0) -> Plan:
+def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool = True, seed: int = 0) -> Plan:
     """Volts and codes for a target, and how near the chip will come.
 
     Parameters
@@ -100,6 +102,7 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, seed: int = 
     mesh : Mesh
     target : Target, unitary
     best_effort : hold actuators at their limits rather than raise
+    aware : round codes against the matrix; plain rounding else
 
     Returns
     -------
@@ -116,7 +119,12 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, seed: int = 
     """
     chip = Chip(mesh)
     free, solution, placed = _settled(chip, target, best_effort)
-    ahead = predict_codes(chip, placed.codes, target)
+    codes = placed.codes
+    ahead = predict_codes(chip, codes, target)
+    # where the codes add little to what the settings leave, rounding better is not worth its time
+    if aware and ahead.matrix_error**2 > (1.0 + CODES_WORTH) * solution.matrix_error**2:
+        codes = rounded(chip, placed, solution.settings, target.free)
+        ahead = predict_codes(chip, codes, target)
     reason = solution.reason
     if placed.held or _beyond_limits(chip, solution):
         reason = "limits"
@@ -129,7 +137,7 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, seed: int = 
         described(target),
         frozen(solution.settings),
         frozen(ahead.volts),
-        frozen(placed.codes),
+        frozen(codes),
         frozen(ahead.actual),
         frozen(ahead.power_mw),
         frozen(headroom_v(chip, ahead.volts)),

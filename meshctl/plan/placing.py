@@ -101,7 +101,6 @@ class _Placement:
         chip = self.chip
         change = np.zeros(len(chip.actuators))
         change[self.actuator] = radians(own_turns)
-        heat = turns(chip.total_changes(change)[chip.actuators.setting])
         at = np.zeros(len(chip.actuators))
         for group in chip.groups:
             if group.law.power_law and chip.coupled:
@@ -113,8 +112,7 @@ class _Placement:
         if chip.coupled:
             from meshctl.plan.circuit import terminal_volts
 
-            heat = turns(chip.total_changes(change)[chip.actuators.setting])
-            at[chip.resistive] = terminal_volts(chip, change, heat)
+            at[chip.resistive] = terminal_volts(chip, change)
         volts = np.clip(0.0, *chip.terminal_range_v)
         live = ~chip.actuators.dead
         volts[chip.actuators.channel[live]] = at[live]

@@ -81,9 +81,13 @@ def plan_text(plan: Plan) -> str:
 def _array(entry: dict[str, Any], name: str, where: str) -> np.ndarray:
     kind = np.int64 if name == "codes" else np.float64
     try:
-        array = np.array(entry[name], kind)
+        given = np.array(entry[name])
+        array = given.astype(kind)
     except (TypeError, ValueError, OverflowError):
         raise UnsoundFile(f"'{name}' is no list of numbers", where=where, remedy="solve again") from None
+    if given.size and given.dtype.kind not in ("iu" if name == "codes" else "iuf"):
+        numbers = "whole numbers" if name == "codes" else "numbers"
+        raise UnsoundFile(f"'{name}' holds other things than {numbers}", where=where, remedy="solve again")
     if array.ndim != 1:
         raise WrongSize(f"'{name}' has {array.ndim} dimensions, must have 1", where=where, remedy="solve again")
     if not np.isfinite(array).all():
@@ -120,6 +124,8 @@ def read_plan(path: str | Path) -> Plan:
         value = entry[name]
         if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
             raise NotFinite(f"'{name}' is {value!r}, must be a number", where=where, remedy="solve again")
+    if not isinstance(entry["target"], dict):
+        raise UnsoundFile(f"'target' is {entry['target']!r}, must be an object", where=where, remedy="solve again")
     for name in ARRAYS:
         entry[name] = _array(entry, name, where)
     return Plan(**entry)
