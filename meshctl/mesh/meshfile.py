@@ -5,13 +5,14 @@ Public: load, lattice, write, MESH_TOML.
 
 from __future__ import annotations
 
+import json
 import math
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from meshctl.errors import MissingFile, UnknownKey, UnsoundFile, WrongUsage
+from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, WrongUsage
 from meshctl.laws import LAWS
 from meshctl.mesh.actuation import CHANNEL_NUMBERS, PARAM_NAMES
 from meshctl.mesh.building import Tables, build_mesh
@@ -127,14 +128,14 @@ def _gap_actuator() -> str:
 
 def lattice_text(shape: str, name: str, *, modes: int | None, cell: str, spare: int, balanced: bool = False) -> str:
     """mesh.toml of a new lattice, with its defaults written out."""
-    size = "" if shape == "switch" else f"modes = {modes}\n"
+    size = "" if modes is None else f"modes = {modes}\n"
     extra = f"spare = {spare}\n" if spare else ""
     extra += "balanced = true\n" if balanced else ""
     phases = _HEATER if cell == "mzi" or shape != "switch" else ""
     gaps = _gap_actuator() if cell == "gap" else ""
     return f"""\
 format = 1
-name = "{name}"
+name = {json.dumps(name, ensure_ascii=False)}
 note = "as drawn; all numbers are placeholders until the chip is measured"
 wavelength_nm = 1550.0
 
@@ -191,21 +192,27 @@ def lattice(
 
     Raises
     ------
-    UnknownKey, OutOfRange, WrongUsage
+    WrongUsage
 
     Example
     -------
     >>> lattice("rectangular", modes=8).net.n_cells
     28
     """
-    if shape not in LATTICES:
-        raise unknown_name("shape", shape, LATTICES, "")
+    for word, value, known in (("shape", shape, tuple(LATTICES)), ("cell", cell, ("mzi", "gap"))):
+        if value not in known:
+            finding = unknown_name(word, value, known, "")
+            raise WrongUsage(finding.what, remedy=finding.remedy)
     if shape != "switch" and modes is None:
         raise WrongUsage(f"a {shape} lattice needs a number of modes", remedy="give modes, such as 8")
-    if cell not in ("mzi", "gap"):
-        raise unknown_name("cell", cell, ("mzi", "gap"), "")
+    for key, size in (("modes", modes), ("spare", spare)):
+        if size is not None and not QUANTITIES[key].allows(size):
+            raise WrongUsage(f"{key} is {size}", remedy=f"allowed is {QUANTITIES[key].allowed}")
     text = lattice_text(shape, name or f"{shape}{modes or ''}", modes=modes, cell=cell, spare=spare, balanced=balanced)
-    mesh = build_mesh(parse_description(text, "lattice"), Tables(), text)
+    try:
+        mesh = build_mesh(parse_description(text, "lattice"), Tables(), text)
+    except OutOfRange as finding:  # a size that this shape does not take
+        raise WrongUsage(finding.what, remedy=finding.remedy) from None
     return mesh if built is None else with_die(mesh, built)
 
 
@@ -316,7 +323,8 @@ def _actuators_text(mesh: Mesh, plain: Mesh | None) -> str:
     names, channels, settings = mesh.actuator_names, mesh.channel_names, net.setting_names
     heads = [h for h in PARAM_NAMES if h in actuators.params]
     same_rows = plain is not None and np.array_equal(plain.actuators.setting, actuators.setting)
-    lines = []
+    lines: list[tuple[Any, ...]] = []
+    needed = 0  # rows come first when read back: all up to the last that differs keep their order
     for a, name in enumerate(names):
         values = [float(actuators.params[h][a]) for h in heads]
         channel = channels[actuators.channel[a]]
@@ -326,8 +334,9 @@ def _actuators_text(mesh: Mesh, plain: Mesh | None) -> str:
             channel if channel != name else None,
             LAWS[actuators.law[a]].name,
             1 if actuators.dead[a] else None,
-            *values,
+            *(None if math.isinf(v) else v for v in values),
         )
+        lines.append(line)
         if same_rows:
             assert plain is not None
             was = plain.actuators
@@ -341,25 +350,28 @@ def _actuators_text(mesh: Mesh, plain: Mesh | None) -> str:
             )
             if unchanged:
                 continue
-        lines.append(line)
-    return table_text((*ACTUATOR_WORDS, *heads), lines) if lines else ""
+        needed = len(lines)
+    return table_text((*ACTUATOR_WORDS, *heads), lines[:needed]) if needed else ""
 
 
 def _channels_text(mesh: Mesh, plain: Mesh | None) -> str:
     channels, names = mesh.channels, mesh.channel_names
     heads = CHANNEL_HEAD[1:-1]
-    lines = []
+    lines: list[tuple[Any, ...]] = []
     default = parse_description(mesh.text).channel
+    # channels without a row are read back as the actuators come to them
+    _, met = np.unique(mesh.actuators.channel, return_index=True)
+    needed = int(np.flatnonzero(np.diff(met) < 0).max(initial=-1)) + 1
     for k, name in enumerate(names):
         values = [float(getattr(channels, h)[k]) for h in heads]
         usual = [math.inf if getattr(default, h) is None else float(getattr(default, h)) for h in heads]
         ground = channels.ground_names[channels.ground[k]] if channels.ground[k] >= 0 else None
-        if values == usual and ground == default.ground and plain is not None:
-            continue
         shown: list[Any] = [None if math.isinf(v) else v for v in values]
         shown[0] = int(values[0])
         lines.append((name, *shown, ground))
-    return table_text(CHANNEL_HEAD, lines) if lines else ""
+        if values != usual or ground != default.ground or plain is None:
+            needed = len(lines)
+    return table_text(CHANNEL_HEAD, lines[:needed]) if needed else ""
 
 
 def _measured_text(mesh: Mesh) -> str:
