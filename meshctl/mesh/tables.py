@@ -99,6 +99,20 @@ def read_table(
         text = path.read_text(encoding="utf-8-sig")
     except UnicodeDecodeError as problem:
         raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=name, remedy="save it as UTF-8") from None
+    try:
+        return _parsed(text, name, words, numbers, required, allowed)
+    except csv.Error as problem:
+        raise UnsoundFile(f"not readable as CSV: {problem}", where=name, remedy="mend the file") from None
+
+
+def _parsed(
+    text: str,
+    name: str,
+    words: Sequence[str],
+    numbers: Callable[[str], Quantity | None],
+    required: Sequence[str],
+    allowed: Sequence[str],
+) -> Table:
     reader = csv.reader(io.StringIO(text))
     head = [h.strip() for h in next(reader, [])]
     if not head:

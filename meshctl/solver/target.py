@@ -12,6 +12,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
+from zipfile import BadZipFile
 
 import numpy as np
 
@@ -125,7 +126,9 @@ def _from_csv(path: Path) -> np.ndarray:
                     )
                 rows.append(values)
         except UnicodeDecodeError as problem:
-            raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=str(path)) from None
+            raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=str(path), remedy="save it as UTF-8") from None
+        except csv.Error as problem:
+            raise UnsoundFile(f"not readable as CSV: {problem}", where=str(path), remedy="mend the file") from None
     if not rows:
         raise WrongSize("the file is empty", where=str(path), remedy="give one row per output")
     return np.array(rows, complex)
@@ -134,7 +137,7 @@ def _from_csv(path: Path) -> np.ndarray:
 def _from_npy(path: Path) -> np.ndarray:
     try:
         loaded = np.load(path, allow_pickle=False)
-    except (ValueError, EOFError, OSError) as problem:
+    except (ValueError, EOFError, OSError, MemoryError, BadZipFile) as problem:
         raise UnsoundFile(
             f"not readable as a numpy array: {problem}", where=str(path), remedy="save it with numpy.save"
         ) from None
@@ -239,7 +242,21 @@ def described(target: Target) -> dict[str, Any]:
 
 
 def from_description(entry: dict[str, Any]) -> Target:
-    """The target that `described` wrote."""
+    """The target that `described` wrote.
+
+    Raises
+    ------
+    UnsoundFile
+        Where `described` cannot have written it.
+    """
+    try:
+        return _from_description(entry)
+    except (KeyError, IndexError, TypeError, ValueError, AttributeError) as problem:
+        what = f"the target of the plan is not readable: {type(problem).__name__} {problem}"
+        raise UnsoundFile(what, remedy="solve again") from None
+
+
+def _from_description(entry: dict[str, Any]) -> Target:
     shape = (int(entry["size"][0]), int(entry["size"][1]))
     if "real" in entry:
         matrix = np.array(entry["real"]) + 1j * np.array(entry["imag"])
