@@ -97,8 +97,7 @@ class Session:
 
     def write_spectrum(self, prediction: Prediction, path: str | Path) -> None:
         """Write a prediction as CSV: one row per wavelength, input and output."""
-        if Path(path).suffix != ".csv":
-            raise WrongUsage(f"'{path}' is no .csv file", remedy="name a file that ends in .csv")
+        require_suffix(path, ".csv")
         net = self.mesh.net
         out = io.StringIO()
         writer = csv.writer(out, lineterminator="\n")
@@ -115,8 +114,7 @@ class Session:
 
     def write_matrix(self, prediction: Prediction, path: str | Path) -> None:
         """Write the field matrix as a numpy file, [out, in] or [wavelength, out, in]."""
-        if Path(path).suffix != ".npy":
-            raise WrongUsage(f"'{path}' is no .npy file", remedy="name a file that ends in .npy")
+        require_suffix(path, ".npy")
         buffer = io.BytesIO()
         np.save(buffer, prediction.matrix)
         write_whole(Path(path), buffer.getvalue())
@@ -151,6 +149,12 @@ def demo_mesh_folder(name: str = DEMO_MESH) -> Path:
     raise MissingFile("the shipped meshes are not there", where=str(shared), remedy="install meshctl again")
 
 
+def require_suffix(path: str | Path, suffix: str) -> None:
+    """Refuse a file name that does not end as its content asks."""
+    if Path(path).suffix != suffix:
+        raise WrongUsage(f"'{path}' is no {suffix} file", remedy=f"name a file that ends in {suffix}")
+
+
 def wavelength_range(words: str) -> np.ndarray:
     """FROM:TO:COUNT in nm as wavelengths (W,).
 
@@ -175,4 +179,4 @@ def wavelength_range(words: str) -> np.ndarray:
     return np.linspace(first, last, count)
 
 
-__all__ = ["Session", "demo_mesh_folder", "new_mesh", "wavelength_range"]
+__all__ = ["Session", "demo_mesh_folder", "new_mesh", "require_suffix", "wavelength_range"]

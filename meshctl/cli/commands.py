@@ -14,7 +14,7 @@ from typing import Any
 
 from meshctl.cli import printing
 from meshctl.errors import DONE
-from meshctl.session import Session, demo_mesh_folder, new_mesh, wavelength_range
+from meshctl.session import Session, demo_mesh_folder, new_mesh, require_suffix, wavelength_range
 
 
 def _json(entry: dict[str, Any]) -> int:
@@ -94,6 +94,9 @@ def solve(words: Namespace) -> int:
 def predict(words: Namespace) -> int:
     session = Session(words.mesh)
     wavelengths = wavelength_range(words.wavelengths) if words.wavelengths else None
+    for path, suffix in ((words.matrix, ".npy"), (words.out, ".csv")):
+        if path:
+            require_suffix(path, suffix)
     plan = session.open_plan(words.plan, stale_ok=words.stale_ok)
     prediction = session.predict(wavelengths)
     if words.matrix:
