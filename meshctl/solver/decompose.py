@@ -46,7 +46,7 @@ _WORK_AND_STEPS = (
 
 @kernel(UniTuple(float64, 4)(float64, float64, float64, float64))
 def _nulling(ur, ui, vr, vi):  # type: ignore[no-untyped-def]
-    """(|u|, |v|) / length, and exp(i (arg u - arg v)); 1 where an argument is not there."""
+    """(|u|, |v|) / length, 0 and 0 where both are nothing, and exp(i (arg u - arg v)), 1 without arguments."""
     u, v = math.sqrt(ur * ur + ui * ui), math.sqrt(vr * vr + vi * vi)
     both = math.sqrt(u * u + v * v)
     er, ei = 1.0, 0.0
@@ -56,7 +56,7 @@ def _nulling(ur, ui, vr, vi):  # type: ignore[no-untyped-def]
         er, ei = er / size, ei / size
     if both > 0.0:
         return u / both, v / both, er, ei
-    return 1.0, 0.0, er, ei
+    return 0.0, 0.0, er, ei
 
 
 @kernel(void(filled(float64, 2), filled(float64, 2), int64, int64, float64, float64, complex128))
@@ -98,6 +98,8 @@ def _rectangular(real, imag, lane, sine, cosine, turn, output):  # type: ignore[
             if i % 2 == 0:
                 r, m = n - 1 - j, i - j
                 c, s, er, ei = _nulling(real[r, m], imag[r, m], real[r, m + 1], imag[r, m + 1])
+                if c == 0.0:
+                    s = 1.0  # nothing to null: bar
                 _mix_columns(real, imag, r, m, s, c, complex(-er, ei))
                 k = right_count
                 right_count += 1
@@ -106,6 +108,8 @@ def _rectangular(real, imag, lane, sine, cosine, turn, output):  # type: ignore[
                 r = n - 1 - i + j
                 m = r - 1
                 s, c, er, ei = _nulling(real[m, j], imag[m, j], real[r, j], imag[r, j])
+                if c == 0.0:
+                    s = 1.0
                 _mix_rows(real, imag, j, m, s, c, complex(er, -ei))
                 k = count - 1 - left_count
                 left_count += 1
@@ -131,6 +135,8 @@ def _triangular(real, imag, lane, sine, cosine, turn, output):  # type: ignore[n
     for r in range(n - 1, 0, -1):
         for m in range(r):
             c, s, er, ei = _nulling(real[r, m], imag[r, m], real[r, m + 1], imag[r, m + 1])
+            if c == 0.0:
+                s = 1.0
             _mix_columns(real, imag, r, m, s, c, complex(-er, ei))
             lane[k], sine[k], cosine[k], turn[k] = m, s, c, complex(-er, -ei)
             k += 1
