@@ -5,6 +5,7 @@ import pytest
 from scipy import sparse
 from scipy.optimize import root
 
+from meshctl.drive.balance import HeatBalance
 from meshctl.drive.ground import terminal_volts, working_point
 from meshctl.errors import GroundDiverges, NotFinite, PowerOutOfRange, ResistanceNotPositive, ThermalRunaway
 
@@ -157,6 +158,22 @@ def test_heaters_run_away_in_company(share, runs):
             working_point(*given, **more)
     else:
         assert working_point(*given, **more).own_turns[0] == pytest.approx(share / 1.5 / 0.3 / (1 - share), rel=1e-10)
+
+
+@pytest.mark.parametrize(("heat", "runs"), [(0.32, False), (0.36, True)])
+def test_company_past_its_turning_point_is_unstable(heat, runs):
+    # with R falling by 1 a turn and half the other's heat, V^2 ~ P (1 - 1.5 P) turns back at P = 1 / 3
+    across = np.sqrt(np.full(2, 20.0 * heat * (1 - 1.5 * heat)))
+    system = HeatBalance(
+        across, np.zeros(2, bool), np.full(2, 500.0), -np.ones(2), np.full(2, 0.04), np.empty(0),
+        np.array([-1, -1]), np.array([[0.0, 0.5], [0.5, 0.0]]),
+    )  # fmt: skip
+    own = np.full(2, heat)
+    if runs:
+        with pytest.raises(ThermalRunaway, match="actuator 0', 'actuator 1"):
+            system.require_stable(own, 1.5 * own)
+    else:
+        system.require_stable(own, 1.5 * own)
 
 
 def test_heat_near_the_turning_point_is_refused():

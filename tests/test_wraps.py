@@ -7,8 +7,9 @@ import time
 
 import numpy as np
 import pytest
-from scipy.optimize import Bounds, LinearConstraint, milp
+from scipy.optimize import Bounds, LinearConstraint, OptimizeResult, milp
 
+from meshctl.drive import integer
 from meshctl.drive.crosstalk import Crosstalk
 from meshctl.drive.factor import factor
 from meshctl.drive.integer import Programme, prove
@@ -115,6 +116,23 @@ def test_outdone_pair_is_still_solved():
     assert found.verdict == "found"
 
 
+def test_far_too_little_is_raised_at_once():
+    K = np.zeros((4, 4))
+    K[0, 1:] = 0.5
+    found = solved(Crosstalk(K), [0.0, 0.9, 0.9, 0.9], 1.2)
+    # by hand: the others give 1.35 turns, so that two of its own leave 0.65
+    np.testing.assert_allclose(found.own_turns, [0.65, 0.9, 0.9, 0.9], rtol=1e-13)
+    assert (found.verdict, found.rounds) == ("least", 2)
+
+
+def test_pair_step_saves_where_single_cannot():
+    crosstalk, wanted = Crosstalk(np.array([[0.0, -0.1], [-0.1, 0.0]])), np.array([-0.05, 0.3])
+    found = least_power_wraps(wanted, [True, True], crosstalk, [0, 0], [1.4, 1.4], [20.0, 1.0], proof="never")
+    # by hand: of the turns within limits, (1, 0) costs 20.2 mW and (0, 1), a pair step away, 2.9 mW
+    np.testing.assert_array_equal(found.wraps, [0, 1])
+    np.testing.assert_allclose(found.own_turns, np.array([-0.05 + 0.13, 1.3 - 0.005]) / 0.99, rtol=1e-13)
+
+
 def test_small_systems_agree_with_enumeration():
     rng = np.random.default_rng(4)
     seen = set()
@@ -184,6 +202,22 @@ def test_unreachable_names_its_actuators(crosstalk):
     assert found.verdict == "unreachable"
     with pytest.raises(Unreachable, match="actuator 1"):
         found.require()
+
+
+def test_lift_alone_proves_some_unreachable():
+    # both totals lie in the image [0, 0.75]; heater 1 would need -0.4, and a turn more is beyond 0.75
+    found = solved(Crosstalk(np.array([[0.0, 0.5], [0.5, 0.0]])), [0.7, 0.05], 0.5, proof="never")
+    assert found.verdict == "unreachable"
+    assert optimum(Crosstalk(np.array([[0.0, 0.5], [0.5, 0.0]])), np.array([0.7, 0.05]), 0.5) is None
+
+
+def test_infeasible_stands_only_when_confirmed(monkeypatch):
+    statuses = iter([2, 0])  # infeasible with presolving, solved without
+    monkeypatch.setattr(
+        integer, "_milp", lambda *_, **__: OptimizeResult(status=next(statuses), x=None, mip_dual_bound=None)
+    )
+    one = np.ones(1)
+    assert integer.solve(Programme(np.eye(1), one, one, one, one, one), 1.0).status == "undecided"
 
 
 def test_lost_search_is_no_proof():
