@@ -87,11 +87,11 @@ def test_unsound_crosstalk_is_refused_by_name(K, message):
 
 @pytest.mark.parametrize("short", [0.0, 2e-15, 1e-9])
 def test_small_pivot_alone_is_not_singular(short):
-    # the leading 2x2 part is singular or nearly so, the whole is not
-    K = np.array([[0.0, 1.0, 0.5], [1.0 - short, 0.0, 0.0], [0.0, 0.5, 0.0]])
-    x = np.array([1.0, 2.0, 3.0])
+    # rows 1 and 3 are singular or nearly so by themselves, the whole is not
+    K = np.array([[0.0, 0.5, 0.0, 0.0], [0.5, 0.0, -1.0, short - 1.0], [0.5, 1.0, 0.0, 0.0], [0.0, -1.0, 0.0, 0.0]])
+    x = np.array([1.0, 2.0, 3.0, 4.0])
     found = Crosstalk(K).solve(x)
-    np.testing.assert_allclose(found, np.linalg.solve(np.eye(3) + K, x), rtol=0, atol=1e-13)
+    np.testing.assert_allclose(found, np.linalg.solve(np.eye(4) + K, x), rtol=0, atol=1e-12)
 
 
 def test_outdone_heaters_are_named():
