@@ -8,13 +8,13 @@ Public: LATTICES, Layout, CellForm, CELL_FORMS, assemble, LatticeNames.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from meshctl.errors import OutOfRange
 from meshctl.mesh.graph import FREE, Names
-from meshctl.optics.elements import COUPLER, GUIDE, LOSS, PHASE
+from meshctl.optics.elements import COUPLER, CROSSING, GUIDE, LOSS, PHASE
 
 
 @dataclass(frozen=True)
@@ -70,6 +70,9 @@ class Layout:
     outputs: tuple[str, ...]
     cell_names: tuple[str, ...] | None = None  # None: c{column}_{row}
     forms: str = "cell"  # "cell": CELL_FORMS, "switch": SWITCH_FORMS
+    crossing_gap: np.ndarray = field(default_factory=lambda: np.empty(0, np.int64))  # behind which column
+    crossing_step: np.ndarray = field(default_factory=lambda: np.empty(0, np.int64))  # order within the gap
+    crossing_lane: np.ndarray = field(default_factory=lambda: np.empty(0, np.int64))  # upper of the two that cross
 
 
 def _in_light_order(column: np.ndarray, upper: np.ndarray) -> np.ndarray:
@@ -151,6 +154,62 @@ def switch(modes: int = 4, spare: int = 0) -> Layout:
     )
 
 
+def _crossings(order: np.ndarray) -> list[tuple[int, int]]:
+    """(step, upper lane) of waveguide crossings that bring the light of lane m to lane order[m].
+
+    Alternating columns of neighbours that cross; as many crossings as pairs out of order (odd-even
+    transposition, Knuth 1998, section 5.3.4).
+    """
+    goes, steps = np.array(order), []
+    step = 0
+    while (np.diff(goes) < 0).any():
+        upper = np.arange(step % 2, len(goes) - 1, 2)
+        upper = upper[goes[upper] > goes[upper + 1]]
+        goes[upper], goes[upper + 1] = goes[upper + 1], goes[upper]
+        steps += [(step, int(m)) for m in upper]
+        step += 1
+    return steps
+
+
+def benes(modes: int, spare: int = 0) -> Layout:
+    """2 log2 N - 1 columns of N / 2 cells that give every permutation (Benes 1964).
+
+    Behind a column of the first half, in blocks of N, N/2, .. lanes, upper leaving lanes go to the upper half of
+    the block and lower ones to the lower half; the second half is its mirror image. Lanes change places by
+    waveguide crossings.
+    """
+    if modes & (modes - 1):
+        raise OutOfRange(
+            f"a benes mesh of {modes} modes is not binary",
+            remedy=f"take a power of two, such as {1 << modes.bit_length()}",
+        )
+    _no_spare("benes", spare)
+    levels = modes.bit_length() - 1
+    columns = 2 * levels - 1
+    lanes = np.arange(modes)
+    gaps: list[tuple[int, int, int]] = []
+    for level in range(levels - 1):
+        block = modes >> level
+        spread = lanes // block * block + lanes % 2 * (block // 2) + lanes % block // 2
+        gaps += [(level, step, m) for step, m in _crossings(spread)]
+        gaps += [(columns - 2 - level, step, m) for step, m in _crossings(np.argsort(spread))]
+    gap, step, lane = np.array(sorted(gaps), np.int64).reshape(-1, 3).T
+    column = np.repeat(np.arange(columns), modes // 2)
+    upper = np.tile(np.arange(0, modes, 2), columns)
+    return Layout(
+        modes,
+        columns,
+        column,
+        upper,
+        upper + 1,
+        _numbered("in", modes),
+        _numbered("out", modes),
+        crossing_gap=gap,
+        crossing_step=step,
+        crossing_lane=lane,
+    )
+
+
 def _no_spare(shape: str, spare: int) -> None:
     if spare:
         raise OutOfRange(f"a {shape} takes no spare columns, not {spare}", remedy="leave --spare out for this shape")
@@ -161,6 +220,7 @@ LATTICES: dict[str, Callable[..., Layout]] = {
     "triangular": triangular,
     "tree": tree,
     "switch": switch,
+    "benes": benes,
 }
 
 
@@ -226,7 +286,7 @@ def assemble(
     output_phases: bool = True,
     guides: bool = True,
 ) -> Assembly:
-    """Cells, dummies and output parts of a loop-free lattice as arrays.
+    """Cells, dummies, crossings and output parts of a loop-free lattice as arrays.
 
     Parameters
     ----------
@@ -248,20 +308,29 @@ def assemble(
         ends.append(("guide", GUIDE))
     if output_phases:
         ends.append(("phase", PHASE))
-    # parts: cells, dummies, then the parts at the end of each lane
-    column = np.r_[layout.column, skip_column, np.repeat(layout.columns + np.arange(len(ends)), n_lanes)]
-    first_lane = np.r_[layout.upper, skip_lane, np.tile(lanes, len(ends))].astype(np.int64)
-    loose = tuple(f"d{c + 1}_{m + 1}" for c, m in zip(skip_column, skip_lane, strict=True)) + tuple(
-        f"{name or f'dark{m + 1}'}.{role}" for role, _ in ends for m, name in enumerate(layout.outputs)
+    # parts: cells, dummies, crossings between columns, then the parts at the end of each lane
+    n_skips, n_crossings = len(skip_lane), len(layout.crossing_gap)
+    between = layout.crossing_gap + (layout.crossing_step + 1.0) / (layout.crossing_step.max(initial=0) + 2.0)
+    column = np.r_[layout.column, skip_column, between, np.repeat(layout.columns + np.arange(len(ends)), n_lanes)]
+    first_lane = np.r_[layout.upper, skip_lane, layout.crossing_lane, np.tile(lanes, len(ends))].astype(np.int64)
+    loose = (
+        tuple(f"d{c + 1}_{m + 1}" for c, m in zip(skip_column, skip_lane, strict=True))
+        + tuple(
+            f"x{c + 1}_{k + 1}_{m + 1}"
+            for c, k, m in zip(layout.crossing_gap, layout.crossing_step, layout.crossing_lane, strict=True)
+        )
+        + tuple(f"{name or f'dark{m + 1}'}.{role}" for role, _ in ends for m, name in enumerate(layout.outputs))
     )
-    loose_kind = np.r_[np.full(len(skip_lane), LOSS), np.repeat([kind for _, kind in ends], n_lanes)].astype(np.uint8)
+    loose_kind = np.r_[
+        np.full(n_skips, LOSS), np.full(n_crossings, CROSSING), np.repeat([kind for _, kind in ends], n_lanes)
+    ].astype(np.uint8)
     n_parts = n_cells + len(loose)
     is_cell = np.arange(n_parts) < n_cells
     order = _in_light_order(column, first_lane)
     n_roles, n_ports = len(form.roles), int(form.port_counts.sum())
 
     size = np.where(is_cell, n_roles, 1)[order]
-    ports = np.where(is_cell, n_ports, 2)[order]
+    ports = np.r_[np.full(n_cells, n_ports), np.where(loose_kind == CROSSING, 4, 2)][order]
     element_at = np.empty(n_parts, np.int64)
     port_at = np.empty(n_parts, np.int64)
     element_at[order] = np.cumsum(size) - size
@@ -280,7 +349,7 @@ def assemble(
     nominal = np.where(kind == COUPLER, np.pi / 4, np.where(kind == LOSS, balance_db, 0.0))
     nominal[settable] = 0.0
     length = np.where(kind == GUIDE, layout.columns * pitch_um[0], 0.0)
-    count = np.where(kind == COUPLER, 4, 2)
+    count = np.where((kind == COUPLER) | (kind == CROSSING), 4, 2)
     port_start = np.r_[0, np.cumsum(count)].astype(np.int32)
 
     mate = np.full(n_all_ports, FREE, np.int32)
@@ -289,10 +358,16 @@ def assemble(
         mate[port_at[:n_cells] + b] = port_at[:n_cells] + a
     # each lane meets its parts in column order: link each leaving port to the next entering one
     loose_at = port_at[n_cells:]
-    lane = np.r_[layout.upper, layout.lower, first_lane[n_cells:]]
-    when = np.r_[layout.column, layout.column, column[n_cells:]]
-    enter = np.r_[port_at[:n_cells] + form.enter[0], port_at[:n_cells] + form.enter[1], loose_at]
-    leave = np.r_[port_at[:n_cells] + form.leave[0], port_at[:n_cells] + form.leave[1], loose_at + 1]
+    crossing_at = loose_at[n_skips : n_skips + n_crossings]
+    lane = np.r_[layout.upper, layout.lower, first_lane[n_cells:], layout.crossing_lane + 1]
+    when = np.r_[layout.column, layout.column, column[n_cells:], between]
+    enter = np.r_[port_at[:n_cells] + form.enter[0], port_at[:n_cells] + form.enter[1], loose_at, crossing_at + 1]
+    leave = np.r_[
+        port_at[:n_cells] + form.leave[0],
+        port_at[:n_cells] + form.leave[1],
+        loose_at + np.where(loose_kind == CROSSING, 2, 1),
+        crossing_at + 3,
+    ]
     along = np.lexsort((when, lane))
     same = lane[along][1:] == lane[along][:-1]
     out, into = leave[along][:-1][same], enter[along][1:][same]
