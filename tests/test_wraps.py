@@ -211,6 +211,12 @@ def test_lift_alone_proves_some_unreachable():
     assert optimum(Crosstalk(np.array([[0.0, 0.5], [0.5, 0.0]])), np.array([0.7, 0.05]), 0.5) is None
 
 
+def test_process_that_fails_proves_nothing(monkeypatch):
+    monkeypatch.setattr(sys, "executable", "no-such-python")
+    one = np.ones(1)
+    assert prove(Programme(np.eye(1), one, one, one, one, one), 1.0).status == "undecided"
+
+
 def test_infeasible_stands_only_when_confirmed(monkeypatch):
     statuses = iter([2, 0])  # infeasible with presolving, solved without
     monkeypatch.setattr(

@@ -50,7 +50,7 @@ UNDECIDED = Proof("undecided", None, -np.inf)
 
 
 def prove(programme: Programme, seconds: float) -> Proof:
-    """Solve the programme, stopping after `seconds`; Ctrl-C ends the process too."""
+    """Solve the programme, stopping after `seconds`; a process that fails leaves it undecided."""
     given = io.BytesIO()
     np.savez(given, seconds=seconds, **vars(programme))
     path = os.pathsep.join(p for p in sys.path if p)
@@ -63,7 +63,7 @@ def prove(programme: Programme, seconds: float) -> Proof:
             env={**os.environ, "PYTHONPATH": path},
             check=True,
         )
-    except subprocess.TimeoutExpired:
+    except (subprocess.SubprocessError, OSError):  # too slow, ended from outside, or not to be started
         return UNDECIDED
     found = np.load(io.BytesIO(ended.stdout))
     n = found["n"] if found["n"].size == len(programme.cost) else None
