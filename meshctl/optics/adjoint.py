@@ -46,7 +46,7 @@ def keeping(circuit: Circuit, amplitude: np.ndarray) -> Keeping:
     if np.all(shrink == 1.0):
         return Keeping(np.empty(0, np.int64), at)
     left = np.ones(circuit.n_lanes)
-    kept = []
+    kept: list[int] = []
     lane_b = np.where(circuit.lane_b >= 0, circuit.lane_b, circuit.lane_a)
     for b, (m, n, s) in enumerate(zip(circuit.lane_a.tolist(), lane_b.tolist(), shrink.tolist(), strict=True)):
         now = min(left[m], left[n]) * s

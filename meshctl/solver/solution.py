@@ -5,6 +5,7 @@ Public: Solution, Shortfall, REASONS.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -17,6 +18,11 @@ REASONS = {
     "no_output_phases": "The target fixes output phases, and the mesh has nothing to set them with.",
     "limits": "Some actuators were held at their limits.",
     "codes": "The source has too few bits to come closer.",
+    "met": "What was asked is met to rounding.",
+    "converged": "No settings nearby come closer.",
+    "steps": "The refinement took all the steps it may; the best so far is given.",
+    "time": "The time allowed ran out; the best so far is given.",
+    "stopped": "It was stopped on request; the best so far is given.",
 }
 
 
@@ -48,3 +54,4 @@ class Solution:
     shortfalls: tuple[Shortfall, ...] = ()
     free_settings: np.ndarray = field(default_factory=lambda: np.empty(0, np.int32))
     counts: dict[str, int] = field(default_factory=dict)
+    objective: float = math.nan  # value reached by a refinement, 0 is met
