@@ -14,9 +14,10 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from meshctl.errors import WrongUsage
+from meshctl.errors import NoClosedForm, WrongUsage
 from meshctl.solver.conflict import Demand, Verdict, decide
 from meshctl.solver.lengths import Goal, goal_of
+from meshctl.solver.permute import permuter
 from meshctl.solver.search import FAR, Search, Way
 from meshctl.solver.split import Tree, grow, shares_of
 from meshctl.solver.unused import closed_loops
@@ -371,10 +372,15 @@ def _find(
             return _answer(graph, wishes, "impossible", goal, (wish,))
         tasks.append(Task(wish, source, node, sinks, goal))
     pay = _payment(rank[[wishes.index(t.wish) for t in tasks]])
+    closed = _closed_form(graph, tasks, seed) if len(tasks) == len(graph.net.inputs) else None
+    if closed is not None:
+        return _settled(graph, wishes, tasks, closed, "found in closed form", {"cells": len(graph.switches)})
     negotiation = _Negotiation(search, tasks, pay, seed, min(stop, time.monotonic() + _share_of(stop)))
     taken = negotiation.run() if tasks else []
     words, status = "found by negotiation", "found"
     conflict: tuple[Wish, ...] = ()
+    if taken is None:
+        taken, words = _closed_form(graph, tasks, seed), "found in closed form, other lanes as they came"
     if taken is None:
         taken, status, words, conflict = _decided(graph, search, tasks, seed, stop)
     counts = {"searches": search.searches, "rounds": negotiation.rounds, "cells": len(graph.switches)}
@@ -403,6 +409,27 @@ def _refused_at_once(wishes: Sequence[Wish]) -> tuple[str, str, tuple[Wish, ...]
                 return "impossible", words, (at[sink], wish)
             at[sink] = wish
     return None
+
+
+def _closed_form(graph: RouteGraph, tasks: Sequence[Task], seed: int) -> list[Taken] | None:
+    """Routes as part of a permutation of all lanes, where the mesh has a closed form for those."""
+    if any(len(t.sinks) > 1 or t.goal is not None for t in tasks):
+        return None
+    net = graph.net
+    try:
+        form = permuter(graph)
+        order = np.full(len(net.inputs), -1)
+        for task in tasks:
+            order[net.inputs.index(task.wish.source)] = net.outputs.index(task.wish.sinks[0])
+        order[order < 0] = np.setdiff1d(np.arange(len(order)), order)
+        state = form.states(order, seed=seed)
+    except NoClosedForm:
+        return None
+    ways = [_until_out(graph, tuple(graph.trace(state, task.source))) for task in tasks]
+    for task, way in zip(tasks, ways, strict=True):
+        if not way or graph.leaves[way[-1]] != task.sinks[0]:
+            return None  # past a part that is to be avoided
+    return [Taken((way,), _needs(graph, (way,))) for way in ways]
 
 
 def _decided(
