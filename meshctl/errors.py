@@ -181,6 +181,10 @@ class CrosstalkNotDominant(DriveFinding):
     """A heater warms its neighbours' phases more than its own."""
 
 
+class SharedChannel(DriveFinding):
+    """Actuators on one channel that want different drives."""
+
+
 class Unreachable(DriveFinding):
     """Proved: no drive within the limits gives these phases."""
 

@@ -1,6 +1,6 @@
 """What moves the settings: actuators and channels joined from mesh.toml and its tables.
 
-Public: join_actuation, LawGroup, law_groups, CHANNEL_NUMBERS, PARAM_NAMES.
+Public: join_actuation, LawGroup, law_groups, CHANNEL_NUMBERS, DRIVES, PARAM_NAMES.
 """
 
 from __future__ import annotations
@@ -23,6 +23,8 @@ CHANNEL_NUMBERS = (
     "bits",
     "min_v",
     "max_v",
+    "min_ma",
+    "max_ma",
     "offset_v",
     "gain",
     "limit_v",
@@ -30,6 +32,7 @@ CHANNEL_NUMBERS = (
     "limit_mw",
     "ramp_v_per_s",
 )
+DRIVES = ("volts", "milliamps")
 PARAM_NAMES = tuple(dict.fromkeys(param.name for law in LAWS for param in law.params))
 
 
@@ -287,7 +290,7 @@ def _channels(
     for name in wanted:
         order.setdefault(name, len(order))
     n = len(order)
-    columns, ground = _plain_columns(description, n)
+    columns, ground, by_current = _plain_columns(description, n)
     for i in range(len(table) if table is not None else 0):
         assert table is not None
         for key in CHANNEL_NUMBERS:
@@ -299,18 +302,24 @@ def _channels(
             if name not in grounds:
                 raise unknown_name("ground", name, grounds, table.where(i))
             ground[i] = grounds.index(name)
-        if columns["max_v"][i] <= columns["min_v"][i]:
-            raise OutOfRange(
-                f"max_v {columns['max_v'][i]:g} V is not above min_v {columns['min_v'][i]:g} V",
-                where=table.where(i),
-                remedy="raise max_v",
-            )
+        drives = table.column("drives")[i]
+        if drives is not None:
+            if drives not in DRIVES:
+                raise unknown_name("drive", drives, DRIVES, table.where(i))
+            by_current[i] = drives == DRIVES[1]
+        for low, high, unit in (("min_v", "max_v", "V"), ("min_ma", "max_ma", "mA")):
+            if columns[high][i] <= columns[low][i]:
+                raise OutOfRange(
+                    f"{high} {columns[high][i]:g} {unit} is not above {low} {columns[low][i]:g} {unit}",
+                    where=table.where(i),
+                    remedy=f"raise {high}",
+                )
         if columns["bits"][i] != int(columns["bits"][i]):
             raise OutOfRange(f"bits is {columns['bits'][i]:g}", where=table.where(i), remedy="write a whole number")
     channel = np.array([order[name] for name in wanted], np.int32)
     first_user = {int(k): a for a, k in reversed(list(enumerate(channel.tolist())))}
     given = {k: name for name, k in order.items() if name != names[first_user[k]]}
-    channels = _made(description, columns, ground, given)
+    channels = _made(description, columns, ground, by_current, given)
     return channel, channels
 
 
@@ -340,24 +349,29 @@ def _crosstalk(net: Net, actuators: Actuators, names: list[str], table: Table | 
     return csr_matrix((list(entries.values()), (rows, columns)), shape=(net.n_settings, len(names)))
 
 
-def _plain_columns(description: Description, n: int) -> tuple[dict[str, np.ndarray], np.ndarray]:
-    """The columns of n channels that are all as mesh.toml says, and their grounds."""
+def _plain_columns(description: Description, n: int) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray]:
+    """The columns of n channels that are all as mesh.toml says, their grounds, and whether they drive current."""
     default = description.channel
     columns = {}
     for key in CHANNEL_NUMBERS:
         value = getattr(default, key)
         columns[key] = np.full(n, math.inf if value is None else float(value))
     row = list(description.ground).index(default.ground) if default.ground else FREE
-    return columns, np.full(n, row, np.int32)
+    return columns, np.full(n, row, np.int32), np.full(n, default.drives == DRIVES[1])
 
 
 def _made(
-    description: Description, columns: dict[str, np.ndarray], ground: np.ndarray, given_names: dict[int, str]
+    description: Description,
+    columns: dict[str, np.ndarray],
+    ground: np.ndarray,
+    by_current: np.ndarray,
+    given_names: dict[int, str],
 ) -> Channels:
     arrays = {key: frozen(column) for key, column in columns.items()}
     arrays["bits"] = frozen(columns["bits"].astype(np.int32))
     ohm = np.array([part.resistance_ohm for part in description.ground.values()], float)
     return Channels(
+        by_current=frozen(by_current),
         ground=frozen(ground),
         ground_ohm=frozen(ohm),
         given_names=given_names,

@@ -143,7 +143,7 @@ def _digest(net: Net, as_built: AsBuilt, actuators: Actuators, channels: Channel
         coo = actuators.crosstalk.tocoo()
         order = np.lexsort((coo.col, coo.row))
         add("crosstalk", np.column_stack([coo.row[order], coo.col[order], coo.data[order]]))
-    for label in (*CHANNEL_NUMBERS, "ground", "ground_ohm"):
+    for label in ("by_current", *CHANNEL_NUMBERS, "ground", "ground_ohm"):
         add(label, getattr(channels, label))
     digest.update(rest.encode())
     return digest.hexdigest()

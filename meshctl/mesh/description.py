@@ -100,9 +100,12 @@ class CrossingPart(_Strict):
 
 
 class ChannelPart(_Strict):
+    drives: Literal["volts", "milliamps"] = "volts"
     bits: _count("bits") = 16  # type: ignore[valid-type]
     min_v: _number("min_v") = 0.0  # type: ignore[valid-type]
     max_v: _number("max_v") = 10.0  # type: ignore[valid-type]
+    min_ma: _number("min_ma") = 0.0  # type: ignore[valid-type]
+    max_ma: _number("max_ma") = 20.0  # type: ignore[valid-type]
     offset_v: _number("offset_v") = 0.0  # type: ignore[valid-type]
     gain: _number("gain") = 1.0  # type: ignore[valid-type]
     limit_v: _number("limit_v") | None = None  # type: ignore[valid-type]
@@ -193,6 +196,13 @@ class Description(_Strict):
                 UnsoundFile(
                     "inputs, outputs, tunable and cells belong to explicit nets",
                     remedy="a lattice names its own; remove them",
+                )
+            )
+        if self.channel.max_ma <= self.channel.min_ma:
+            raise _Refused(
+                OutOfRange(
+                    f"channel.max_ma {self.channel.max_ma:g} mA is not above min_ma {self.channel.min_ma:g} mA",
+                    remedy="raise max_ma",
                 )
             )
         if self.channel.max_v <= self.channel.min_v:

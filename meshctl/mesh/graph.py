@@ -217,12 +217,15 @@ class Actuators:
 
 @dataclass(frozen=True, eq=False)
 class Channels:
-    """The outputs of the source."""
+    """The outputs of the source; one that drives current goes from min_ma to max_ma in place of volts."""
 
+    by_current: np.ndarray  # bool[K]
     bits: np.ndarray  # i32[K]
     min_v: np.ndarray  # f64[K]
     max_v: np.ndarray
-    offset_v: np.ndarray
+    min_ma: np.ndarray  # f64[K]
+    max_ma: np.ndarray
+    offset_v: np.ndarray  # mA where current is driven
     gain: np.ndarray  # volts at the terminal = gain * (min_v .. max_v) + offset_v
     limit_v: np.ndarray
     limit_ma: np.ndarray

@@ -14,7 +14,7 @@ import numpy as np
 
 from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, WrongUsage
 from meshctl.laws import LAWS
-from meshctl.mesh.actuation import CHANNEL_NUMBERS, PARAM_NAMES
+from meshctl.mesh.actuation import CHANNEL_NUMBERS, DRIVES, PARAM_NAMES
 from meshctl.mesh.building import Tables, build_mesh
 from meshctl.mesh.description import MESH_TOML, parse_description
 from meshctl.mesh.files import new_folder, write_whole
@@ -27,7 +27,7 @@ from meshctl.optics.elements import COUPLER
 
 ELEMENT_HEAD = ("element", "error_rad", "loss_db", "stuck_rad", "sigma_rad")
 ACTUATOR_WORDS = ("actuator", "element", "channel", "law", "dead")
-CHANNEL_HEAD = ("channel", *CHANNEL_NUMBERS, "ground")
+CHANNEL_HEAD = ("channel", *CHANNEL_NUMBERS, "ground", "drives")
 TABLE_HEAD = ("actuator", "volts_v", "value_rad", "sigma_rad")
 CROSSTALK_HEAD = ("from", "to", "coefficient")
 KNOWN = {MESH_TOML, "elements.csv", "actuators.csv", "channels.csv", "tables.csv", "crosstalk.csv", "states"}
@@ -43,7 +43,7 @@ def _param(name: str) -> Quantity | None:
 _READERS: dict[str, tuple[tuple[str, ...], Any, tuple[str, ...], tuple[str, ...]]] = {
     "elements": (("element",), QUANTITIES.get, ("element",), ELEMENT_HEAD),
     "actuators": (ACTUATOR_WORDS, _param, ("actuator",), (*ACTUATOR_WORDS, *PARAM_NAMES)),
-    "channels": (("channel", "ground"), QUANTITIES.get, ("channel",), CHANNEL_HEAD),
+    "channels": (("channel", "ground", "drives"), QUANTITIES.get, ("channel",), CHANNEL_HEAD),
     "tables": (("actuator",), QUANTITIES.get, ("actuator", "volts_v", "value_rad"), TABLE_HEAD),
     "crosstalk": (("from", "to"), QUANTITIES.get, CROSSTALK_HEAD, CROSSTALK_HEAD),
 }
@@ -356,7 +356,7 @@ def _actuators_text(mesh: Mesh, plain: Mesh | None) -> str:
 
 def _channels_text(mesh: Mesh, plain: Mesh | None) -> str:
     channels, names = mesh.channels, mesh.channel_names
-    heads = CHANNEL_HEAD[1:-1]
+    heads = CHANNEL_NUMBERS
     lines: list[tuple[Any, ...]] = []
     default = parse_description(mesh.text).channel
     # channels without a row are read back as the actuators come to them
@@ -368,8 +368,9 @@ def _channels_text(mesh: Mesh, plain: Mesh | None) -> str:
         ground = channels.ground_names[channels.ground[k]] if channels.ground[k] >= 0 else None
         shown: list[Any] = [None if math.isinf(v) else v for v in values]
         shown[0] = int(values[0])
-        lines.append((name, *shown, ground))
-        if values != usual or ground != default.ground or plain is None:
+        drives = DRIVES[int(channels.by_current[k])]
+        lines.append((name, *shown, ground, drives))
+        if values != usual or ground != default.ground or drives != default.drives or plain is None:
             needed = len(lines)
     return table_text(CHANNEL_HEAD, lines[:needed]) if needed else ""
 

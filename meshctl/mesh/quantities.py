@@ -56,6 +56,8 @@ QUANTITIES: dict[str, Quantity] = {
         _q("bits", "", 1, 32, 16, "resolution of the source"),
         _q("min_v", "V", -1e4, 1e4, 0.0, "voltage of code 0"),
         _q("max_v", "V", -1e4, 1e4, 10.0, "voltage of the highest code"),
+        _q("min_ma", "mA", 0.0, 1e5, 0.0, "current of code 0, for a channel that drives current"),
+        _q("max_ma", "mA", 0.0, 1e5, 20.0, "current of the highest code, for a channel that drives current"),
         _q("offset_v", "V", -1e3, 1e3, 0.0, "voltage at the terminal for 0 V asked"),
         _q("gain", "", 0.0, 1e3, 1.0, "volts at the terminal per volt asked", True),
         _q("limit_v", "V", 0.0, 1e4, INF, "highest voltage, of either sign", True),

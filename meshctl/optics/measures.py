@@ -56,9 +56,7 @@ def matrix_error(matrix: np.ndarray, target: np.ndarray, free: str = "nothing") 
     free : which port phases do not count: nothing, outputs, inputs, both
     """
     if matrix.ndim == 3:
-        return math.sqrt(
-            float(np.mean([matrix_error(m, t, free) ** 2 for m, t in zip(matrix, target, strict=True)]))
-        )
+        return math.sqrt(float(np.mean([matrix_error(m, t, free) ** 2 for m, t in zip(matrix, target, strict=True)])))
     turned = with_free_phases(matrix, target, free)
     light = float(np.vdot(turned, turned).real)
     if light == 0.0:

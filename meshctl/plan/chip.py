@@ -47,15 +47,33 @@ class Chip:
 
     @cached_property
     def source(self) -> Source:
-        """Codes to terminal volts and back."""
+        """Codes to levels and back: V, or mA on channels that drive current."""
         c = self.channels
-        return Source(c.bits, c.min_v, c.max_v, c.offset_v, c.gain)
+        low, high = np.where(c.by_current, c.min_ma, c.min_v), np.where(c.by_current, c.max_ma, c.max_v)
+        return Source(c.bits, low, high, c.offset_v, c.gain)
 
-    def volts(self, codes: np.ndarray) -> np.ndarray:
-        """Terminal volts [K] of codes [K]."""
+    def levels(self, codes: np.ndarray) -> np.ndarray:
+        """Levels [K] of codes [K]: terminal volts, or mA on channels that drive current."""
         if codes.shape != (len(self.channels),):
             raise WrongSize(f"{codes.shape} codes for {len(self.channels)} channels")
         return self.source.volts_of(codes)
+
+    @cached_property
+    def by_current(self) -> np.ndarray:
+        """Actuators on channels that drive current, bool[A]."""
+        return np.asarray(self.channels.by_current[self.actuators.channel])
+
+    def volts(self, levels: np.ndarray) -> np.ndarray:
+        """Terminal volts [K] for levels [K]."""
+        if not self.channels.by_current.any():
+            return levels
+        from meshctl.plan.circuit import working_volts
+
+        volts = np.where(self.channels.by_current, 0.0, levels)
+        at = working_volts(self, levels[self.actuators.channel])
+        driven = self.resistive[self.by_current[self.resistive]]
+        volts[self.actuators.channel[driven]] = at[self.by_current[self.resistive]]
+        return volts
 
     @cached_property
     def reference_rad(self) -> np.ndarray:
@@ -80,15 +98,17 @@ class Chip:
 
     @cached_property
     def coupled(self) -> bool:
-        """True where actuators share a ground or warm one another's resistance."""
+        """True where actuators share a ground, warm one another's resistance, or are driven by current."""
         rows = self.resistive
+        if self.by_current[rows].any():
+            return True
         rise = self.actuators.params.get("r_rise")
         warms = rise is not None and bool((np.nan_to_num(rise[rows]) != 0.0).any())
         return bool((self.ground_ohm[rows] > 0.0).any()) or (warms and self.actuators.crosstalk is not None)
 
-    def own_changes(self, volts: np.ndarray) -> np.ndarray:
-        """Change [A] that every actuator gives its own setting, for terminal volts [K]."""
-        at = volts[self.actuators.channel]
+    def own_changes(self, levels: np.ndarray) -> np.ndarray:
+        """Change [A] that every actuator gives its own setting, for levels [K] of the source."""
+        at = levels[self.actuators.channel]
         change = np.zeros(len(self.actuators))
         for group in self.groups:
             if not (group.law.power_law and self.coupled):
@@ -96,7 +116,7 @@ class Chip:
         if self.coupled:
             from meshctl.plan.circuit import working_changes
 
-            change[self.resistive] = working_changes(self, at[self.resistive])
+            change[self.resistive] = working_changes(self, at)
         change[self.actuators.dead] = 0.0
         return change
 
@@ -109,7 +129,7 @@ class Chip:
 
     def actual(self, codes: np.ndarray) -> np.ndarray:
         """Settings [S] that the codes give, stuck ones at their stuck values."""
-        settings = self.reference_rad + self.total_changes(self.own_changes(self.volts(codes)))
+        settings = self.reference_rad + self.total_changes(self.own_changes(self.levels(codes)))
         return self.mesh.as_built.in_force(settings)
 
     def matrix(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
@@ -120,11 +140,11 @@ class Chip:
         """Power at every output for unit power in every input: |matrix|^2."""
         return np.asarray(np.abs(self.matrix(codes, wavelengths_nm)) ** 2)
 
-    def power_mw(self, volts: np.ndarray) -> np.ndarray:
-        """Static power [A] of every actuator for terminal volts [K]."""
-        at = volts[self.actuators.channel]
+    def power_mw(self, levels: np.ndarray) -> np.ndarray:
+        """Static power [A] of every actuator for levels [K] of the source."""
+        at = levels[self.actuators.channel]
         power = np.zeros(len(self.actuators))
-        change = self.own_changes(volts)
+        change = self.own_changes(levels)
         for group in self.groups:
             if group.law.power_law:
                 power[group.rows] = turns(change[group.rows]) * group.p["p2pi_mw"]
@@ -134,24 +154,27 @@ class Chip:
         return power
 
     @cached_property
-    def terminal_range_v(self) -> tuple[np.ndarray, np.ndarray]:
-        """Lowest and highest terminal volts of every channel: range and voltage limit of the source."""
-        source, limit = self.source, self.channels.limit_v
+    def level_range(self) -> tuple[np.ndarray, np.ndarray]:
+        """Lowest and highest level of every channel: range and limit of the source, V or mA."""
+        source, c = self.source, self.channels
+        limit = np.where(c.by_current, c.limit_ma, c.limit_v)
         return np.maximum(source.first_v, -limit), np.minimum(source.first_v + source.step_v * source.highest, limit)
 
     @cached_property
     def bounds(self) -> Bounds:
         """Terminal volts of every actuator within all limits of its channel and its law."""
-        low, high = (ends[self.actuators.channel] for ends in self.terminal_range_v)
+        c, channel = self.channels, self.actuators.channel
+        low, high = (ends[channel] for ends in self.level_range)
+        low, high = np.where(self.by_current, 0.0, low), np.where(self.by_current, c.limit_v[channel], high)
+        most_ma = np.where(
+            self.by_current, np.minimum(self.level_range[1][channel], c.limit_ma[channel]), c.limit_ma[channel]
+        )
         for group in self.groups:
             rows = group.rows
-            channel = self.actuators.channel[rows]
             bottom, top = group.law.limits_v(group.p)
             low[rows], high[rows] = np.maximum(low[rows], bottom), np.minimum(high[rows], top)
             if group.law.power_law:
-                most = self._resistive_limit_v(
-                    group.p, self.channels.limit_ma[channel], self.channels.limit_mw[channel]
-                )
+                most = self._resistive_limit_v(group.p, most_ma[rows], c.limit_mw[channel[rows]])
                 low[rows], high[rows] = np.maximum(low[rows], -most), np.minimum(high[rows], most)
         return Bounds(low, high)
 

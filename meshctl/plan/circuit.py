@@ -1,6 +1,6 @@
 """Heaters of a chip on their shared grounds: the rows that `drive.ground` takes, both ways.
 
-Public: working_changes, terminal_volts, ground_rise.
+Public: working_changes, working_volts, ground_currents_ma, heater_levels, ground_rise.
 """
 
 from __future__ import annotations
@@ -30,16 +30,33 @@ def _heaters(chip: Chip) -> tuple[np.ndarray, dict[str, Any]]:
     }
 
 
-def working_changes(chip: Chip, volts: np.ndarray) -> np.ndarray:
-    """Own changes (rad) of the live heaters for their terminal volts."""
+def _settled(chip: Chip, levels: np.ndarray) -> ground.WorkingPoint:
+    """Where the live heaters settle for the level [A] of each actuator's channel."""
     rows, electrical = _heaters(chip)
     matrix = chip.actuators.crosstalk
     warming = None if matrix is None else matrix.tocsr()[chip.actuators.setting[rows]][:, rows]
     try:
-        point = ground.working_point(volts, **electrical, warming=warming)
+        return ground.working_point(levels[rows], **electrical, warming=warming, current_driven=chip.by_current[rows])
     except DriveFinding as finding:
         raise finding.named([chip.mesh.actuator_names[a] for a in rows.tolist()]) from None
-    return np.asarray(radians(point.own_turns))
+
+
+def working_changes(chip: Chip, levels: np.ndarray) -> np.ndarray:
+    """Own changes (rad) of the live heaters for the level [A] of each actuator's channel."""
+    return np.asarray(radians(_settled(chip, levels).own_turns))
+
+
+def working_volts(chip: Chip, levels: np.ndarray) -> np.ndarray:
+    """Terminal volts of the live heaters for the level [A] of each actuator's channel."""
+    return _settled(chip, levels).volts
+
+
+def ground_currents_ma(chip: Chip, levels: np.ndarray) -> np.ndarray:
+    """Current into each shared ground, mA[G], for the level [A] of each actuator's channel."""
+    rows, _ = _heaters(chip)
+    at = chip.channels.ground[chip.actuators.channel[rows]]
+    current = _settled(chip, levels).current_ma
+    return np.bincount(at[at >= 0], current[at >= 0], minlength=len(chip.channels.ground_ohm))
 
 
 def _terminals(chip: Chip, change: np.ndarray) -> tuple[ground.Terminals, np.ndarray]:
@@ -52,9 +69,10 @@ def _terminals(chip: Chip, change: np.ndarray) -> tuple[ground.Terminals, np.nda
         raise finding.named([chip.mesh.actuator_names[a] for a in rows.tolist()]) from None
 
 
-def terminal_volts(chip: Chip, change: np.ndarray) -> np.ndarray:
-    """Terminal volts of the live heaters for own changes [A]."""
-    return _terminals(chip, change)[0].volts
+def heater_levels(chip: Chip, change: np.ndarray) -> np.ndarray:
+    """What the source gives each live heater for own changes [A]: terminal volts, or mA."""
+    terminals = _terminals(chip, change)[0]
+    return np.where(chip.by_current[chip.resistive], terminals.current_ma, terminals.volts)
 
 
 def ground_rise(chip: Chip, change: np.ndarray) -> np.ndarray:

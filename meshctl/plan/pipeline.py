@@ -6,21 +6,22 @@ Public: solve, predict, Prediction.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NoReturn
 
 import numpy as np
 
-from meshctl.errors import Unreachable
 from meshctl.mesh.graph import Mesh, frozen
 from meshctl.optics.measures import matrix_error, throughput, throughput_per_input
 from meshctl.plan.chip import Chip
 from meshctl.plan.placing import Placed, fixed_settings, place, reach_of
 from meshctl.plan.plan import Plan
+from meshctl.plan.refusal import refuse
 from meshctl.plan.rounding import rounded
 from meshctl.solver.closed import closed_form
 from meshctl.solver.reach import Reach
 from meshctl.solver.solution import Shortfall, Solution
 from meshctl.solver.target import Target, described, from_description
+from meshctl.units import TWO_PI
 
 _DEAD_ROUNDS = 8  # settings -> drive -> warmth at dead heaters -> settings; crosstalk makes each far smaller
 _DEAD_WITHIN = 1e-9  # rad
@@ -58,19 +59,13 @@ def _beyond_limits(chip: Chip, solution: Solution) -> list[Shortfall]:
     return [s for s in solution.shortfalls if abs(s.off_rad) > 1e-8 and not fixed[s.setting]]
 
 
-def _refuse_limits(chip: Chip, missed: list[Shortfall], reach: Reach) -> None:
-    names = chip.net.setting_names
+def _refuse_limits(chip: Chip, missed: list[Shortfall]) -> NoReturn:
     worst = max(missed, key=lambda s: abs(s.off_rad))
-    a = int(chip.primary[worst.setting])
-    k = int(chip.actuators.channel[a])
-    kind = "angle" if chip.net.setting_is_angle[worst.setting] else "phase"
-    raise Unreachable(
-        f"{{names}}: a {kind} of {worst.wanted_rad:.4g} rad is needed at '{names[worst.setting]}'; within its limits "
-        f"it gives {reach.low[worst.setting]:.4g} to {reach.high[worst.setting]:.4g} rad "
-        f"({chip.bounds.low_v[a]:.4g} to {chip.bounds.high_v[a]:.4g} V on channel '{chip.mesh.channel_names[k]}')",
-        rows=[s.setting for s in missed],
-        remedy="raise limit_v, limit_ma or limit_mw if the chip allows, or take the nearest with --best-effort",
-    ).named(names)
+    change = worst.wanted_rad - float(chip.reference_rad[worst.setting])
+    if chip.period_rad[worst.setting]:
+        change %= TWO_PI
+    rows = [int(chip.primary[s.setting]) for s in missed]
+    refuse(chip, int(chip.primary[worst.setting]), change, rows)
 
 
 def _settled(chip: Chip, target: Target, best_effort: bool) -> tuple[Solution, Solution, Placed]:
@@ -83,7 +78,7 @@ def _settled(chip: Chip, target: Target, best_effort: bool) -> tuple[Solution, S
         solution = closed_form(chip.net, chip.mesh.as_built, target, reach)
         missed = _beyond_limits(chip, solution)
         if missed and not best_effort:
-            _refuse_limits(chip, missed, reach)
+            _refuse_limits(chip, missed)
         placed = place(chip, solution.settings, best_effort=best_effort)
         if chip.actuators.crosstalk is None or not dead.any():
             break
@@ -155,7 +150,8 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool 
 
 def headroom_v(chip: Chip, volts: np.ndarray) -> np.ndarray:
     """Volts left on every channel up to its limit, or that of the weakest actuator on it, f64[K]."""
-    highest = chip.terminal_range_v[1].copy()
+    by_current = chip.channels.by_current
+    highest = np.where(by_current, chip.channels.limit_v, chip.level_range[1])
     np.minimum.at(highest, chip.actuators.channel, chip.bounds.high_v)
     return highest - volts
 
@@ -194,7 +190,8 @@ def predict_codes(
     chip: Chip, codes: np.ndarray, target: Target, wavelengths_nm: np.ndarray | None = None
 ) -> Prediction:
     """Run codes through the forward path and compare with a target."""
-    volts = chip.volts(codes)
+    levels = chip.levels(codes)
+    volts = chip.volts(levels)
     actual = chip.actual(codes)
     matrix = chip.response.matrix(actual, wavelengths_nm)
     wanted = target.matrix if wavelengths_nm is None else np.broadcast_to(target.matrix, matrix.shape)
@@ -203,7 +200,7 @@ def predict_codes(
         matrix,
         actual,
         volts,
-        chip.power_mw(volts),
+        chip.power_mw(levels),
         1.0 - error**2,
         error,
         throughput(matrix),

@@ -6,17 +6,19 @@ Public: Placed, place, reach_of.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import NoReturn
 
 import numpy as np
 
-from meshctl.drive.wraps import LIMIT_TOLERANCE, VERDICTS, Wraps, least_power_wraps
-from meshctl.errors import DriveFinding, VoltageOutOfRange
+from meshctl.drive.wraps import LIMIT_TOLERANCE, Wraps, least_power_wraps
+from meshctl.errors import CurrentOutOfRange, DriveFinding, SharedChannel, VoltageOutOfRange
 from meshctl.plan.chip import Chip
+from meshctl.plan.refusal import refuse
 from meshctl.solver.reach import Reach
 from meshctl.units import radians, turns
 
 _GROUND_ROUNDS = 6  # tightenings of the reach for the rise of a shared ground; each gains the whole rise
-_V_TOLERANCE = 1e-9  # V beyond a limit that rounding may ask for
+_TOLERANCE = 1e-9  # V or mA beyond a limit that rounding may ask for
 
 
 @dataclass(frozen=True, eq=False)
@@ -24,7 +26,7 @@ class Placed:
     """Settings as the source can give them."""
 
     codes: np.ndarray  # i64[K]
-    volts: np.ndarray  # f64[K], before rounding to codes
+    levels: np.ndarray  # f64[K], before rounding to codes: V, or mA
     change: np.ndarray  # f64[A], own changes before rounding
     verdict: str  # of the whole turns: a key of drive.wraps.VERDICTS
     held: tuple[int, ...] = ()  # actuators held at a limit (best effort only)
@@ -96,8 +98,8 @@ class _Placement:
         names = self.chip.mesh.actuator_names
         return [names[a] for a in self.actuator.tolist()]
 
-    def terminal(self, own_turns: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """(own changes [A], terminal volts [K]) that give the own turns of the live settings."""
+    def levels(self, own_turns: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """(own changes [A], level [A] that each actuator wants of its channel) for own turns of the live settings."""
         chip = self.chip
         change = np.zeros(len(chip.actuators))
         change[self.actuator] = radians(own_turns)
@@ -110,13 +112,35 @@ class _Placement:
             except DriveFinding as finding:
                 raise finding.named([chip.mesh.actuator_names[a] for a in group.rows.tolist()]) from None
         if chip.coupled:
-            from meshctl.plan.circuit import terminal_volts
+            from meshctl.plan.circuit import heater_levels
 
-            at[chip.resistive] = terminal_volts(chip, change)
-        volts = np.clip(0.0, *chip.terminal_range_v)
-        live = ~chip.actuators.dead
-        volts[chip.actuators.channel[live]] = at[live]
-        return change, volts
+            at[chip.resistive] = heater_levels(chip, change)
+        return change, at
+
+
+def _by_channel(chip: Chip, at: np.ndarray, best_effort: bool) -> np.ndarray:
+    """Levels [K] from what each live actuator [A] wants; those that share a channel must want the same."""
+    levels = np.clip(0.0, *chip.level_range)
+    live = np.flatnonzero(~chip.actuators.dead)
+    channel = chip.actuators.channel[live]
+    levels[channel] = at[live]
+    lowest, highest = np.full(len(levels), np.inf), np.full(len(levels), -np.inf)
+    np.minimum.at(lowest, channel, at[live])
+    np.maximum.at(highest, channel, at[live])
+    apart = np.where(np.isfinite(lowest), highest - lowest, 0.0)
+    k = int(np.argmax(apart)) if len(apart) else 0
+    if len(apart) and apart[k] > 0.5 * chip.source.step_v[k]:
+        if not best_effort:
+            unit = "mA" if chip.channels.by_current[k] else "V"
+            raise SharedChannel(
+                f"{{names}} share channel '{chip.mesh.channel_names[k]}' but need {lowest[k]:.4g} to "
+                f"{highest[k]:.4g} {unit}",
+                rows=live[channel == k].tolist(),
+                remedy="give each a channel of its own, or take the middle with --best-effort",
+            ).named(chip.mesh.actuator_names)
+        shared = apart > 0.0
+        levels[shared] = 0.5 * (lowest + highest)[shared]
+    return levels
 
 
 def _held(placement: _Placement, found: Wraps) -> tuple[Wraps, tuple[int, ...]]:
@@ -143,66 +167,66 @@ def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False) -> Pla
     """
     placement = _Placement(chip, settings)
     held: tuple[int, ...] = ()
-    lowest, highest = chip.terminal_range_v
+    lowest, highest = chip.level_range
     for attempt in range(_GROUND_ROUNDS):
         found = placement.search()
         if found.verdict in ("unreachable", "not_found"):
             if not best_effort:
                 _refuse(chip, placement, found)
             found, held = _held(placement, found)
-        change, volts = placement.terminal(found.own_turns)
-        over = np.maximum(volts - highest, lowest - volts)
-        bad = np.flatnonzero(over > _V_TOLERANCE)
+        change, at = placement.levels(found.own_turns)
+        levels = _by_channel(chip, at, best_effort)
+        over = np.maximum(levels - highest, lowest - levels)
+        bad = np.flatnonzero(over > _TOLERANCE)
         if not len(bad) or not chip.coupled or attempt == _GROUND_ROUNDS - 1:
             break
         # the shared ground takes its share: what exceeded its limit gets that much less room
-        _tighten(chip, placement, volts, highest, bad)
+        _tighten(chip, placement, levels, highest, bad)
     if len(bad):
         if not best_effort:
-            k = int(bad[np.argmax(over[bad])])
-            raise VoltageOutOfRange(
-                f"{{names}}: {volts[k]:.4g} V is outside {lowest[k]:.4g} to {highest[k]:.4g} V",
-                rows=bad.tolist(),
-                remedy="raise limit_v or max_v if the chip allows, or choose a target that needs less",
-            ).named(chip.mesh.channel_names)
+            _refuse_levels(chip, levels, bad)
         held += tuple(int(a) for a in np.flatnonzero(np.isin(chip.actuators.channel, bad)))
-    volts = np.clip(volts, lowest, highest)
-    codes = chip.source.nearest_codes(volts)
-    codes[chip.volts(codes) > highest + _V_TOLERANCE] -= 1  # rounding must not step over a limit
-    return Placed(codes, volts, change, found.verdict, tuple(sorted(set(held))))
+    levels = np.clip(levels, lowest, highest)
+    codes = chip.source.nearest_codes(levels)
+    codes[chip.levels(codes) > highest + _TOLERANCE] -= 1  # rounding must not step over a limit
+    return Placed(codes, levels, change, found.verdict, tuple(sorted(set(held))))
 
 
-def _tighten(chip: Chip, placement: _Placement, volts: np.ndarray, highest: np.ndarray, bad: np.ndarray) -> None:
+def _refuse_levels(chip: Chip, levels: np.ndarray, bad: np.ndarray) -> NoReturn:
+    lowest, highest = chip.level_range
+    k = int(bad[np.argmax(np.maximum(levels - highest, lowest - levels)[bad])])
+    current = bool(chip.channels.by_current[k])
+    unit = "mA" if current else "V"
+    finding: type[DriveFinding] = CurrentOutOfRange if current else VoltageOutOfRange
+    rise = "" if current else ", the rise of the shared ground included"
+    raise finding(
+        f"channel {{names}}: {levels[k]:.4g} {unit} is needed{rise}, "
+        f"allowed is {lowest[k]:.4g} to {highest[k]:.4g} {unit}",
+        rows=[k, *(int(b) for b in bad if b != k)],
+        remedy="raise the limit or the range if the chip allows, or take the nearest with --best-effort",
+    ).named(chip.mesh.channel_names)
+
+
+def _tighten(chip: Chip, placement: _Placement, levels: np.ndarray, highest: np.ndarray, bad: np.ndarray) -> None:
     channel = chip.actuators.channel[placement.actuator]
     mine = np.flatnonzero(np.isin(channel, bad))
-    share = (highest[channel[mine]] / volts[channel[mine]]) ** 2
+    share = (highest[channel[mine]] / levels[channel[mine]]) ** 2
     own_high = placement.high[mine]
     placement.high[mine] = np.minimum(own_high, own_high * share * (1.0 - 1e-6))
 
 
-def _refuse(chip: Chip, placement: _Placement, found: Wraps) -> None:
-    """Raise Unreachable or NotFound with what is needed, what there is, and what to do."""
-    names = placement.names()
-    rows = list(found.rows)
-    if placement.crosstalk is None and rows:
-        row = max(
-            rows, key=lambda r: max(placement.low[r] - found.own_turns[r], found.own_turns[r] - placement.high[r])
-        )
-        a = int(placement.actuator[row])
-        k = int(chip.actuators.channel[a])
-        wanted = radians(float(placement.wanted[row]))
-        what = "an angle" if not placement.wraps[row] else "a phase (or its whole turns)"
-        from meshctl.errors import Unreachable
-
-        raise Unreachable(
-            f"{{names}}: {what} {wanted:.4g} rad from rest is needed at '{names[row]}'; within its limits it gives "
-            f"{radians(float(placement.low[row])):.4g} to {radians(float(placement.high[row])):.4g} rad "
-            f"({chip.bounds.low_v[a]:.4g} to {chip.bounds.high_v[a]:.4g} V on channel '{chip.mesh.channel_names[k]}'; "
-            f"{VERDICTS['unreachable']})",
-            rows=rows,
-            remedy="raise limit_v, limit_ma or limit_mw if the chip allows, or use --best-effort",
-        ).named(names)
+def _refuse(chip: Chip, placement: _Placement, found: Wraps) -> NoReturn:
+    """Say what is needed, what there is, and what to do."""
+    if placement.crosstalk is None and found.rows:
+        low, high, own = placement.low, placement.high, found.own_turns
+        row = max(found.rows, key=lambda r: float(max(low[r] - own[r], own[r] - high[r])))
+        asked = float(own[row])
+        if placement.wraps[row] and asked < low[row]:
+            asked += float(np.ceil(low[row] - asked))
+        rows = placement.actuator[list(found.rows)].tolist()
+        refuse(chip, int(placement.actuator[row]), float(radians(asked)), rows)
     try:
         found.require()
     except DriveFinding as finding:
-        raise finding.named(names) from None
+        raise finding.named(placement.names()) from None
+    raise AssertionError("the whole turns were refused without a reason")

@@ -25,10 +25,11 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.n
 
     Returns
     -------
-    int64 (K,); the placed codes themselves where a law is stepwise or the mesh has more than AWARE_TO settings.
+    int64 (K,); the placed codes themselves where a law is stepwise, a channel drives current, an actuator is
+    held at a limit, or the mesh has more than AWARE_TO settings.
     """
     stepwise = any(group.law.stepwise for group in chip.groups)
-    if stepwise or placed.held or chip.net.n_settings > AWARE_TO:
+    if stepwise or placed.held or chip.by_current.any() or chip.net.n_settings > AWARE_TO:
         return placed.codes
     from meshctl.drive.codes import round_against
 
@@ -37,7 +38,7 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.n
     if not costs.any():
         return placed.codes
     # the shared ground's rise and the heat felt are held where they are: one code moves them by little
-    rise = placed.volts[chip.actuators.channel] - _across(chip, placed)
+    rise = placed.levels[chip.actuators.channel] - _across(chip, placed)
     heat = turns(chip.total_changes(placed.change)[chip.actuators.setting])
 
     def own_of(codes: np.ndarray) -> np.ndarray:
@@ -51,7 +52,7 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.n
         own[chip.actuators.dead] = 0.0
         return own
 
-    source, (lowest, highest) = chip.source, chip.terminal_range_v
+    source, (lowest, highest) = chip.source, chip.level_range
     bottom, top = lowest.copy(), highest.copy()
     np.maximum.at(bottom, chip.actuators.channel, chip.bounds.low_v)
     np.minimum.at(top, chip.actuators.channel, chip.bounds.high_v)
@@ -72,7 +73,7 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.n
 
 def _across(chip: Chip, placed: Placed) -> np.ndarray:
     """Volts [A] across each actuator, the ground's rise taken off."""
-    at = placed.volts[chip.actuators.channel].copy()
+    at = placed.levels[chip.actuators.channel].copy()
     if chip.coupled:
         from meshctl.plan.circuit import ground_rise
 
