@@ -371,7 +371,7 @@ def _channels_text(mesh: Mesh, plain: Mesh | None) -> str:
         drives = DRIVES[int(channels.by_current[k])]
         lines.append((name, *shown, ground, drives))
         if values != usual or ground != default.ground or drives != default.drives or plain is None:
-            needed = len(lines)
+            needed = max(needed, len(lines))
     return table_text(CHANNEL_HEAD, lines[:needed]) if needed else ""
 
 
