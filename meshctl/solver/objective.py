@@ -2,7 +2,8 @@
 
 All take matrices [wavelength, out, in] and give the value and its cotangent G of that shape, with
 d value = Re sum conj(G) dM. Demands without a wavelength axis hold at every wavelength.
-Public: Objective, MatrixError, PowerError, DarkOutputs, Mask, Combined, state_preparation, smooth_worst.
+Public: Objective, MatrixError, PowerError, DarkOutputs, Mask, Combined, state_preparation, objective_of,
+smooth_worst.
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ import numpy as np
 
 from meshctl.errors import NotFinite, WrongSize, WrongUsage
 from meshctl.optics.measures import FREE_PHASES, with_free_phases
+from meshctl.solver.target import Target
 
 WORST_POWER = 16  # of the mean that stands for the maximum: at 20 wavelengths it lies within 17 % below it
 OVER = ("mean", "worst")
@@ -353,3 +355,22 @@ def state_preparation(
     weight = np.zeros(target.shape)
     weight[:, lit_input] = 1.0
     return MatrixError(target, weight, "nothing", over, wavelengths_nm)
+
+
+def objective_of(target: Target) -> Objective:
+    """What is to be made small for a target: 0 where all of it is met."""
+    waves, over = target.wavelengths_nm, target.over
+    parts: list[tuple[float, Objective]] = []
+    if target.matrix is not None:
+        parts.append((1.0, MatrixError(target.matrix, target.weight, target.free, over, waves)))
+    if target.power is not None:
+        parts.append((1.0, PowerError(target.power, target.weight, over, waves)))
+    least, most = target.least_db, target.most_db
+    if least is not None and most is not None and not (np.isnan(least) & np.isnan(most)).all():
+        parts.append((1.0, Mask(least, most, waves, over)))
+    if target.dark:
+        lit = None
+        if target.weight is not None:
+            lit = np.flatnonzero(target.weight.reshape(-1, target.size[1]).any(0)).tolist()
+        parts.append((1.0, DarkOutputs(target.dark, lit, over, waves)))
+    return parts[0][1] if len(parts) == 1 else Combined(parts)
