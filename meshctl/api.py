@@ -15,7 +15,9 @@ from meshctl.plan.plan import Plan, check_fresh
 from meshctl.solver.target import Target, make_target, read_target
 
 
-def solve(mesh: Mesh, target: Any, *, free: str = "nothing", best_effort: bool = False) -> Plan:
+def solve(
+    mesh: Mesh, target: Any, *, free: str = "nothing", best_effort: bool = False, least_power: bool = False
+) -> Plan:
     """Voltages for a target.
 
     Parameters
@@ -24,6 +26,7 @@ def solve(mesh: Mesh, target: Any, *, free: str = "nothing", best_effort: bool =
     target : complex array (out, in), Target, or words such as "haar:7"
     free : port phases that do not count: nothing, outputs, inputs, both (a Target brings its own)
     best_effort : hold what is out of reach at its limit rather than raise
+    least_power : use what the matrix does not see to save power
 
     Returns
     -------
@@ -47,7 +50,7 @@ def solve(mesh: Mesh, target: Any, *, free: str = "nothing", best_effort: bool =
         target = make_target(target.matrix, shape, target.free, target.source)
     else:
         target = make_target(target, shape, free)
-    return pipeline.solve(mesh, target, best_effort=best_effort)
+    return pipeline.solve(mesh, target, best_effort=best_effort, least_power=least_power)
 
 
 def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *, stale_ok: bool = False) -> np.ndarray:

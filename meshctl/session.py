@@ -62,10 +62,10 @@ class Session:
         net = self.mesh.net
         return read_target(words, (len(net.outputs), len(net.inputs)), free)
 
-    def solve(self, target: Target, *, best_effort: bool = False) -> Plan:
+    def solve(self, target: Target, *, best_effort: bool = False, least_power: bool = False) -> Plan:
         """Volts and codes for a target."""
         started = time.perf_counter()
-        self.plan = solve(self.mesh, target, best_effort=best_effort)
+        self.plan = solve(self.mesh, target, best_effort=best_effort, least_power=least_power)
         self.seconds = time.perf_counter() - started
         return self.plan
 

@@ -79,7 +79,7 @@ def show(words: Namespace) -> int:
 def solve(words: Namespace) -> int:
     session = Session(words.mesh)
     target = session.target(words.target, words.free)
-    plan = session.solve(target, best_effort=words.best_effort)
+    plan = session.solve(target, best_effort=words.best_effort, least_power=words.least_power)
     if words.out:
         session.write_plan(words.out)
     if words.json:

@@ -74,6 +74,7 @@ def plan_entry(mesh: Mesh, plan: Plan, seconds: float) -> dict[str, Any]:
             "throughput": plan.throughput,
             "throughput_per_input": plan.throughput_per_input,
             "power_mw": float(plan.power_mw.sum()),
+            "saved_mw": plan.saved_mw,
             "actuators": _actuator_rows(mesh, plan),
             "reason": plan.reason,
             "reason_text": REASONS[plan.reason],
@@ -106,11 +107,14 @@ def plan_table(mesh: Mesh, plan: Plan) -> str:
 def plan_summary(plan: Plan) -> str:
     """How near the chip comes and why not nearer."""
     worst = min(plan.throughput_per_input)
+    power = float(plan.power_mw.sum())
+    share = 100.0 * plan.saved_mw / (power + plan.saved_mw) if plan.saved_mw else 0.0
+    saved = f"     (free gauges saved {plan.saved_mw:.1f} mW, {share:.0f} %)" if plan.saved_mw else ""
     lines = [
         f"fidelity      {plan.fidelity:.9f}   (before limits and codes {plan.continuous['fidelity']:.9f})",
         f"matrix error  {plan.matrix_error:.3e}     (before limits and codes {plan.continuous['matrix_error']:.3e})",
         f"throughput    {plan.throughput:.4f}        (least of any input {worst:.4f})",
-        f"power         {float(plan.power_mw.sum()):.1f} mW",
+        f"power         {float(plan.power_mw.sum()):.1f} mW{saved}",
         f"reason        {plan.reason}: {REASONS[plan.reason]}",
     ]
     return "\n".join(lines)

@@ -87,6 +87,7 @@ def parser() -> argparse.ArgumentParser:
     solve.add_argument("target", metavar="TARGET", help=TARGET)
     solve.add_argument("-o", "--out", metavar="PLAN", help="write the plan to this file")
     solve.add_argument("--free", choices=FREE, default="nothing", help="port phases that do not count")
+    solve.add_argument("--least-power", action="store_true", help="use what the matrix does not see to save power")
     solve.add_argument("--best-effort", action="store_true", help="hold what is out of reach at its limit")
 
     predict = verb(

@@ -1,6 +1,7 @@
 """Heaters: phase grows with electrical power, through a resistance that may change with temperature.
 
-change = 2 pi P / p2pi_mw, P = V^2 / R, R = r_ohm (1 + r_rise T), T the heat in turns of 2 pi. Without
+change = arm 2 pi P / p2pi_mw (arm = -1 on the other arm of the cell), P = V^2 / R,
+R = r_ohm (1 + r_rise T), T the heat in turns of 2 pi. Without
 `heat_turns` the heater's own heat is T. The inverse is explicit; the forward then solves
 T (1 + r_rise T) = V^2 / (r_ohm p2pi_mw), which for r_rise < 0 turns back at T = 1 / (2 |r_rise|): beyond it
 a voltage source finds no stable temperature. A current source runs away where r_rise > 0 instead.
@@ -14,7 +15,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from meshctl.errors import PowerOutOfRange, ResistanceNotPositive, ThermalRunaway
-from meshctl.laws.law import MA_PER_A, MW_PER_W, SLACK, Law, Param, Params, Rows, raise_where
+from meshctl.laws.law import MA_PER_A, MW_PER_W, SLACK, Breach, Law, Param, Params, Rows, raise_where
 from meshctl.units import radians, turns
 
 STABLE_SHARE = 0.9  # of the heat at the turning point; common practice: the last tenth is not used
@@ -52,13 +53,21 @@ class Heater(Law):
         Param("r_ohm", "ohm", None, 0.0, np.inf, "resistance with all heaters cold", open_low=True),
         Param("offset_rad", "rad", 0.0, -np.inf, np.inf, "phase with all heaters cold"),
         Param("r_rise", "", 0.0, -1.0, 10.0, "relative rise of the resistance per turn of 2 pi of heat"),
+        Param("arm", "", 1.0, -1.0, 1.0, "1: the heater lies on the arm of the phase, -1: on the other arm"),
     )
+
+    def breaches(self, p: Params) -> list[Breach]:
+        arm = self.column(p, "arm")
+        return [
+            Breach(int(row), self.param("arm"), float(arm[row]), "1 or -1")
+            for row in np.flatnonzero(np.abs(arm) != 1.0)
+        ]
 
     def rest_rad(self, p: Params) -> Rows:
         return self.column(p, "offset_rad")
 
     def change_rad(self, volts: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:
-        return radians(self._own_turns(np.asarray(volts, float), p, heat_turns))
+        return self.column(p, "arm") * radians(self._own_turns(np.asarray(volts, float), p, heat_turns))
 
     def volts(self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:
         own, heat = self._own_and_heat(change_rad, p, heat_turns)
@@ -85,7 +94,8 @@ class Heater(Law):
         heat = own if heat_turns is None else np.asarray(heat_turns, float)
         r = resistance_ohm(heat, self.column(p, "r_ohm"), rise)
         feedback = 1.0 + rise * own / (1.0 + rise * heat) if heat_turns is None else 1.0
-        return radians(2.0 * MW_PER_W * v / (r * self.column(p, "p2pi_mw")) / feedback)
+        turn = 2.0 * MW_PER_W * v / (r * self.column(p, "p2pi_mw")) / feedback
+        return self.column(p, "arm") * radians(turn)
 
     def branch_v(self, p: Params) -> tuple[Rows, Rows]:
         high = self.limits_v(p)[1]
@@ -118,7 +128,7 @@ class Heater(Law):
         cold = np.square(current) / MA_PER_A * self.column(p, "r_ohm") / p2pi
         if heat_turns is not None:
             r = self.resistance_ohm(p, heat_turns)
-            return radians(np.square(current) / MA_PER_A * r / p2pi)
+            return self.column(p, "arm") * radians(np.square(current) / MA_PER_A * r / p2pi)
         raise_where(
             ~(rise * cold < 1.0),
             ThermalRunaway,
@@ -129,7 +139,7 @@ class Heater(Law):
             ),
             "lower the current, or drive it from a voltage source",
         )
-        return radians(cold / (1.0 - rise * cold))
+        return self.column(p, "arm") * radians(cold / (1.0 - rise * cold))
 
     def milliamps(self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None = None) -> Rows:
         """Current that gives a change under a current source."""
@@ -143,7 +153,7 @@ class Heater(Law):
         return self.column(p, "r_ohm") * self.column(p, "p2pi_mw") / MW_PER_W
 
     def _own_and_heat(self, change_rad: ArrayLike, p: Params, heat_turns: ArrayLike | None) -> tuple[Rows, Rows]:
-        own = np.asarray(turns(np.asarray(change_rad, float)))
+        own = np.asarray(turns(np.asarray(change_rad, float))) * self.column(p, "arm")
         p2pi = self.column(p, "p2pi_mw")
         own = np.broadcast_to(own, np.broadcast_shapes(own.shape, p2pi.shape))
         raise_where(

@@ -14,7 +14,7 @@ import math
 import numpy as np
 
 FREE_PHASES = ("nothing", "outputs", "inputs", "both")
-_ROUNDS = 500  # of the alternation for "both"; it gains less than 1e-15 a round long before
+_ROUNDS = 500  # of the alternation for "both"
 
 
 def _unit(z: np.ndarray) -> np.ndarray:
@@ -36,14 +36,13 @@ def with_free_phases(matrix: np.ndarray, target: np.ndarray, free: str) -> np.nd
     if free == "inputs":
         columns = np.conj(_unit(overlap.sum(0)))
     if free == "both":
-        gained = -1.0
         for _ in range(_ROUNDS):
             columns = np.conj(_unit(rows @ overlap))
-            rows = np.conj(_unit(overlap @ columns))
-            now = abs(rows @ overlap @ columns)
-            if now - gained <= 1e-15 * now:
+            turned = np.conj(_unit(overlap @ columns))
+            still = bool(np.abs(turned - rows).max() < 1e-15)
+            rows = turned
+            if still:
                 break
-            gained = now
     return rows[:, None] * matrix * columns
 
 

@@ -147,7 +147,7 @@ class Chip:
         change = self.own_changes(levels)
         for group in self.groups:
             if group.law.power_law:
-                power[group.rows] = turns(change[group.rows]) * group.p["p2pi_mw"]
+                power[group.rows] = turns(self.arm[group.rows] * change[group.rows]) * group.p["p2pi_mw"]
             else:
                 power[group.rows] = group.law.power_mw(at[group.rows], group.p)
         power[self.actuators.dead] = 0.0
@@ -210,6 +210,27 @@ class Chip:
         primary = np.full(self.net.n_settings, -1, np.int64)
         primary[self.actuators.setting[order]] = order
         return primary
+
+    @cached_property
+    def arm(self) -> np.ndarray:
+        """-1 for heaters on the other arm of their cell, else 1, f64[A]."""
+        arm = self.actuators.params.get("arm")
+        return np.ones(len(self.actuators)) if arm is None else np.where(np.isnan(arm), 1.0, arm)
+
+    @cached_property
+    def partner(self) -> np.ndarray:
+        """A live actuator on the other arm than the primary one of each setting, i64[S], -1: none."""
+        partner = np.full(self.net.n_settings, -1, np.int64)
+        setting = self.actuators.setting
+        other = (self.arm != self.arm[self.primary][setting]) & ~self.actuators.dead
+        rows = np.flatnonzero(other)[::-1]
+        partner[setting[rows]] = rows
+        return partner
+
+    @cached_property
+    def second(self) -> np.ndarray:
+        """Settings with a heater on either arm, bool[S]."""
+        return np.asarray(self.partner >= 0)
 
     @cached_property
     def period_rad(self) -> np.ndarray:

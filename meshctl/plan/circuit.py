@@ -1,6 +1,6 @@
 """Heaters of a chip on their shared grounds: the rows that `drive.ground` takes, both ways.
 
-Public: working_changes, working_volts, ground_currents_ma, heater_levels, ground_rise.
+Public: working_changes, working_volts, ground_currents_ma, heat_turns, heater_levels, ground_rise.
 """
 
 from __future__ import annotations
@@ -30,20 +30,26 @@ def _heaters(chip: Chip) -> tuple[np.ndarray, dict[str, Any]]:
     }
 
 
+def _warming(chip: Chip, rows: np.ndarray) -> Any:
+    """Heat at each live heater per heat of each: the size of the phase crosstalk stands for it."""
+    matrix = chip.actuators.crosstalk
+    return None if matrix is None else abs(matrix.tocsr()[chip.actuators.setting[rows]][:, rows])
+
+
 def _settled(chip: Chip, levels: np.ndarray) -> ground.WorkingPoint:
     """Where the live heaters settle for the level [A] of each actuator's channel."""
     rows, electrical = _heaters(chip)
-    matrix = chip.actuators.crosstalk
-    warming = None if matrix is None else matrix.tocsr()[chip.actuators.setting[rows]][:, rows]
     try:
-        return ground.working_point(levels[rows], **electrical, warming=warming, current_driven=chip.by_current[rows])
+        return ground.working_point(
+            levels[rows], **electrical, warming=_warming(chip, rows), current_driven=chip.by_current[rows]
+        )
     except DriveFinding as finding:
         raise finding.named([chip.mesh.actuator_names[a] for a in rows.tolist()]) from None
 
 
 def working_changes(chip: Chip, levels: np.ndarray) -> np.ndarray:
     """Own changes (rad) of the live heaters for the level [A] of each actuator's channel."""
-    return np.asarray(radians(_settled(chip, levels).own_turns))
+    return np.asarray(chip.arm[chip.resistive] * radians(_settled(chip, levels).own_turns))
 
 
 def working_volts(chip: Chip, levels: np.ndarray) -> np.ndarray:
@@ -62,11 +68,21 @@ def ground_currents_ma(chip: Chip, levels: np.ndarray) -> np.ndarray:
 def _terminals(chip: Chip, change: np.ndarray) -> tuple[ground.Terminals, np.ndarray]:
     """What the source has to give for own changes [A], and the ground of each live heater."""
     rows, electrical = _heaters(chip)
-    heat = turns(chip.total_changes(change)[chip.actuators.setting[rows]])
+    own = turns(chip.arm * change)[rows]
     try:
-        return ground.terminal_volts(turns(change[rows]), heat, **electrical), electrical["group"]
+        return ground.terminal_volts(own, heat_turns(chip, change)[rows], **electrical), electrical["group"]
     except DriveFinding as finding:
         raise finding.named([chip.mesh.actuator_names[a] for a in rows.tolist()]) from None
+
+
+def heat_turns(chip: Chip, change: np.ndarray) -> np.ndarray:
+    """Heat [A], in turns of 2 pi, that each live heater feels for own changes [A]: its own and its neighbours'."""
+    rows = chip.resistive
+    own = turns(chip.arm * change)[rows]
+    warming = _warming(chip, rows)
+    heat = np.zeros(len(chip.actuators))
+    heat[rows] = own if warming is None else own + warming @ own
+    return heat
 
 
 def heater_levels(chip: Chip, change: np.ndarray) -> np.ndarray:

@@ -13,15 +13,16 @@ import numpy as np
 from meshctl.mesh.graph import Mesh, frozen
 from meshctl.optics.measures import matrix_error, throughput, throughput_per_input
 from meshctl.plan.chip import Chip
+from meshctl.plan.gauges import least_power_flips
 from meshctl.plan.placing import Placed, fixed_settings, place, reach_of
 from meshctl.plan.plan import Plan
 from meshctl.plan.refusal import refuse
 from meshctl.plan.rounding import rounded
-from meshctl.solver.closed import closed_form
+from meshctl.solver.closed import ClosedForm
 from meshctl.solver.reach import Reach
 from meshctl.solver.solution import Shortfall, Solution
 from meshctl.solver.target import Target, described, from_description
-from meshctl.units import TWO_PI
+from meshctl.units import TWO_PI, turns
 
 _DEAD_ROUNDS = 8  # settings -> drive -> warmth at dead heaters -> settings; crosstalk makes each far smaller
 _DEAD_WITHIN = 1e-9  # rad
@@ -68,28 +69,71 @@ def _refuse_limits(chip: Chip, missed: list[Shortfall]) -> NoReturn:
     refuse(chip, int(chip.primary[worst.setting]), change, rows)
 
 
-def _settled(chip: Chip, target: Target, best_effort: bool) -> tuple[Solution, Solution, Placed]:
-    """Solve and place; where dead heaters are warmed by their neighbours, again with that warmth known."""
+@dataclass(frozen=True, eq=False)
+class _Work:
+    """What solving and placing came to."""
+
+    free: Solution  # with the drive's limits off
+    solution: Solution
+    placed: Placed
+    saved_mw: float
+
+
+def _moved_by(chip: Chip, settings: np.ndarray, background: np.ndarray, least_power: bool) -> np.ndarray:
+    """The actuator that moves each setting: where there are two, the one that takes less power."""
+    if not least_power or not chip.second.any():
+        return chip.primary
+    p2pi = chip.actuators.params["p2pi_mw"]
+    own = np.mod(turns(settings - chip.reference_rad - background) * chip.arm[chip.primary], 1.0)
+    other = chip.second & ((1.0 - own) * p2pi[chip.partner] < own * p2pi[chip.primary])
+    return np.where(other, chip.partner, chip.primary)
+
+
+def _settled(chip: Chip, target: Target, best_effort: bool, least_power: bool) -> _Work:
+    """Solve and place; where neighbours warm what the answer depends on, again with that warmth known."""
+    form = ClosedForm(chip.net, chip.mesh.as_built, target)
     background = np.zeros(chip.net.n_settings)
     dead = fixed_settings(chip) & np.isnan(chip.mesh.as_built.stuck_rad)
-    for _ in range(_DEAD_ROUNDS):
-        reach = reach_of(chip, background)
-        free = closed_form(chip.net, chip.mesh.as_built, target, _unlimited(chip, reach))
-        solution = closed_form(chip.net, chip.mesh.as_built, target, reach)
+    warmed = chip.actuators.crosstalk is not None and bool(dead.any())
+    flip, plain_mw, settled = None, 0.0, False
+    for round_ in range(_DEAD_ROUNDS):
+        reach = reach_of(chip, np.where(dead, background, 0.0))
+        if least_power and round_ == 1:
+            flip = least_power_flips(chip, form, reach, background)
+        solution = form.solution(reach, flip)
         missed = _beyond_limits(chip, solution)
         if missed and not best_effort:
             _refuse_limits(chip, missed)
-        placed = place(chip, solution.settings, best_effort=best_effort)
-        if chip.actuators.crosstalk is None or not dead.any():
-            break
-        warmth = np.where(dead, chip.total_changes(placed.change), 0.0)
-        if np.abs(warmth - background).max() < _DEAD_WITHIN:
-            break
+        chosen = least_power and round_ > 0
+        moved_by = _moved_by(chip, solution.settings, background, chosen)
+        placed = place(chip, solution.settings, best_effort=best_effort, moved_by=moved_by)
+        warmth = _warmth(chip, placed.change)
+        if round_ == 0:
+            plain_mw = float(chip.power_mw(placed.levels).sum())
+        settled = not warmed or float(np.abs((warmth - background)[dead]).max()) < _DEAD_WITHIN
         background = warmth
-    return free, solution, placed
+        if settled and (round_ > 0 or not least_power):
+            break
+    free = form.solution(_unlimited(chip, reach), flip)
+    saved = plain_mw - float(chip.power_mw(placed.levels).sum()) if least_power else 0.0
+    return _Work(free, solution, placed, saved)
 
 
-def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool = True, seed: int = 0) -> Plan:
+def _warmth(chip: Chip, change: np.ndarray) -> np.ndarray:
+    """What neighbours give every setting, rad [S]."""
+    own = np.bincount(chip.actuators.setting, change, minlength=chip.net.n_settings)
+    return chip.total_changes(change) - own
+
+
+def solve(
+    mesh: Mesh,
+    target: Target,
+    *,
+    best_effort: bool = False,
+    least_power: bool = False,
+    aware: bool = True,
+    seed: int = 0,
+) -> Plan:
     """Volts and codes for a target, and how near the chip will come.
 
     Parameters
@@ -97,6 +141,7 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool 
     mesh : Mesh
     target : Target, unitary
     best_effort : hold actuators at their limits rather than raise
+    least_power : use what does not touch the matrix to save power: signs of inner phases, second heaters
     aware : round codes against the matrix; plain rounding else
 
     Returns
@@ -107,13 +152,14 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool 
     ------
     NoClosedForm
         For nets that no decomposition fits.
-    Unreachable and other findings of the drive
+    Unreachable, VoltageOutOfRange and other findings of the drive
         Where limits are in the way and `best_effort` is off.
 
     Cost: O(N^3) for N modes.
     """
     chip = Chip(mesh)
-    free, solution, placed = _settled(chip, target, best_effort)
+    work = _settled(chip, target, best_effort, least_power)
+    solution, placed = work.solution, work.placed
     codes = placed.codes
     ahead = predict_codes(chip, codes, target)
     # where the codes add little to what the settings leave, rounding better is not worth its time
@@ -125,7 +171,6 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool 
         reason = "limits"
     elif reason == "exact" and ahead.matrix_error > max(CODES_SHOW, 2 * solution.matrix_error):
         reason = "codes"
-    warnings = _warnings(chip, solution, placed)
     return Plan(
         mesh.name,
         mesh.hash,
@@ -138,12 +183,13 @@ def solve(mesh: Mesh, target: Target, *, best_effort: bool = False, aware: bool 
         frozen(headroom_v(chip, ahead.volts)),
         ahead.fidelity,
         ahead.matrix_error,
-        {"fidelity": free.fidelity, "matrix_error": free.matrix_error},
+        {"fidelity": work.free.fidelity, "matrix_error": work.free.matrix_error},
         ahead.throughput,
         ahead.throughput_per_input.tolist(),
         reason,
-        warnings,
+        _warnings(chip, solution, placed),
         [_shown(chip, s) for s in solution.shortfalls],
+        work.saved_mw,
         seed,
     )
 

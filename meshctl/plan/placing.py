@@ -68,16 +68,20 @@ def fixed_settings(chip: Chip) -> np.ndarray:
 
 
 class _Placement:
-    """One placing: the live settings, each moved by its primary actuator."""
+    """One placing: the live settings, each moved by one actuator.
 
-    def __init__(self, chip: Chip, settings: np.ndarray) -> None:
+    Settings of heaters on the other arm are counted backwards, so that own turns are heat throughout.
+    """
+
+    def __init__(self, chip: Chip, settings: np.ndarray, moved_by: np.ndarray) -> None:
         self.chip = chip
         self.live = np.flatnonzero(~fixed_settings(chip))
-        self.actuator = chip.primary[self.live]
-        self.wanted = turns((settings - chip.reference_rad)[self.live])
+        self.actuator = moved_by[self.live]
+        self.sign = chip.arm[self.actuator]
+        self.wanted = self.sign * turns((settings - chip.reference_rad)[self.live])
         self.wraps = chip.period_rad[self.live] > 0.0
-        low, high = chip.own_reach
-        self.low, self.high = (turns(np.nan_to_num(ends[self.actuator])) for ends in (low, high))
+        ends = [self.sign * turns(np.nan_to_num(end[self.actuator])) for end in chip.own_reach]
+        self.low, self.high = np.minimum(*ends), np.maximum(*ends)
         p2pi = chip.actuators.params.get("p2pi_mw")
         weight = np.ones(len(self.live)) if p2pi is None else p2pi[self.actuator]
         self.weight = np.where(np.isnan(weight), 0.0, weight)
@@ -87,9 +91,12 @@ class _Placement:
         matrix = self.chip.actuators.crosstalk
         if matrix is None:
             return None
+        from scipy.sparse import diags_array
+
         from meshctl.drive.crosstalk import Crosstalk
 
-        return Crosstalk(matrix.tocsr()[self.live][:, self.actuator])
+        signs = diags_array(self.sign)
+        return Crosstalk(signs @ matrix.tocsr()[self.live][:, self.actuator] @ signs)
 
     def search(self) -> Wraps:
         return least_power_wraps(self.wanted, self.wraps, self.crosstalk, self.low, self.high, self.weight)
@@ -102,7 +109,7 @@ class _Placement:
         """(own changes [A], level [A] that each actuator wants of its channel) for own turns of the live settings."""
         chip = self.chip
         change = np.zeros(len(chip.actuators))
-        change[self.actuator] = radians(own_turns)
+        change[self.actuator] = self.sign * radians(own_turns)
         at = np.zeros(len(chip.actuators))
         for group in chip.groups:
             if group.law.power_law and chip.coupled:
@@ -151,13 +158,14 @@ def _held(placement: _Placement, found: Wraps) -> tuple[Wraps, tuple[int, ...]]:
     return Wraps(own, found.wraps, 0.0, found.verdict, found.rounds), held
 
 
-def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False) -> Placed:
+def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False, moved_by: np.ndarray | None = None) -> Placed:
     """Volts and codes for settings, whole turns chosen for least power within limits.
 
     Parameters
     ----------
     settings : float (S,), rad, wanted values in force before `error_rad`
     best_effort : hold actuators at their limits rather than raise
+    moved_by : int (S,), the actuator that moves each setting; by default its primary one
 
     Raises
     ------
@@ -165,7 +173,7 @@ def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False) -> Pla
 
     Cost: linear without crosstalk; with it see `least_power_wraps`.
     """
-    placement = _Placement(chip, settings)
+    placement = _Placement(chip, settings, chip.primary if moved_by is None else moved_by)
     held: tuple[int, ...] = ()
     lowest, highest = chip.level_range
     for attempt in range(_GROUND_ROUNDS):
@@ -224,7 +232,7 @@ def _refuse(chip: Chip, placement: _Placement, found: Wraps) -> NoReturn:
         if placement.wraps[row] and asked < low[row]:
             asked += float(np.ceil(low[row] - asked))
         rows = placement.actuator[list(found.rows)].tolist()
-        refuse(chip, int(placement.actuator[row]), float(radians(asked)), rows)
+        refuse(chip, int(placement.actuator[row]), float(placement.sign[row] * radians(asked)), rows)
     try:
         found.require()
     except DriveFinding as finding:

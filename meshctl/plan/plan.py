@@ -53,6 +53,7 @@ class Plan:
     reason: str
     warnings: list[str] = field(default_factory=list)
     shortfalls: list[dict[str, Any]] = field(default_factory=list)
+    saved_mw: float = 0.0  # heater power that free gauges saved
     seed: int = 0
     version: str = __version__
 

@@ -47,7 +47,7 @@ def refuse(chip: Chip, actuator: int, change_rad: float, rows: list[int], best: 
         raise finding.named(names) from None
     said = f"{{names}} on {channel}: "
     if group.law.power_law:
-        power = float(turns(change_rad) * p["p2pi_mw"][0])
+        power = float(turns(abs(change_rad)) * p["p2pi_mw"][0])
         current = power / volts if volts else 0.0
         current_ma = MA_PER_A * current / 1e3
         if power > source.limit_mw[k]:

@@ -10,7 +10,6 @@ import numpy as np
 from meshctl.mesh.sensitivity import gram, jacobian
 from meshctl.plan.chip import Chip
 from meshctl.plan.placing import Placed
-from meshctl.units import turns
 
 AWARE_TO = 1100  # settings up to which the Gram matrix is formed: a full mesh of 32 modes, about a second
 
@@ -39,7 +38,11 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.n
         return placed.codes
     # the shared ground's rise and the heat felt are held where they are: one code moves them by little
     rise = placed.levels[chip.actuators.channel] - _across(chip, placed)
-    heat = turns(chip.total_changes(placed.change)[chip.actuators.setting])
+    heat = np.zeros(0)
+    if chip.coupled:
+        from meshctl.plan.circuit import heat_turns
+
+        heat = heat_turns(chip, placed.change)
 
     def own_of(codes: np.ndarray) -> np.ndarray:
         at = chip.source.volts_of(codes)[chip.actuators.channel] - rise

@@ -1,11 +1,12 @@
 """The closed form: recognise a rectangular or triangular mesh, decompose, put the steps on its cells.
 
-Public: closed_form, placements.
+Public: ClosedForm, closed_form, placements.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator
+from functools import cached_property
 
 import numpy as np
 
@@ -58,6 +59,78 @@ def _steps_on_cells(table: CellTable, steps: Steps, first: int, n: int) -> np.nd
     return step
 
 
+class ClosedForm:
+    """Decompositions of one target, ready to be put on one chip's cells again and again.
+
+    Parameters
+    ----------
+    net : Net
+    as_built : AsBuilt
+    target : Target, unitary
+
+    Raises
+    ------
+    NoClosedForm
+        For nets that no decomposition fits.
+    """
+
+    def __init__(self, net: Net, as_built: AsBuilt, target: Target) -> None:
+        self.net, self.as_built, self.target = net, as_built, target
+        self.response = Response(net, as_built)
+        n = len(net.inputs)
+        self.table = cell_table(net, self.response.circuit)
+        self.places: list[tuple[Steps, np.ndarray]] = []
+        decomposed: dict[str, Steps] = {}
+        for name, first in placements(self.table, n):
+            if name not in decomposed:
+                decomposed[name] = DECOMPOSITIONS[name](target.matrix)
+            steps = decomposed[name]
+            self.places.append((steps, _steps_on_cells(self.table, steps, first, n)))
+        if not self.places:
+            raise NoClosedForm(
+                f"no closed form: the {len(self.table.cell)} cells of this mesh of {n} modes hold neither a rectangle "
+                f"of {n} columns nor a triangle of {max(2 * n - 3, 1)}"
+            )
+
+    @cached_property
+    def n_cells(self) -> int:
+        return len(self.table.cell)
+
+    def fit(self, reach: Reach, place: int = 0, flip: np.ndarray | None = None) -> Fitted:
+        """Settings for one of the places, with some inner phases taken negative."""
+        steps, step_of = self.places[place]
+        return fit_cells(
+            self.net, self.as_built, self.response.circuit, self.table, steps, step_of, reach, self.target.free, flip
+        )
+
+    def error(self, fitted: Fitted) -> float:
+        """Matrix error of fitted settings on the chip as it is known."""
+        return matrix_error(self.response.matrix(fitted.settings), self.target.matrix, self.target.free)
+
+    def best_place(self, reach: Reach) -> int:
+        """The first place without shortfalls, else that of least error."""
+        errors = []
+        for place in range(len(self.places)):
+            fitted = self.fit(reach, place)
+            if not fitted.shortfalls:
+                return place
+            errors.append(self.error(fitted))
+        return int(np.argmin(errors))
+
+    def solution(self, reach: Reach, flip: np.ndarray | None = None) -> Solution:
+        """Settings by decomposition and local correction; what lies out of range is listed in `shortfalls`."""
+        fitted = self.fit(reach, self.best_place(reach), flip)
+        error = self.error(fitted)
+        if fitted.shortfalls:
+            reason = "out_of_range"
+        elif error > EXACT:
+            reason = "no_output_phases" if len(fitted.bare_lanes) else "losses"
+        else:
+            reason = "exact"
+        counts = {"cells": self.n_cells, "out_of_range": len(fitted.shortfalls)}
+        return Solution(fitted.settings, 1.0 - error**2, error, reason, fitted.shortfalls, fitted.free_settings, counts)
+
+
 def closed_form(net: Net, as_built: AsBuilt, target: Target, reach: Reach) -> Solution:
     """Settings by decomposition and local correction.
 
@@ -78,34 +151,4 @@ def closed_form(net: Net, as_built: AsBuilt, target: Target, reach: Reach) -> So
 
     Cost: O(N^3) for N modes.
     """
-    response = Response(net, as_built)
-    circuit, n = response.circuit, len(net.inputs)
-    table = cell_table(net, circuit)
-    best: tuple[float, Fitted] | None = None
-    decomposed: dict[str, Steps] = {}
-    for name, first in placements(table, n):
-        if name not in decomposed:
-            decomposed[name] = DECOMPOSITIONS[name](target.matrix)
-        steps = decomposed[name]
-        fitted = fit_cells(
-            net, as_built, circuit, table, steps, _steps_on_cells(table, steps, first, n), reach, target.free
-        )
-        error = matrix_error(response.matrix(fitted.settings), target.matrix, target.free)
-        if best is None or error < best[0]:
-            best = error, fitted
-        if not fitted.shortfalls:
-            break
-    if best is None:
-        raise NoClosedForm(
-            f"no closed form: the {len(table.cell)} cells of this mesh of {n} modes hold neither a rectangle of "
-            f"{n} columns nor a triangle of {max(2 * n - 3, 1)}"
-        )
-    error, fitted = best
-    if fitted.shortfalls:
-        reason = "out_of_range"
-    elif error > EXACT:
-        reason = "no_output_phases" if len(fitted.bare_lanes) else "losses"
-    else:
-        reason = "exact"
-    counts = {"cells": len(table.cell), "out_of_range": len(fitted.shortfalls)}
-    return Solution(fitted.settings, 1.0 - error**2, error, reason, fitted.shortfalls, fitted.free_settings, counts)
+    return ClosedForm(net, as_built, target).solution(reach)

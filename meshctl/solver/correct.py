@@ -59,8 +59,8 @@ def _turn(phase):  # type: ignore[no-untyped-def]
     return complex(math.cos(phase), math.sin(phase))
 
 
-@kernel(UniTuple(float64, 2)(float64, float64, float64, float64, float64, float64, float64, float64))
-def _inner_phase(bar, cross, a, b, error, low, high, period):  # type: ignore[no-untyped-def]
+@kernel(UniTuple(float64, 2)(float64, float64, float64, float64, float64, float64, float64, float64, uint8))
+def _inner_phase(bar, cross, a, b, error, low, high, period, flip):  # type: ignore[no-untyped-def]
     """(setting, wanted) of a Mach-Zehnder cell with couplers a, b that is to split as bar to cross."""
     quarter = math.pi / 4
     if abs(a - quarter) < 1e-15 and abs(b - quarter) < 1e-15:
@@ -70,6 +70,8 @@ def _inner_phase(bar, cross, a, b, error, low, high, period):  # type: ignore[no
         swing = 2.0 * ca * cb * sa * sb
         x = (ca * ca * cb * cb + sa * sa * sb * sb - bar * bar) / swing if swing != 0.0 else 0.0
         theta = math.acos(min(max(x, -1.0), 1.0))
+    if flip == 1:
+        theta = -theta
     # both signs split alike; the second is taken where the first is out of reach
     plus = _nearest(theta - error, low, high, period)
     off_plus = _wrapped(plus + error - theta, 2 * math.pi)
@@ -139,6 +141,8 @@ _IN = given(float64)
         _IN,  # high
         _IN,  # period
         _IN,  # idle, within low..high
+        given(uint8),  # flip: cells whose inner phase is taken negative
+        uint8,  # free_inputs: 1 where input phases do not count
         filled(float64),  # settings, at idle
         filled(float64),  # wanted, at idle
         filled(float64),  # off: used minus wanted cross power, by cell
@@ -149,8 +153,10 @@ _IN = given(float64)
 )
 def _walk(  # type: ignore[no-untyped-def]
     event, form, lane, element, step, half, outer, setting_of, base, lane_of, is_phase,
-    low, high, period, idle, settings, wanted, off, carried, aligned, output,
+    low, high, period, idle, flip, free_inputs, settings, wanted, off, carried, aligned, output,
 ):  # fmt: skip
+    # lanes of one group hang together in phase; between groups input phases are still to be chosen
+    group = np.arange(len(carried))
     for v in range(len(event)):
         c = event[v]
         if c < 0:
@@ -178,7 +184,7 @@ def _walk(  # type: ignore[no-untyped-def]
             i = element[c, 2]
             s = setting_of[i]
             a, b = base[element[c, 1]], base[element[c, 3]]
-            settings[s], wanted[s] = _inner_phase(bar, cross, a, b, base[i], low[s], high[s], period[s])
+            settings[s], wanted[s] = _inner_phase(bar, cross, a, b, base[i], low[s], high[s], period[s], flip[c])
             z00, z01, z10, z11 = _mzi_block(a, b, settings[s] + base[i])
         else:
             i = element[c, 1]
@@ -191,12 +197,26 @@ def _walk(  # type: ignore[no-untyped-def]
         p = element[c, 0]
         t = setting_of[p]
         match = z01 * w00 * (w01 * z00).conjugate()
-        if bar * cross > ALIGNED and abs(match) > 0.0:
+        apart = free_inputs == 1 and group[m] != group[m + 1]
+        if apart and abs(match) > 0.0:
+            # the phase stays at rest, and the inputs that lead to the upper lane are turned for it
+            turn = _turn(settings[t] + base[p]) * match.conjugate() / abs(match)
+            moved = group[m]
+            for q in range(len(group)):
+                if group[q] == moved:
+                    carried[q] *= turn.conjugate()
+            w00, w10 = w00 * turn, w10 * turn
+            aligned[t] = 1
+        elif bar * cross > ALIGNED and abs(match) > 0.0:
             value = math.atan2(match.imag, match.real) - base[p]
             settings[t] = _nearest(value, low[t], high[t], period[t])
             wanted[t] = settings[t] - _wrapped(settings[t] - value, 2 * math.pi)
         else:
             aligned[t] = 1
+        joined = group[m + 1]
+        for q in range(len(group)):
+            if group[q] == joined:
+                group[q] = group[m]
         ep = _turn(settings[t] + base[p])
         # the phases behind the cell, each from the overlap of its row
         q0 = z00 * ep * w00.conjugate() + z01 * w01.conjugate()
@@ -249,7 +269,7 @@ def _output_phases(
 
 def fit_cells(
     net: Net, as_built: AsBuilt, circuit: Circuit, table: CellTable, steps: Steps, step_of: np.ndarray,
-    reach: Reach, free: str,
+    reach: Reach, free: str, flip: np.ndarray | None = None,
 ) -> Fitted:  # fmt: skip
     """Set every cell so that the chip as built gives the steps, as near as it can.
 
@@ -258,6 +278,7 @@ def fit_cells(
     step_of : int64 (C,), the step that each cell of `table` takes, -1: bar
     reach : Reach of all settings
     free : port phases that do not count
+    flip : uint8 (C,), cells whose inner phase is taken negative; the phases behind them are pushed on
 
     Cost: linear in the cells.
     """
@@ -271,7 +292,9 @@ def fit_cells(
     _walk(
         table.event, table.form, table.lane, table.element, step_of, steps.half_angle_rad, steps.outer_rad,
         net.setting_of, base, circuit.element_lane_a, (net.kind == PHASE).astype(np.uint8),
-        reach.low, reach.high, reach.period, reach.idle, settings, wanted, off, carried, aligned, output,
+        reach.low, reach.high, reach.period, reach.idle,
+        np.zeros(len(table.cell), np.uint8) if flip is None else flip, np.uint8(free in ("inputs", "both")),
+        settings, wanted, off, carried, aligned, output,
     )  # fmt: skip
     missed = np.flatnonzero(np.abs(settings - wanted) > 2 * SLACK)
     cell_off = np.zeros(net.n_settings)
