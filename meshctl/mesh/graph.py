@@ -24,6 +24,8 @@ if TYPE_CHECKING:  # pragma: no cover
     import networkx
     from scipy.sparse import csr_matrix
 
+    from meshctl.mesh.measured import Measured
+
 FREE = -1  # in `mate`: no partner; in `setting_of`: fixed; in `cell_of`: in no cell
 
 
@@ -96,6 +98,8 @@ class Net:
     guide_loss_db_per_cm: float
     angle_slope_per_nm: float
     names: Names = field(repr=False)
+    reflections: dict[int, complex] = field(default_factory=dict)  # element -> field that it returns, both sides
+    measured: dict[int, Measured] = field(default_factory=dict)  # element -> its measured S
 
     @property
     def n_elements(self) -> int:

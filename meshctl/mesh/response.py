@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from functools import cached_property
+from typing import TYPE_CHECKING
 from weakref import WeakKeyDictionary
 
 import numpy as np
@@ -14,25 +15,26 @@ import numpy as np
 from meshctl.errors import LoopInNet, WrongSize
 from meshctl.mesh.graph import AsBuilt, Net
 from meshctl.optics import elements as parts
-from meshctl.optics.adjoint import Keeping, fuse_back, keeping, propagate_back, run_keeping
 from meshctl.optics.feedforward import Circuit, compile_circuit, fuse, propagate
 from meshctl.units import UM_PER_CM, amplitude_from_loss_db
+
+if TYPE_CHECKING:  # pragma: no cover
+    from meshctl.mesh.waves import Waves
+    from meshctl.optics.adjoint import Keeping
 
 _circuits: WeakKeyDictionary[Net, Circuit | None] = WeakKeyDictionary()
 
 
 def circuit_of(net: Net) -> Circuit | None:
-    """The net compiled for the loop-free kernels, or None where it has a loop; compiled once per net."""
+    """The net compiled for the loop-free kernels, or None where it has a loop or a part reflects; once per net."""
     if net not in _circuits:
-        _circuits[net] = compile_circuit(net.port_start, net.mate, net.cell_of, net.input_ports, net.output_ports)
+        reflects = np.array([kind.reflects for kind in parts.KINDS])[net.kind].any()
+        _circuits[net] = (
+            None
+            if reflects
+            else compile_circuit(net.port_start, net.mate, net.cell_of, net.input_ports, net.output_ports)
+        )
     return _circuits[net]
-
-
-def _light_order(net: Net) -> Circuit:
-    circuit = circuit_of(net)
-    if circuit is None:
-        raise LoopInNet("the net has a loop or a link that runs against the light")
-    return circuit
 
 
 class Response:
@@ -44,15 +46,11 @@ class Response:
     as_built : AsBuilt
         Splitting errors, losses and stuck settings of the die.
 
-    Raises
-    ------
-    LoopInNet
-        Where the net has a loop.
+    A net without loops and reflections goes through the loop-free kernels; `waves` serves all others.
     """
 
     def __init__(self, net: Net, as_built: AsBuilt) -> None:
         self.net, self.as_built = net, as_built
-        self.circuit = _light_order(net)
         kind = net.kind
         self._couplers = np.flatnonzero(kind == parts.COUPLER)
         self._turning = np.flatnonzero((kind == parts.PHASE) | (kind == parts.GUIDE))
@@ -65,7 +63,38 @@ class Response:
         self._base = net.nominal + as_built.error_rad
         self._base[self._moved] = as_built.error_rad[self._moved]
         self._moved_by = net.setting_of[self._moved]
-        self._centre = self._prepare_centre()
+
+    @cached_property
+    def circuit(self) -> Circuit:
+        """The net in light order.
+
+        Raises
+        ------
+        LoopInNet
+            Where the net has a loop, a link that runs against the light, or a part that reflects.
+        """
+        circuit = circuit_of(self.net)
+        if circuit is None:
+            raise LoopInNet(
+                "the net has a loop, a link against the light or a part that reflects, and so no light order",
+                remedy="use predict for its matrix",
+            )
+        return circuit
+
+    @property
+    def loops(self) -> bool:
+        """True where light may run both ways, so that `waves` is what answers."""
+        return circuit_of(self.net) is None
+
+    @cached_property
+    def waves(self) -> Waves:
+        """The same net by scattering, loops and reflections included."""
+        from meshctl.mesh.waves import Waves
+
+        return Waves(self.net, self.as_built)
+
+    def _wavelengths(self, wavelengths_nm: np.ndarray | None) -> np.ndarray:
+        return np.array([self.net.wavelength_nm]) if wavelengths_nm is None else np.asarray(wavelengths_nm, float)
 
     def values(self, settings: np.ndarray) -> np.ndarray:
         """Value in force of every element [E] at the centre wavelength."""
@@ -89,7 +118,8 @@ class Response:
         table[0, turning] = np.cos(phase) * amplitude[turning]
         table[1, turning] = np.sin(phase) * amplitude[turning]
 
-    def _prepare_centre(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    @cached_property
+    def _centre(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Amplitudes of all parts with no setting in force, and the rows that settings move."""
         net = self.net
         table = np.zeros((4, net.n_elements))
@@ -153,8 +183,11 @@ class Response:
         -------
         complex (out, in), or (W, out, in) where wavelengths are given.
 
-        Cost: per wavelength a few real products of the matrix's size.
+        Cost: per wavelength a few real products of the matrix's size; with loops see `optics.scattering`.
         """
+        if self.loops:
+            found = self.waves.matrix(self.values(settings), self._wavelengths(wavelengths_nm))
+            return found[0] if wavelengths_nm is None else found
         return self.fields(settings, np.eye(self.circuit.n_inputs), wavelengths_nm)
 
     def fields(
@@ -170,11 +203,11 @@ class Response:
         -------
         complex (out,) or (out, k); with wavelengths an axis of W before.
         """
-        columns = np.asarray(entering)
-        if columns.shape[0] != self.circuit.n_inputs:
-            raise WrongSize(
-                f"the entering field has {columns.shape[0]} rows; the chip has {self.circuit.n_inputs} inputs"
-            )
+        columns, n_inputs = np.asarray(entering), len(self.net.inputs)
+        if columns.shape[0] != n_inputs:
+            raise WrongSize(f"the entering field has {columns.shape[0]} rows; the chip has {n_inputs} inputs")
+        if self.loops:
+            return np.tensordot(self.matrix(settings, wavelengths_nm), columns, axes=(-1, 0))
         flat = columns.reshape(columns.shape[0], -1)
         value = self.values(settings)
         if wavelengths_nm is None:
@@ -183,8 +216,40 @@ class Response:
         runs = [self._run(self._blocks(value, float(w)), flat) for w in wavelengths_nm]
         return np.array(runs).reshape(len(runs), -1, *columns.shape[1:])
 
+    def slope_per_nm(self, settings: np.ndarray, wavelengths_nm: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Field matrices and their derivative by the wavelength, complex [W, out, in] both.
+
+        Cost: two to three times `matrix`; without loops one pass through all parts one by one.
+        """
+        value, waves = self.values(settings), np.asarray(wavelengths_nm, float)
+        if self.loops:
+            return self.waves.slope_per_nm(value, waves)
+        from meshctl.optics.slope import follow
+
+        circuit = self.circuit
+        found = np.empty((2, len(waves), len(circuit.output_lane), circuit.n_inputs), complex)
+        for w, wave in enumerate(waves.tolist()):
+            found[:, w] = follow(circuit, self._table(value, wave), self._table_slope(value, wave))
+        return found[0], found[1]
+
+    def _table_slope(self, value: np.ndarray, wavelength_nm: float) -> np.ndarray:
+        """Derivative by the wavelength of the amplitudes [4, E] of all parts."""
+        net, table = self.net, np.zeros((4, self.net.n_elements))
+        k, p = self._couplers, self._turning
+        angle = value[k] * parts.angle_scale(wavelength_nm, net.wavelength_nm, net.angle_slope_per_nm)
+        rate = self._amplitude[k] * value[k] * net.angle_slope_per_nm
+        table[0, k], table[3, k] = -np.sin(angle) * rate, np.cos(angle) * rate
+        now = self._table(value, wavelength_nm)
+        turning = value[p] * parts.phase_slope_per_nm(wavelength_nm, net.wavelength_nm) + net.length_um[
+            p
+        ] * parts.guide_slope_rad_per_um_nm(wavelength_nm, net.n_group)
+        table[0, p], table[1, p] = -now[1, p] * turning, now[0, p] * turning
+        return table
+
     @cached_property
     def _keeping(self) -> Keeping:
+        from meshctl.optics.adjoint import keeping
+
         return keeping(self.circuit, self._amplitude)
 
     def pullback(
@@ -207,8 +272,12 @@ class Response:
         -------
         float (S,), zero for stuck settings
 
-        Cost: three to four times `matrix`.
+        Cost: three to four times `matrix`; with loops two to three times.
         """
+        if self.loops:
+            return self._pullback_by_waves(settings, cotangent, wavelengths_nm)
+        from meshctl.optics.adjoint import fuse_back, propagate_back, run_keeping
+
         circuit, net = self.circuit, self.net
         value, waves = self.values(settings), [None] if wavelengths_nm is None else [float(w) for w in wavelengths_nm]
         went, matrices = [], []
@@ -242,4 +311,21 @@ class Response:
                 phase = parts.phase_scale(wave, net.wavelength_nm)
                 moved = moved * np.where(net.kind[self._moved] == parts.COUPLER, angle, phase)
             gradient += np.bincount(self._moved_by, moved, net.n_settings)
+        return np.where(np.isnan(self.as_built.stuck_rad), gradient, 0.0)
+
+    def _pullback_by_waves(
+        self,
+        settings: np.ndarray,
+        cotangent: np.ndarray | Callable[[np.ndarray], np.ndarray],
+        wavelengths_nm: np.ndarray | None,
+    ) -> np.ndarray:
+        def by_matrix(found: np.ndarray) -> np.ndarray:
+            matrix = found[0] if wavelengths_nm is None else found
+            given = cotangent(matrix) if callable(cotangent) else cotangent
+            if given.shape != matrix.shape:
+                raise WrongSize(f"the cotangent has shape {given.shape}; the matrix {matrix.shape}")
+            return given.reshape(found.shape)
+
+        by_value = self.waves.pullback(self.values(settings), by_matrix, self._wavelengths(wavelengths_nm))
+        gradient = np.bincount(self._moved_by, by_value[self._moved], self.net.n_settings)
         return np.where(np.isnan(self.as_built.stuck_rad), gradient, 0.0)

@@ -9,13 +9,15 @@ Conventions, each tested by number in tests/test_elements.py:
 - A Mach-Zehnder cell is ``C(pi/4 + e2) diag(exp(i inner), 1) C(pi/4 + e1) diag(exp(i outer), 1)`` with
   both phases on the upper arm: inner = 0 is cross, inner = pi is bar.
 - A crossing is ``[[0, 1], [1, 0]]``. Matrices are [out, in].
+- A part that reflects is ``[[r, t], [t, r]]`` with t >= 0 and r = |r| exp(i psi); psi is +pi/2 unless given,
+  which keeps it passive: |t +- r| <= 1. A terminator is ``[r]``, psi 0 unless given.
 - Values hold at the centre wavelength l0. A phase scales as l0/l; a guide turns by
   2 pi L (n(l)/l - n(l0)/l0) with n(l) = n_eff - (n_group - n_eff)(l - l0)/l0; a coupler angle is
   value * (1 + angle_slope_per_nm (l - l0)).
 
 All functions take numpy or jax.numpy arrays: pass the module as `xp`.
-Public: KINDS, kind_row, through_and_cross, coupler_block, phase_block, cell_block, phase_scale,
-angle_scale, guide_phase_rad.
+Public: KINDS, kind_row, HAS_PHASE, through_and_cross, coupler_block, phase_block, cell_block, phase_scale,
+angle_scale, guide_phase_rad, phase_slope_per_nm, guide_phase_rad_per_um, guide_slope_rad_per_um_nm.
 """
 
 from __future__ import annotations
@@ -41,19 +43,29 @@ class Kind:
 
 
 FOUR = ("a1", "a2", "b1", "b2")
+_RETURNS = ("reflection_db", "reflected_power", "reflection_rad")
+_PASSES = ("loss_db", "transmitted_power", *_RETURNS)
+_FILE = ("file", "ports", "time")
 KINDS: tuple[Kind, ...] = (
     Kind("coupler", FOUR, "rad", ("angle_rad", "cross_power"), np.pi / 4),
     Kind("phase", ("a", "b"), "rad", ("phase_rad",), 0.0),
     Kind("guide", ("a", "b"), "um", ("length_um",), None),
     Kind("loss", ("a", "b"), "dB", ("loss_db",), None),
     Kind("crossing", FOUR, "", (), 0.0),
+    Kind("isolation", ("a", "b"), "dB", _PASSES, None, reflects=True),  # an electrical gap across a waveguide
+    Kind("tether", ("a", "b"), "dB", _PASSES, None, reflects=True),  # holds a suspended waveguide
+    Kind("mirror", ("a", "b"), "dB", _PASSES, None, reflects=True),
+    Kind("terminator", ("a",), "", _RETURNS, 0.0, reflects=True),
+    Kind("measured", ("a", "b"), "", _FILE, None, reflects=True),
+    Kind("measured", FOUR, "", _FILE, None, reflects=True),
 )
-COUPLER, PHASE, GUIDE, LOSS, CROSSING = range(5)
-_ROWS = {kind.name: row for row, kind in enumerate(KINDS)}
+COUPLER, PHASE, GUIDE, LOSS, CROSSING, ISOLATION, TETHER, MIRROR, TERMINATOR, MEASURED2, MEASURED4 = range(11)
+HAS_PHASE = (COUPLER, PHASE, GUIDE)  # kinds whose value in force is an angle or a phase
+_ROWS = {kind.name: row for row, kind in reversed(list(enumerate(KINDS)))}
 
 
 def kind_row(name: str) -> int | None:
-    """Row of a kind in KINDS, or None for an unknown name."""
+    """Row of a kind in KINDS (of several with one name the first), or None for an unknown name."""
     return _ROWS.get(name)
 
 
@@ -70,9 +82,7 @@ def phase_block(phase_rad: Any, xp: Any = np) -> Any:
     return xp.stack([xp.stack([e, zero], -1), xp.stack([zero, one], -1)], -2)
 
 
-def cell_block(
-    inner_rad: Any, outer_rad: Any, error1_rad: Any = 0.0, error2_rad: Any = 0.0, xp: Any = np
-) -> Any:
+def cell_block(inner_rad: Any, outer_rad: Any, error1_rad: Any = 0.0, error2_rad: Any = 0.0, xp: Any = np) -> Any:
     """Mach-Zehnder cells [..., 2, 2] with splitting errors of the first and second coupler."""
     quarter = xp.asarray(np.pi / 4)
     first = coupler_block(quarter + error1_rad, xp) @ phase_block(xp.asarray(outer_rad), xp)
@@ -89,16 +99,28 @@ def angle_scale(wavelength_nm: float, centre_nm: float, angle_slope_per_nm: floa
     return 1.0 + angle_slope_per_nm * (wavelength_nm - centre_nm)
 
 
-def guide_phase_rad(
-    length_um: Any, wavelength_nm: float, centre_nm: float, n_eff: float, n_group: float
-) -> Any:
+def guide_phase_rad(length_um: Any, wavelength_nm: float, centre_nm: float, n_eff: float, n_group: float) -> Any:
     """Phase of guides relative to the centre wavelength, rad.
 
     Source: first-order dispersion, n_group = n_eff - lambda dn/dlambda (textbook waveguide optics).
     """
+    return length_um * guide_phase_rad_per_um(wavelength_nm, centre_nm, n_eff, n_group)
+
+
+def guide_phase_rad_per_um(wavelength_nm: Any, centre_nm: float, n_eff: float, n_group: float) -> Any:
+    """Phase per micrometre of guide relative to the centre wavelength; wavelengths may be an array."""
     index = n_eff - (n_group - n_eff) * (wavelength_nm - centre_nm) / centre_nm
-    per_um = NM_PER_UM * (index / wavelength_nm - n_eff / centre_nm)
-    return TWO_PI * length_um * per_um
+    return TWO_PI * NM_PER_UM * (index / wavelength_nm - n_eff / centre_nm)
+
+
+def phase_slope_per_nm(wavelength_nm: Any, centre_nm: float) -> Any:
+    """Derivative of `phase_scale` by the wavelength."""
+    return -centre_nm / wavelength_nm**2
+
+
+def guide_slope_rad_per_um_nm(wavelength_nm: Any, n_group: float) -> Any:
+    """Derivative of the phase per micrometre of guide by the wavelength: n(l)/l falls with n_group / l^2."""
+    return -TWO_PI * NM_PER_UM * n_group / wavelength_nm**2
 
 
 def through_and_cross(
