@@ -22,6 +22,7 @@ from meshctl.mesh.inventory import Inventory, inventory
 from meshctl.mesh.lightorder import HEAD, LightRow, light_order
 from meshctl.mesh.meshfile import MESH_TOML, die_tables, lattice, load, write
 from meshctl.plan.chip import Chip
+from meshctl.plan.energy import Energy, energy
 from meshctl.plan.pipeline import Prediction, predict, solve
 from meshctl.plan.plan import Plan, check_fresh, plan_text, read_plan
 from meshctl.solver.target import Target, read_target
@@ -77,6 +78,10 @@ class Session:
         """The parts in light order, settings as the codes of the plan give them."""
         plan = self._in_hand()
         return light_order(self.mesh.net, self.mesh.as_built, plan.settings, Chip(self.mesh).actual(plan.codes))
+
+    def energy(self) -> Energy:
+        """What holding the plan in hand costs, and reaching it from power off."""
+        return energy(Chip(self.mesh), self._in_hand().codes)
 
     # ---- writing
     def write_plan(self, path: str | Path) -> None:

@@ -13,7 +13,7 @@ from meshctl.drive import integer
 from meshctl.drive.crosstalk import Crosstalk
 from meshctl.drive.factor import factor
 from meshctl.drive.integer import Programme, prove
-from meshctl.drive.neighbours import from_positions
+from meshctl.mesh.neighbours import from_positions
 from meshctl.drive.wraps import LIMIT_TOLERANCE, least_power_wraps
 from meshctl.errors import CrosstalkNotDominant, NotFinite, NotFound, Unreachable
 

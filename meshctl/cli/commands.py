@@ -13,7 +13,7 @@ from argparse import Namespace
 from typing import Any
 
 from meshctl.cli import printing
-from meshctl.errors import DONE
+from meshctl.errors import DONE, WrongUsage
 from meshctl.session import Session, demo_mesh_folder, new_mesh, require_suffix, wavelength_range
 
 
@@ -118,6 +118,21 @@ def elements(words: Namespace) -> int:
     if words.json:
         return _json({"file": words.out, "rows": count})
     print(f"{words.out}: {count} parts in light order")
+    return DONE
+
+
+def energy(words: Namespace) -> int:
+    if len(words.pairs) % 2:
+        raise WrongUsage(f"'{words.pairs[-1]}' has no plan", remedy="name meshes and plans in pairs: MESH PLAN ..")
+    found = {}
+    for folder, path in zip(words.pairs[::2], words.pairs[1::2], strict=True):
+        session = Session(folder)
+        session.open_plan(path, stale_ok=words.stale_ok)
+        _remark(session.remarks)
+        found[f"{session.mesh.name} {path}"] = session.energy()
+    if words.json:
+        return _json(printing.finite({name: dataclasses.asdict(e) for name, e in found.items()}))
+    print(printing.energy_table(found))
     return DONE
 
 

@@ -14,6 +14,7 @@ from meshctl.errors import WrongUsage
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.inventory import Inventory
 from meshctl.mesh.tables import unknown_name
+from meshctl.plan.energy import Energy
 from meshctl.plan.pipeline import Prediction
 from meshctl.plan.plan import Plan
 from meshctl.solver.solution import REASONS
@@ -173,6 +174,21 @@ def _power_table(mesh: Mesh, matrix: np.ndarray) -> str:
         lines.append(f"{name:<12}{cells}")
     share = "".join(f"{t:>{width}.4f}" for t in np.sum(np.abs(matrix) ** 2, axis=0))
     lines.append(f"{'throughput':<12}{share}")
+    return "\n".join(lines)
+
+
+def energy_table(found: dict[str, Energy]) -> str:
+    """States side by side: power to hold, energy to reach, and both after a second and an hour."""
+    name = max(12, *(len(n) for n in found))
+    head = f"{'mesh, plan':<{name}}{'hold mW':>12}{'switch nJ':>12}{'1 s in mJ':>14}{'1 h in J':>12}"
+    lines = [f"{head}  hottest, ground currents"]
+    for label, e in found.items():
+        switch = f"{e.switch_nj:.4g}" if math.isfinite(e.switch_nj) else "unknown"
+        hour = 3.6 * e.hold_mw
+        held = e.hold_mw + (1e-6 * e.switch_nj if math.isfinite(e.switch_nj) else 0.0)
+        notes = f"{e.hottest} {e.hottest_mw:.4g} mW" if e.hottest else "no static power"
+        notes += "".join(f", {g} {ma:.4g} mA" for g, ma in e.ground_ma.items())
+        lines.append(f"{label:<{name}}{e.hold_mw:>12.4g}{switch:>12}{held:>14.4g}{hour:>12.4g}  {notes}")
     return "\n".join(lines)
 
 

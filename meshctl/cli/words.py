@@ -110,6 +110,14 @@ def parser() -> argparse.ArgumentParser:
     elements.add_argument("-o", "--out", metavar="FILE.csv", required=True)
     _stale(elements)
 
+    cost = verb(
+        "energy",
+        "what holding and switching states costs, side by side",
+        "meshctl energy meshes/plover8 plan.json meshes/dunlin other.json",
+    )
+    cost.add_argument("pairs", metavar="MESH PLAN", nargs="+", help="a mesh and its plan, as often as wished")
+    _stale(cost)
+
     verb("demo", "the main job on a shipped mesh, with what it means", "meshctl demo")
     return top
 

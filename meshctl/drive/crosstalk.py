@@ -3,7 +3,7 @@
 Own changes p and total changes x, both in the same unit (rad or turns of 2 pi), obey x = C p with
 C = I + K: K[i, j] is what actuator j adds to i for each unit that it gives itself. The near part of K
 is sparse and factored once; a far part (dense, or a product U V^T of few columns) is kept beside it.
-Coefficients from the places of the heaters, and what leaving out the far ones costs, are in `neighbours`.
+Coefficients from the places of the heaters, and what leaving out the far ones costs, are in `mesh.neighbours`.
 
 Public: Crosstalk, CONDITION_LIMIT, DENSE_TO, PARTNERS.
 """

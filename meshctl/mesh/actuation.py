@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import DuplicateName, MissingRow, OutOfRange, UnknownKey, UnsoundFile
+from meshctl.errors import DuplicateName, Finding, MissingRow, OutOfRange, UnknownKey, UnsoundFile
 from meshctl.laws import LAWS, law_row
 from meshctl.laws.law import Law, check_params
 from meshctl.mesh.description import MESH_TOML, Description
@@ -323,9 +323,9 @@ def _channels(
     return channel, channels
 
 
-def _crosstalk(net: Net, actuators: Actuators, names: list[str], table: Table | None) -> Any:
+def _crosstalk(net: Net, names: list[str], actuators: Actuators, table: Table | None) -> Any:
     if table is None or not len(table):
-        return None
+        return actuators.crosstalk
     from scipy.sparse import csr_matrix
 
     row_of = {name: a for a, name in enumerate(names)}
@@ -347,6 +347,74 @@ def _crosstalk(net: Net, actuators: Actuators, names: list[str], table: Table | 
         entries[key] = table.column("coefficient")[i]
     rows, columns = zip(*entries, strict=True)
     return csr_matrix((list(entries.values()), (rows, columns)), shape=(net.n_settings, len(names)))
+
+
+def _arms(description: Description, net: Net) -> tuple[np.ndarray, np.ndarray]:
+    """Places (um) of the arm that each setting's phase is of, and of the arm it is compared with, [S, 2].
+
+    Outer phases stand a quarter of the column pitch before the middle of their cell, inner ones as far behind;
+    a phase in no cell has one arm alone, behind the last column.
+    """
+    lattice, crosstalk = description.lattice, description.crosstalk
+    assert crosstalk is not None
+    if lattice is None:
+        raise UnsoundFile(
+            "places are known for lattices only",
+            where=f"{MESH_TOML} key 'crosstalk'",
+            remedy="give crosstalk.csv for a net of your own",
+        )
+    pitch_x, pitch_y = lattice.pitch_um
+    cell = net.cell_of[net.first_element]
+    middle = np.zeros((net.n_settings, 2))
+    middle[cell >= 0] = net.cell_xy_um[cell[cell >= 0]]
+    order = np.zeros(net.n_settings, np.int64)
+    order[1:] = (cell[1:] == cell[:-1]) & (cell[1:] >= 0)
+    middle[:, 0] += np.where(cell >= 0, np.where(order == 0, -0.25, 0.25) * pitch_x, 0.0)
+    loose = np.flatnonzero(cell < 0)
+    middle[loose, 0] = net.cell_xy_um[:, 0].max(initial=0.0) + pitch_x
+    middle[loose, 1] = -np.arange(len(loose)) * pitch_y
+    half = np.array([0.0, 0.5 * crosstalk.arm_um])
+    upper, lower = middle + half, middle - half
+    upper[loose], lower[loose] = middle[loose], np.nan
+    return upper, lower
+
+
+def _from_places(description: Description, net: Net, actuators: Actuators) -> Any:
+    """Signed crosstalk [S, A] of all heaters by the distance law of mesh.toml."""
+    from scipy.sparse import csr_matrix, diags_array
+
+    from meshctl.mesh.neighbours import from_positions
+
+    crosstalk = description.crosstalk
+    assert crosstalk is not None
+    upper, lower = (arms[actuators.setting] for arms in _arms(description, net))
+    arm = np.ones(len(actuators))
+    if "arm" in actuators.params:
+        arm = np.where(np.isnan(actuators.params["arm"]), 1.0, actuators.params["arm"])
+    swapped = (arm < 0)[:, None] & ~np.isnan(lower)
+    warmed, compared = np.where(swapped, lower, upper), np.where(swapped, upper, lower)
+    try:
+        matrix = from_positions(
+            warmed,
+            compared,
+            crosstalk.amplitude,
+            crosstalk.distance_um,
+            crosstalk.law,
+            keep_above=crosstalk.keep_above,
+        )
+    except Finding as finding:
+        finding.where = f"{MESH_TOML} key 'crosstalk'" + (f", {finding.where}" if finding.where else "")
+        raise
+    heats = np.array([LAWS[number].power_law for number in actuators.law.tolist()], float)
+    signed = (diags_array(arm) @ matrix @ diags_array(arm * heats)).tocoo()
+    # one row per setting: that of its first actuator; a setting's own actuators do not disturb it
+    first = np.full(net.n_settings, FREE)
+    first[actuators.setting[::-1]] = np.arange(len(actuators))[::-1]
+    keep = (first[actuators.setting[signed.row]] == signed.row) & (
+        actuators.setting[signed.row] != actuators.setting[signed.col]
+    )
+    shape = (net.n_settings, len(actuators))
+    return csr_matrix((signed.data[keep], (actuators.setting[signed.row[keep]], signed.col[keep])), shape=shape)
 
 
 def _plain_columns(description: Description, n: int) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray]:
@@ -396,6 +464,12 @@ def join_actuation(
         With file and line or key, the value, what is allowed and what to do.
     """
     actuators, named, places = _actuators(description, net, actuator_rows)
+    if description.crosstalk is not None:
+        if crosstalk_rows is not None:
+            raise DuplicateName(
+                "crosstalk is given by [crosstalk] and by crosstalk.csv", where=MESH_TOML, remedy="keep one of them"
+            )
+        actuators = replace(actuators, crosstalk=_from_places(description, net, actuators))
     needs_tables = any(LAWS[n].has_tables for n in np.unique(actuators.law).tolist())
     # names of all actuators are only made where a table speaks of them
     by_name = named or actuators.given_names or channel_rows or measured_rows or crosstalk_rows or needs_tables
@@ -415,7 +489,7 @@ def join_actuation(
         actuators,
         channel=frozen(channel),
         tables=_measured(actuators, names, measured_rows),
-        crosstalk=_crosstalk(net, actuators, names, crosstalk_rows),
+        crosstalk=_crosstalk(net, names, actuators, crosstalk_rows),
     )
     _check_laws(actuators, net, places)
     return actuators, channels

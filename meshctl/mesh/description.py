@@ -20,7 +20,7 @@ from pydantic import (
 )
 
 from meshctl.errors import Finding, MissingRow, NotFinite, OutOfRange, UnknownKey, UnsoundFile
-from meshctl.mesh.lattices import LATTICES
+from meshctl.mesh.lattices import LATTICES, PLANE_SIZES
 from meshctl.mesh.quantities import QUANTITIES
 from meshctl.mesh.tables import unknown_name
 
@@ -74,11 +74,31 @@ class LatticePart(_Strict):
     spare: _count("spare") = 0  # type: ignore[valid-type]
     output_phases: bool = True
     balanced: bool = False
+    rings: _count("rings") | None = None  # type: ignore[valid-type]
+    rows: _count("rows") | None = None  # type: ignore[valid-type]
+    columns: _count("columns") | None = None  # type: ignore[valid-type]
+    side_um: _number("side_um") = QUANTITIES["side_um"].default  # type: ignore[valid-type]
+
+    def plane_size(self) -> dict[str, int]:
+        """Keys and values that size a lattice with loops."""
+        return {key: getattr(self, key) for key in ("rings", "rows", "columns") if getattr(self, key) is not None}
 
     @model_validator(mode="after")
     def _known_shape(self) -> LatticePart:
         if self.shape not in LATTICES:
             raise _Refused(unknown_name("shape", self.shape, LATTICES, ""))
+        sizes, given = PLANE_SIZES.get(self.shape), tuple(self.plane_size())
+        others = {"side_um"} if sizes is None else {"modes", "spare", "pitch_um", "output_phases", "balanced"}
+        for key in (*(given if sizes is None else ()), *sorted(others & self.model_fields_set)):
+            raise _Refused(UnknownKey(f"a {self.shape} lattice takes no '{key}'", remedy="remove it"))
+        if sizes is not None and given not in sizes:
+            wanted = " or ".join(" and ".join(f"'{key}'" for key in way) for way in sizes)
+            found = " and ".join(f"'{key}'" for key in given) or "nothing"
+            raise _Refused(
+                MissingRow(f"a {self.shape} lattice needs {wanted}, not {found}", remedy="write its size so")
+            )
+        if sizes is not None:
+            return self
         if self.modes is None and self.shape != "switch":
             raise _Refused(MissingRow(f"a {self.shape} lattice needs 'modes'", remedy="write how many lanes it has"))
         return self
@@ -119,6 +139,16 @@ class GroundPart(_Strict):
     resistance_ohm: _number("resistance_ohm")  # type: ignore[valid-type]
 
 
+class CrosstalkPart(_Strict):
+    """Thermal crosstalk from the places of all arms; heaters lie on the upper arm unless their `arm` is -1."""
+
+    law: Literal["exponential", "inverse"]
+    amplitude: _number("amplitude")  # type: ignore[valid-type]
+    distance_um: _number("distance_um")  # type: ignore[valid-type]
+    arm_um: _number("arm_um")  # type: ignore[valid-type]
+    keep_above: _number("keep_above") = 0.0  # type: ignore[valid-type]
+
+
 class RestPart(_Strict):
     state: Literal["bar", "cross", "unknown"] = "unknown"
 
@@ -137,7 +167,18 @@ class SpreadPart(_Strict):
 
 class InsertPart(_Strict):
     name: str
-    kind: Literal["tap", "loss", "guide", "phase"]
+    kind: Literal[
+        "tap",
+        "loss",
+        "guide",
+        "phase",
+        "isolation",
+        "tether",
+        "crossing",
+        "mirror",
+        "terminator",
+        "measured",
+    ]
     at: str
     monitor: str | None = None
     cross_power: _number("cross_power") | None = None  # type: ignore[valid-type]
@@ -145,6 +186,13 @@ class InsertPart(_Strict):
     loss_db: _number("loss_db") | None = None  # type: ignore[valid-type]
     length_um: _number("length_um") | None = None  # type: ignore[valid-type]
     phase_rad: _number("phase_rad") | None = None  # type: ignore[valid-type]
+    transmitted_power: _number("transmitted_power") | None = None  # type: ignore[valid-type]
+    reflected_power: _number("reflected_power") | None = None  # type: ignore[valid-type]
+    reflection_db: _number("reflection_db") | None = None  # type: ignore[valid-type]
+    reflection_rad: _number("reflection_rad") | None = None  # type: ignore[valid-type]
+    file: str | None = None
+    ports: list[str] | None = None
+    time: str | None = None
 
 
 class CellPart(_Strict):
@@ -174,6 +222,7 @@ class Description(_Strict):
     actuator: dict[Literal["phase", "coupler"], dict[str, Any]] = {}
     channel: ChannelPart = ChannelPart()
     ground: dict[str, GroundPart] = {}
+    crosstalk: CrosstalkPart | None = None
     rest: RestPart = RestPart()
     budget: BudgetPart | None = None
     spread: SpreadPart = SpreadPart()

@@ -383,8 +383,8 @@ def _measured_text(mesh: Mesh) -> str:
 
 def _crosstalk_text(mesh: Mesh) -> str:
     matrix = mesh.actuators.crosstalk
-    if matrix is None:
-        return ""
+    if matrix is None or parse_description(mesh.text).crosstalk is not None:
+        return ""  # none, or made from places again when it is read
     coo, names, settings = matrix.tocoo(), mesh.actuator_names, mesh.net.setting_names
     lines = [
         (names[a], settings[s], value)

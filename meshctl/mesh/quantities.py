@@ -90,6 +90,11 @@ QUANTITIES: dict[str, Quantity] = {
         _q("rings", "", 1, 64, math.nan, "rings of hexagons"),
         _q("rows", "", 1, 256, math.nan, "rows of faces"),
         _q("columns", "", 1, 256, math.nan, "columns of faces"),
+        # [crosstalk]
+        _q("amplitude", "", 0.0, 1.0, math.nan, "warming of another arm, as a share of that of the heater's own"),
+        _q("distance_um", "um", 0.0, 1e6, math.nan, "length of the distance law", True),
+        _q("arm_um", "um", 0.0, 1e6, math.nan, "distance of the two arms of a cell", True),
+        _q("keep_above", "", 0.0, 1.0, 0.0, "smaller coefficients are left out, if that costs less than 0.01 rad"),
         # [spread]
         _q("split_rad", "rad", 0.0, 1.0, 0.0, "scatter of coupler angles"),
         _q("p2pi_share", "", 0.0, 1.0, 0.0, "scatter of the power for 2 pi, as a share of it"),
