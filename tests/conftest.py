@@ -60,7 +60,9 @@ def lattice_toml():
 
     def text(shape="rectangular", modes=4, cell="mzi", lattice="", more="", channel=""):
         size = f"modes = {modes}\n" if modes else ""
-        gap = "gap_nm = 200.0\nstiffness_n_per_m = 2.0\narea_um2 = 20.0\ndecay_nm = 50.0\nrest_rad = 3.05\n"
+        gap = (
+            "gap_nm = 200.0\nstiffness_n_per_m = 2.0\narea_um2 = 20.0\ndecay_nm = 50.0\nrest_rad = 3.05\nmargin = 0.8\n"
+        )
         couplers = f'[actuator.coupler]\nlaw = "gap"\n{gap}' if cell == "gap" else ""
         return (
             f'format = 1\nname = "t"\nwavelength_nm = 1550.0\n'
