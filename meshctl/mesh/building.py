@@ -16,12 +16,15 @@ import numpy as np
 from meshctl.errors import DuplicateName, OutOfRange, UnsoundFile
 from meshctl.mesh.actuation import CHANNEL_NUMBERS, join_actuation
 from meshctl.mesh.description import MESH_TOML, Description
-from meshctl.mesh.explicit import explicit_net, with_inserts
+from meshctl.mesh.explicit import explicit_net
 from meshctl.mesh.graph import FREE, Actuators, AsBuilt, Channels, Mesh, Net, frozen
-from meshctl.mesh.lattices import CELL_FORMS, LATTICES, Assembly, assemble
+from meshctl.mesh.inserts import with_inserts
+from meshctl.mesh.lattices import CELL_FORMS, LATTICES, PLANE_SIZES, Assembly, Layout, assemble
+from meshctl.mesh.plane import PlaneLattice
+from meshctl.mesh.plane_net import assemble_plane
 from meshctl.mesh.spread import Spread
 from meshctl.mesh.tables import Table, unknown_name
-from meshctl.optics.elements import COUPLER, CROSSING
+from meshctl.optics.elements import COUPLER, CROSSING, HAS_PHASE, KINDS
 
 
 @dataclass
@@ -35,10 +38,14 @@ class Tables:
     crosstalk: Table | None = None
 
 
-def _assembled(description: Description) -> tuple[Assembly, np.ndarray]:
+def _assembled(description: Description, folder: Path | None) -> tuple[Assembly, np.ndarray]:
     lattice = description.lattice
     if lattice is None:
-        assembly, setting_of = explicit_net(description)
+        assembly, setting_of = explicit_net(description, folder)
+    elif lattice.shape in PLANE_SIZES:
+        plane = LATTICES[lattice.shape](**lattice.plane_size())
+        assert isinstance(plane, PlaneLattice)
+        assembly, setting_of = assemble_plane(plane, lattice.cell, lattice.side_um)
     else:
         shape = LATTICES[lattice.shape]
         try:
@@ -46,6 +53,7 @@ def _assembled(description: Description) -> tuple[Assembly, np.ndarray]:
         except OutOfRange as finding:
             finding.where = f"{MESH_TOML} key 'lattice'"
             raise
+        assert isinstance(layout, Layout)
         couplers = CELL_FORMS[lattice.cell].kinds.count(COUPLER)
         assembly = assemble(
             layout,
@@ -56,7 +64,7 @@ def _assembled(description: Description) -> tuple[Assembly, np.ndarray]:
         )
         setting_of = np.where(assembly.settable, np.cumsum(assembly.settable) - 1, FREE).astype(np.int32)
     if description.insert:
-        assembly, setting_of = with_inserts(assembly, setting_of, description.insert)
+        assembly, setting_of = with_inserts(assembly, setting_of, description.insert, folder)
     return assembly, setting_of
 
 
@@ -80,6 +88,8 @@ def _net(description: Description, assembly: Assembly, setting_of: np.ndarray) -
         guide.loss_db_per_cm,
         description.coupler.angle_slope_per_nm,
         assembly.names,
+        {row: part.reflection for row, part in assembly.special.items() if part.reflection},
+        {row: part.measured for row, part in assembly.special.items() if part.measured is not None},
     )
 
 
@@ -100,6 +110,12 @@ def _as_built(description: Description, net: Net, table: Table | None) -> AsBuil
             seen.add(e)
             for key, into in (("error_rad", error), ("loss_db", loss), ("sigma_rad", sigma)):
                 value = table.column(key)[i]
+                if value and key != "loss_db" and net.kind[e] not in HAS_PHASE:
+                    raise UnsoundFile(
+                        f"{key} is {value:g} for '{name}', a {KINDS[net.kind[e]].name}, which has no angle or phase",
+                        where=table.where(i),
+                        remedy="leave the field empty",
+                    )
                 if value is not None:
                     into[e] = value
             value = table.column("stuck_rad")[i]
@@ -131,6 +147,11 @@ def _digest(net: Net, as_built: AsBuilt, actuators: Actuators, channels: Channel
         "guide",
         [net.wavelength_nm, net.n_eff, net.n_group, net.guide_loss_db_per_cm, net.angle_slope_per_nm],
     )
+    for row, returns in net.reflections.items():
+        add(f"reflection{row}", returns)
+    for row, part in net.measured.items():
+        add(f"measured{row}", np.stack([part.magnitude, part.phase_rad]))
+        add(f"thz{row}", part.thz)
     for label in ("error_rad", "loss_db", "stuck_rad"):
         add(label, getattr(as_built, label))
     for label in ("setting", "channel", "law", "dead"):
@@ -156,7 +177,7 @@ def build_mesh(description: Description, tables: Tables, text: str, folder: Path
     ------
     UnsoundFile or a finding under it, with file, line or key, value, what is allowed and what to do.
     """
-    assembly, setting_of = _assembled(description)
+    assembly, setting_of = _assembled(description, folder)
     net = _net(description, assembly, setting_of)
     as_built = _as_built(description, net, tables.elements)
     actuators, channels = join_actuation(

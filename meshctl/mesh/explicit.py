@@ -1,12 +1,11 @@
-"""Nets given part by part: elements and links of mesh.toml, and parts inserted into a lattice.
+"""Nets given part by part: elements and links of mesh.toml.
 
-Public: explicit_net, with_inserts.
+Public: explicit_net.
 """
 
 from __future__ import annotations
 
-import math
-from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -14,52 +13,28 @@ import numpy as np
 from meshctl.errors import (
     DuplicateName,
     MissingRow,
-    NotFinite,
-    OutOfRange,
     UnknownKey,
     UnsoundFile,
     UnsoundNet,
 )
-from meshctl.mesh.description import MESH_TOML, Description, InsertPart
+from meshctl.mesh.description import MESH_TOML, Description
 from meshctl.mesh.graph import FREE, ListedNames
 from meshctl.mesh.lattices import Assembly
-from meshctl.mesh.quantities import QUANTITIES
+from meshctl.mesh.parts import KIND_NAMES, Part, part_of
 from meshctl.mesh.tables import unknown_name
-from meshctl.optics.elements import COUPLER, GUIDE, KINDS, PHASE, kind_row
-
-
-def _value(kind: int, given: dict[str, Any], where: str) -> tuple[float, float]:
-    """(nominal, length) of a part from the keys of its table in mesh.toml."""
-    keys = KINDS[kind].value_keys
-    for key, value in given.items():
-        if key not in keys:
-            raise unknown_name("key", key, keys, where)
-        if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
-            raise NotFinite(f"{key} is {value!r}", where=where, remedy=f"write {QUANTITIES[key].allowed}")
-        if not QUANTITIES[key].allows(value):
-            raise OutOfRange(f"{key} is {value:g}", where=where, remedy=f"allowed is {QUANTITIES[key].allowed}")
-    if len(given) > 1:
-        raise DuplicateName(f"{' and '.join(given)} say the same twice", where=where, remedy="keep one")
-    if not given:
-        default = KINDS[kind].default
-        if default is None:
-            raise MissingRow(f"a {KINDS[kind].name} needs {' or '.join(keys)}", where=where, remedy="add it")
-        return default, 0.0
-    key, number = next(iter(given.items()))
-    if key == "cross_power":
-        return math.asin(math.sqrt(number)), 0.0
-    return (0.0, float(number)) if key == "length_um" else (float(number), 0.0)
+from meshctl.optics.elements import COUPLER, KINDS, PHASE, kind_row
 
 
 class _Parts:
     """Elements of an explicit net as they are read."""
 
-    def __init__(self, rows: list[list[Any]]) -> None:
+    def __init__(self, rows: list[list[Any]], folder: Path | None) -> None:
         self.names: list[str] = []
         self.kinds: list[int] = []
         self.nominal: list[float] = []
         self.length: list[float] = []
         self.row: dict[str, int] = {}
+        self.special: dict[int, Part] = {}
         for number, row in enumerate(rows, 1):
             where = f"{MESH_TOML} key 'elements.{number}'"
             fits = 2 <= len(row) <= 3 and isinstance(row[0], str) and isinstance(row[1], str)
@@ -71,15 +46,17 @@ class _Parts:
                 )
             kind = kind_row(row[1])
             if kind is None:
-                raise unknown_name("kind", row[1], [k.name for k in KINDS], where)
+                raise unknown_name("kind", row[1], KIND_NAMES, where)
             if row[0] in self.row:
                 raise DuplicateName(f"element '{row[0]}' stands twice", where=where, remedy="rename one")
-            nominal, length = _value(kind, row[2] if len(row) == 3 else {}, where)
+            part = part_of(kind, row[2] if len(row) == 3 else {}, where, folder)
+            if part.reflection or part.measured:
+                self.special[len(self.names)] = part
             self.row[row[0]] = len(self.names)
             self.names.append(row[0])
-            self.kinds.append(kind)
-            self.nominal.append(nominal)
-            self.length.append(length)
+            self.kinds.append(part.kind)
+            self.nominal.append(part.nominal)
+            self.length.append(part.length_um)
         counts = [len(KINDS[k].ports) for k in self.kinds]
         self.port_start = np.r_[0, np.cumsum(counts)].astype(np.int32)
 
@@ -185,7 +162,7 @@ def _cells(parts: _Parts, description: Description, setting_of: np.ndarray) -> t
     return cell_of, names, np.array(places, float).reshape(-1, 2)
 
 
-def explicit_net(description: Description) -> tuple[Assembly, np.ndarray]:
+def explicit_net(description: Description, folder: Path | None = None) -> tuple[Assembly, np.ndarray]:
     """The arrays of a net given by elements and links, and setting_of [E].
 
     Raises
@@ -193,7 +170,7 @@ def explicit_net(description: Description) -> tuple[Assembly, np.ndarray]:
     UnknownKey, DuplicateName, MissingRow, UnsoundNet, UnsoundFile
         Naming the key, the value and what to do.
     """
-    parts = _Parts(description.elements or [])
+    parts = _Parts(description.elements or [], folder)
     named = [*(description.inputs or ()), *(description.outputs or ()), *description.monitors]
     both_ways = description.inputs is None and description.outputs is None
     known = None if both_ways else set(named)
@@ -241,103 +218,6 @@ def explicit_net(description: Description) -> tuple[Assembly, np.ndarray]:
         inputs,
         outputs,
         ListedNames(parts.names, cells),
+        parts.special,
     )
     return assembly, setting_of
-
-
-def _insert_point(assembly: Assembly, at: str, where: str) -> tuple[int, str | None]:
-    """(port, external name): the port that the part goes before or behind."""
-    if at in assembly.externals:
-        return assembly.externals[at], at
-    owner, _, letter = at.rpartition(".")
-    names = assembly.names
-    if owner in names.element_row:
-        row = names.element_row[owner]
-        letters = KINDS[assembly.kind[row]].ports
-        if letter not in letters:
-            raise unknown_name(f"port of '{owner}'", letter, letters, where)
-        port = int(assembly.port_start[row]) + letters.index(letter)
-    elif owner in names.cell_row:
-        port = _cell_port(assembly, names.cell_row[owner], letter, where)
-    else:
-        raise unknown_name("place", at, [*names.cells[:4], *assembly.externals], where)
-    outside = next((name for name, p in assembly.externals.items() if p == port), None)
-    return port, outside
-
-
-def _cell_port(assembly: Assembly, cell: int, letter: str, where: str) -> int:
-    """A cell's outer ports are a1, a2 where light enters its parts and b1, b2 where it leaves."""
-    ports: dict[str, int] = {}
-    rows = np.flatnonzero(assembly.cell_of == cell)
-    owner = np.repeat(np.arange(len(assembly.kind)), np.diff(assembly.port_start))
-    for row in rows.tolist():
-        start, stop = int(assembly.port_start[row]), int(assembly.port_start[row + 1])
-        for port in range(start, stop):
-            other = assembly.mate[port]
-            if other >= 0 and assembly.cell_of[owner[other]] == cell:
-                continue
-            end = "a" if port - start < (stop - start) // 2 else "b"
-            ports[f"{end}{1 + sum(p.startswith(end) for p in ports)}"] = port
-    if letter not in ports:
-        raise unknown_name("port of the cell", letter, ports, where)
-    return ports[letter]
-
-
-def with_inserts(assembly: Assembly, setting_of: np.ndarray, inserts: list[InsertPart]) -> tuple[Assembly, np.ndarray]:
-    """The net with parts put into its links: taps to monitor ports, losses, guides, fixed phases."""
-    for number, part in enumerate(inserts, 1):
-        where = f"{MESH_TOML} key 'insert.{number}'"
-        assembly = _inserted(assembly, part, where)
-        setting_of = np.r_[setting_of, FREE].astype(np.int32)
-    return assembly, setting_of
-
-
-def _inserted(assembly: Assembly, part: InsertPart, where: str) -> Assembly:
-    names = assembly.names
-    if part.name in names.element_row or part.name in assembly.externals:
-        raise DuplicateName(f"the name '{part.name}' is taken", where=where, remedy="rename the insert")
-    is_tap = part.kind == "tap"
-    if is_tap != (part.monitor is not None):
-        raise UnsoundFile(
-            "a tap needs 'monitor'" if is_tap else f"a {part.kind} has no monitor",
-            where=where,
-            remedy="name the monitor port of a tap, and only of a tap",
-        )
-    if part.monitor is not None and part.monitor in assembly.externals:
-        raise DuplicateName(f"port '{part.monitor}' exists already", where=where, remedy="rename the monitor")
-    kind = COUPLER if is_tap else kind_row(part.kind)
-    assert kind is not None
-    given = part.model_dump(exclude={"name", "kind", "at", "monitor"}, exclude_none=True)
-    if is_tap and not given:
-        raise MissingRow("a tap needs cross_power or angle_rad", where=where, remedy="say how much it takes")
-    nominal, length = _value(kind, given, where)
-
-    port, outside = _insert_point(assembly, part.at, where)
-    row = int(np.searchsorted(assembly.port_start, port, side="right")) - 1
-    entering = port - assembly.port_start[row] < (assembly.port_start[row + 1] - assembly.port_start[row]) // 2
-    ports = len(KINDS[kind].ports)
-    first = int(assembly.port_start[-1])
-    near_in, near_out = first, first + ports // 2
-    near, far = (near_out, near_in) if entering else (near_in, near_out)
-    mate = np.r_[assembly.mate, np.full(ports, FREE)].astype(np.int32)
-    other = int(mate[port])
-    mate[port], mate[near] = near, port
-    if other >= 0:
-        mate[far], mate[other] = other, far
-    externals = dict(assembly.externals)
-    if outside is not None:
-        externals[outside] = far
-    if part.monitor is not None:
-        externals[part.monitor] = first + 3
-    return replace(
-        assembly,
-        kind=np.r_[assembly.kind, kind].astype(np.uint8),
-        nominal=np.r_[assembly.nominal, nominal],
-        length_um=np.r_[assembly.length_um, length if kind == GUIDE else 0.0],
-        settable=np.r_[assembly.settable, False],
-        cell_of=np.r_[assembly.cell_of, FREE].astype(np.int32),
-        port_start=np.r_[assembly.port_start, first + ports].astype(np.int32),
-        mate=mate,
-        externals=externals,
-        names=ListedNames([*names.elements, part.name], names.cells),
-    )

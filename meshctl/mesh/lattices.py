@@ -2,7 +2,7 @@
 
 A lattice says where its cells stand (`Plan2D`: column and upper lane of each); `assemble` turns any such
 plan into the arrays of a `Net`. To add a lattice write its plan, add its line to LATTICES, and its test.
-Public: LATTICES, Layout, CellForm, CELL_FORMS, assemble, LatticeNames.
+Public: LATTICES, PLANE_SIZES, Layout, CellForm, CELL_FORMS, assemble, LatticeNames.
 """
 
 from __future__ import annotations
@@ -14,6 +14,8 @@ import numpy as np
 
 from meshctl.errors import OutOfRange
 from meshctl.mesh.graph import FREE, Names
+from meshctl.mesh.parts import Part
+from meshctl.mesh.plane import PlaneLattice, hexagonal, hexagonal_rows, square, trigrid
 from meshctl.optics.elements import COUPLER, CROSSING, GUIDE, LOSS, PHASE
 
 
@@ -215,12 +217,29 @@ def _no_spare(shape: str, spare: int) -> None:
         raise OutOfRange(f"a {shape} takes no spare columns, not {spare}", remedy="leave --spare out for this shape")
 
 
-LATTICES: dict[str, Callable[..., Layout]] = {
+def hexagons(rings: int | None = None, rows: int | None = None, columns: int | None = None) -> PlaneLattice:
+    """Hexagons in rings round one, or in rows."""
+    if rings is not None:
+        return hexagonal(rings)
+    assert rows is not None
+    assert columns is not None
+    return hexagonal_rows(rows, columns)
+
+
+LATTICES: dict[str, Callable[..., Layout | PlaneLattice]] = {
     "rectangular": rectangular,
     "triangular": triangular,
     "tree": tree,
     "switch": switch,
     "benes": benes,
+    "hexagonal": hexagons,
+    "square": square,
+    "trigrid": trigrid,
+}
+PLANE_SIZES = {  # what a lattice with loops is given by, each a way of its own
+    "hexagonal": (("rings",), ("rows", "columns")),
+    "square": (("rows", "columns"),),
+    "trigrid": (("rows", "columns"),),
 }
 
 
@@ -266,6 +285,7 @@ class Assembly:
     inputs: tuple[str, ...]
     outputs: tuple[str, ...]
     names: Names
+    special: dict[int, Part] = field(default_factory=dict)  # parts that reflect or are measured, by element
 
 
 def _skipped(layout: Layout) -> tuple[np.ndarray, np.ndarray]:

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 import math
+import shutil
 from pathlib import Path
 from typing import Any
 
@@ -16,10 +17,10 @@ from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, Wro
 from meshctl.laws import LAWS
 from meshctl.mesh.actuation import CHANNEL_NUMBERS, DRIVES, PARAM_NAMES
 from meshctl.mesh.building import Tables, build_mesh
-from meshctl.mesh.description import MESH_TOML, parse_description
+from meshctl.mesh.description import MESH_TOML, Description, parse_description
 from meshctl.mesh.files import new_folder, write_whole
 from meshctl.mesh.graph import Mesh
-from meshctl.mesh.lattices import LATTICES
+from meshctl.mesh.lattices import LATTICES, PLANE_SIZES
 from meshctl.mesh.quantities import QUANTITIES, Quantity
 from meshctl.mesh.spread import drawn
 from meshctl.mesh.tables import Table, read_table, table_text, unknown_name
@@ -96,14 +97,15 @@ def load(folder: str | Path) -> Mesh:
         text = toml.read_text(encoding="utf-8")
     except UnicodeDecodeError as problem:
         raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=MESH_TOML, remedy="save it as UTF-8") from None
+    description = parse_description(text)
+    measured = measured_files(description)
     for entry in folder.iterdir():
-        if entry.suffix == ".csv" and entry.name not in KNOWN:
+        if entry.suffix == ".csv" and entry.name not in KNOWN and entry.name not in measured:
             raise UnknownKey(
                 f"table '{entry.name}' is not known",
                 where=str(folder),
                 remedy=f"the tables of a mesh are {', '.join(sorted(n for n in KNOWN if n.endswith('.csv')))}",
             )
-    description = parse_description(text)
     tables = Tables(*(_read_one(folder, name) for name in _READERS))
     return build_mesh(description, tables, text, folder)
 
@@ -126,13 +128,33 @@ def _gap_actuator() -> str:
     )
 
 
-def lattice_text(shape: str, name: str, *, modes: int | None, cell: str, spare: int, balanced: bool = False) -> str:
-    """mesh.toml of a new lattice, with its defaults written out."""
+def measured_files(description: Description) -> list[str]:
+    """Files of measured parts, by their paths within the mesh folder."""
+    named = [part.file for part in description.insert]
+    named += [row[2].get("file") for row in description.elements or [] if len(row) == 3 and isinstance(row[2], dict)]
+    return list(dict.fromkeys(file for file in named if isinstance(file, str)))
+
+
+def lattice_text(
+    shape: str,
+    name: str,
+    *,
+    modes: int | None,
+    cell: str,
+    spare: int,
+    balanced: bool = False,
+    plane: dict[str, int] | None = None,
+) -> str:
+    """mesh.toml of a new lattice, with its defaults written out; `plane` is the size of one with loops."""
     size = "" if modes is None else f"modes = {modes}\n"
+    size += "".join(f"{key} = {count}\n" for key, count in (plane or {}).items())
     extra = f"spare = {spare}\n" if spare else ""
     extra += "balanced = true\n" if balanced else ""
     phases = _HEATER if cell == "mzi" or shape != "switch" else ""
     gaps = _gap_actuator() if cell == "gap" else ""
+    place = "pitch_um = [400.0, 127.0]       # between columns, between lanes"
+    if shape in PLANE_SIZES:
+        place = "side_um = 250.0                 # length of every cell's guides"
     return f"""\
 format = 1
 name = {json.dumps(name, ensure_ascii=False)}
@@ -142,7 +164,7 @@ wavelength_nm = 1550.0
 [lattice]
 shape = "{shape}"
 {size}cell = "{cell}"
-{extra}pitch_um = [400.0, 127.0]       # between columns, between lanes
+{extra}{place}
 
 [guide]
 n_eff = 2.44
@@ -176,6 +198,9 @@ def lattice(
     cell: str = "mzi",
     spare: int = 0,
     balanced: bool = False,
+    rings: int | None = None,
+    rows: int | None = None,
+    columns: int | None = None,
     name: str | None = None,
     built: int | None = None,
 ) -> Mesh:
@@ -183,11 +208,12 @@ def lattice(
 
     Parameters
     ----------
-    shape : a key of LATTICES: rectangular, triangular, tree, switch
+    shape : a key of LATTICES, such as rectangular or hexagonal
     modes : number of lanes; a switch needs none
     cell : "mzi" (two fixed couplers, inner and outer phase) or "gap" (tunable coupler and phase)
     spare : extra columns
     balanced : a dummy loss wherever a lane skips a column
+    rings, rows, columns : size of a lattice with loops: hexagonal by rings or by rows and columns, else by both
     built : seed of a die drawn from the mesh's spread; None: as drawn
 
     Raises
@@ -203,12 +229,20 @@ def lattice(
         if value not in known:
             finding = unknown_name(word, value, known, "")
             raise WrongUsage(finding.what, remedy=finding.remedy)
-    if shape != "switch" and modes is None:
+    plane = {k: v for k, v in (("rings", rings), ("rows", rows), ("columns", columns)) if v is not None}
+    if shape in PLANE_SIZES:
+        if tuple(plane) not in PLANE_SIZES[shape] or modes is not None or spare or balanced:
+            ways = " or ".join(" and ".join(way) for way in PLANE_SIZES[shape])
+            raise WrongUsage(f"a {shape} lattice is sized by {ways} alone", remedy="give these and no other size")
+    elif plane:
+        raise WrongUsage(f"a {shape} lattice takes no {', '.join(plane)}", remedy="give modes, such as 8")
+    elif shape != "switch" and modes is None:
         raise WrongUsage(f"a {shape} lattice needs a number of modes", remedy="give modes, such as 8")
-    for key, size in (("modes", modes), ("spare", spare)):
+    for key, size in (("modes", modes), ("spare", spare), *plane.items()):
         if size is not None and not QUANTITIES[key].allows(size):
             raise WrongUsage(f"{key} is {size}", remedy=f"allowed is {QUANTITIES[key].allowed}")
-    text = lattice_text(shape, name or f"{shape}{modes or ''}", modes=modes, cell=cell, spare=spare, balanced=balanced)
+    name = name or f"{shape}{modes or 'x'.join(map(str, plane.values()))}"
+    text = lattice_text(shape, name, modes=modes, cell=cell, spare=spare, balanced=balanced, plane=plane)
     try:
         mesh = build_mesh(parse_description(text, "lattice"), Tables(), text)
     except OutOfRange as finding:  # a size that this shape does not take
@@ -219,7 +253,7 @@ def lattice(
 def with_die(mesh: Mesh, seed: int) -> Mesh:
     """The mesh with one die drawn from its spread in place of the drawn values."""
     tables = _tables_of_text(die_tables(mesh, seed))
-    return build_mesh(parse_description(mesh.text), tables, mesh.text)
+    return build_mesh(parse_description(mesh.text), tables, mesh.text, mesh.folder)
 
 
 def die_tables(mesh: Mesh, seed: int) -> dict[str, str]:
@@ -270,7 +304,7 @@ def _tables_of_text(texts: dict[str, str]) -> Tables:
 
 def mesh_tables(mesh: Mesh) -> dict[str, str]:
     """All tables of a mesh as CSV text, rows only where they differ from mesh.toml's defaults."""
-    plain = build_mesh(parse_description(mesh.text), Tables(), mesh.text) if _has_defaults(mesh) else None
+    plain = build_mesh(parse_description(mesh.text), Tables(), mesh.text, mesh.folder) if _has_defaults(mesh) else None
     return {
         name: text
         for name, text in (
@@ -287,7 +321,7 @@ def mesh_tables(mesh: Mesh) -> dict[str, str]:
 def _has_defaults(mesh: Mesh) -> bool:
     """True where mesh.toml alone makes a mesh, so that tables need hold only what differs."""
     try:
-        build_mesh(parse_description(mesh.text), Tables(), mesh.text)
+        build_mesh(parse_description(mesh.text), Tables(), mesh.text, mesh.folder)
     except UnsoundFile:
         return False
     return True
@@ -406,4 +440,8 @@ def write(mesh: Mesh, folder: str | Path) -> Path:
         write_whole(work / MESH_TOML, mesh.text)
         for name, text in mesh_tables(mesh).items():
             write_whole(work / f"{name}.csv", text)
+        for file in measured_files(parse_description(mesh.text)):
+            assert mesh.folder is not None, "a measured part lies in the folder that its mesh was read from"
+            (work / file).parent.mkdir(parents=True, exist_ok=True)
+            shutil.copyfile(mesh.folder / file, work / file)
     return folder

@@ -11,6 +11,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 from weakref import WeakKeyDictionary
 
 import numpy as np
@@ -203,12 +204,13 @@ class Waves:
         n = len(self.woven.pattern.mate)
         return np.bincount(port, value[element], n), np.bincount(port, self.net.length_um[element], n)
 
-    def _scales(self, waves: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    def _scales(self, waves: np.ndarray) -> tuple[Any, Any, Any]:
+        """What phases, micrometres of guide and coupler angles are multiplied by, [W] each."""
         net = self.net
         return (
-            parts.phase_scale(waves, net.wavelength_nm),  # type: ignore[arg-type]
+            parts.phase_scale(waves, net.wavelength_nm),
             parts.guide_phase_rad_per_um(waves, net.wavelength_nm, net.n_eff, net.n_group),
-            parts.angle_scale(waves, net.wavelength_nm, net.angle_slope_per_nm),  # type: ignore[arg-type]
+            parts.angle_scale(waves, net.wavelength_nm, net.angle_slope_per_nm),
         )
 
     def _own(self, value: np.ndarray, waves: np.ndarray) -> np.ndarray:

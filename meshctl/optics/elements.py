@@ -89,12 +89,12 @@ def cell_block(inner_rad: Any, outer_rad: Any, error1_rad: Any = 0.0, error2_rad
     return coupler_block(quarter + error2_rad, xp) @ phase_block(xp.asarray(inner_rad), xp) @ first
 
 
-def phase_scale(wavelength_nm: float, centre_nm: float) -> float:
+def phase_scale(wavelength_nm: Any, centre_nm: float) -> Any:
     """What a phase is multiplied by at another wavelength than the centre."""
     return centre_nm / wavelength_nm
 
 
-def angle_scale(wavelength_nm: float, centre_nm: float, angle_slope_per_nm: float) -> float:
+def angle_scale(wavelength_nm: Any, centre_nm: float, angle_slope_per_nm: float) -> Any:
     """What a coupler's angle is multiplied by at another wavelength than the centre."""
     return 1.0 + angle_slope_per_nm * (wavelength_nm - centre_nm)
 
