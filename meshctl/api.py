@@ -16,7 +16,16 @@ from meshctl.solver.target import Target, make_target, read_target
 
 
 def solve(
-    mesh: Mesh, target: Any, *, free: str = "nothing", best_effort: bool = False, least_power: bool = False
+    mesh: Mesh,
+    target: Any,
+    *,
+    free: str = "nothing",
+    best_effort: bool = False,
+    least_power: bool = False,
+    refine: bool | None = None,
+    starts: int = 1,
+    seconds: float | None = None,
+    seed: int = 0,
 ) -> Plan:
     """Voltages for a target.
 
@@ -27,6 +36,8 @@ def solve(
     free : port phases that do not count: nothing, outputs, inputs, both (a Target brings its own)
     best_effort : hold what is out of reach at its limit rather than raise
     least_power : use what the matrix does not see to save power
+    refine : descend on the whole chip model; None: where the closed form is not exact
+    starts, seconds, seed : of the descent; `seconds` makes the answer depend on the machine
 
     Returns
     -------
@@ -50,7 +61,8 @@ def solve(
         target = make_target(target.matrix, shape, target.free, target.source)
     else:
         target = make_target(target, shape, free)
-    return pipeline.solve(mesh, target, best_effort=best_effort, least_power=least_power)
+    effort = pipeline.Effort(refine, starts, seconds, seed)
+    return pipeline.solve(mesh, target, best_effort=best_effort, least_power=least_power, effort=effort)
 
 
 def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *, stale_ok: bool = False) -> np.ndarray:

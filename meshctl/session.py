@@ -23,7 +23,7 @@ from meshctl.mesh.lightorder import HEAD, LightRow, light_order
 from meshctl.mesh.meshfile import MESH_TOML, die_tables, lattice, load, write
 from meshctl.plan.chip import Chip
 from meshctl.plan.energy import Energy, energy
-from meshctl.plan.pipeline import Prediction, predict, solve
+from meshctl.plan.pipeline import Effort, Prediction, predict, solve
 from meshctl.plan.plan import Plan, check_fresh, plan_text, read_plan
 from meshctl.solver.target import Target, read_target
 from meshctl.units import db
@@ -63,10 +63,12 @@ class Session:
         net = self.mesh.net
         return read_target(words, (len(net.outputs), len(net.inputs)), free)
 
-    def solve(self, target: Target, *, best_effort: bool = False, least_power: bool = False) -> Plan:
+    def solve(
+        self, target: Target, *, best_effort: bool = False, least_power: bool = False, effort: Effort | None = None
+    ) -> Plan:
         """Volts and codes for a target."""
         started = time.perf_counter()
-        self.plan = solve(self.mesh, target, best_effort=best_effort, least_power=least_power)
+        self.plan = solve(self.mesh, target, best_effort=best_effort, least_power=least_power, effort=effort)
         self.seconds = time.perf_counter() - started
         return self.plan
 
@@ -184,4 +186,4 @@ def wavelength_range(words: str) -> np.ndarray:
     return np.linspace(first, last, count)
 
 
-__all__ = ["Session", "demo_mesh_folder", "new_mesh", "require_suffix", "wavelength_range"]
+__all__ = ["Effort", "Session", "demo_mesh_folder", "new_mesh", "require_suffix", "wavelength_range"]

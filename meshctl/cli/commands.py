@@ -13,8 +13,9 @@ from argparse import Namespace
 from typing import Any
 
 from meshctl.cli import printing
-from meshctl.errors import DONE, WrongUsage
-from meshctl.session import Session, demo_mesh_folder, new_mesh, require_suffix, wavelength_range
+from meshctl.cli.watch import Watch
+from meshctl.errors import DONE, INTERRUPTED, WrongUsage
+from meshctl.session import Effort, Session, demo_mesh_folder, new_mesh, require_suffix, wavelength_range
 
 
 def _json(entry: dict[str, Any]) -> int:
@@ -36,6 +37,9 @@ def new(words: Namespace) -> int:
         cell=words.cell,
         spare=words.spare,
         balanced=words.balanced,
+        rings=words.rings,
+        rows=words.rows,
+        columns=words.columns,
     )
     if words.json:
         return _json({"mesh": words.folder, "hash": mesh.hash, "cells": mesh.net.n_cells})
@@ -79,16 +83,18 @@ def show(words: Namespace) -> int:
 def solve(words: Namespace) -> int:
     session = Session(words.mesh)
     target = session.target(words.target, words.free)
-    plan = session.solve(target, best_effort=words.best_effort, least_power=words.least_power)
+    with Watch("refining") as watch:
+        effort = Effort(words.refine, words.starts, words.seconds, words.seed, watch.progress, watch.stopped)
+        plan = session.solve(target, best_effort=words.best_effort, least_power=words.least_power, effort=effort)
     if words.out:
         session.write_plan(words.out)
     if words.json:
         _json(printing.plan_entry(session.mesh, plan, session.seconds))
-        return DONE
-    print(printing.plan_table(session.mesh, plan))
-    print(printing.plan_summary(plan))
-    _remark(plan.warnings)
-    return DONE
+    else:
+        print(printing.plan_table(session.mesh, plan))
+        print(printing.plan_summary(plan))
+        _remark(plan.warnings)
+    return INTERRUPTED if watch.interrupted else DONE
 
 
 def predict(words: Namespace) -> int:

@@ -35,6 +35,16 @@ def _whole(low: int) -> Callable[[str], int]:
     return convert
 
 
+def _positive(text: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"'{text}' is no number") from None
+    if not 0.0 < value < 1e9:
+        raise argparse.ArgumentTypeError(f"{text} is not above 0")
+    return value
+
+
 def parser() -> argparse.ArgumentParser:
     """The parser of all commands."""
     top = _Parser(
@@ -60,9 +70,14 @@ def parser() -> argparse.ArgumentParser:
         return made
 
     new = verb("new", "make a mesh folder from a lattice", "meshctl new rectangular mychip --modes 8 --built 1")
-    new.add_argument("shape", metavar="SHAPE", help="rectangular, triangular, tree, switch")
+    new.add_argument(
+        "shape", metavar="SHAPE", help="rectangular, triangular, benes, tree, switch, hexagonal, square, trigrid"
+    )
     new.add_argument("folder", metavar="FOLDER", help="the new folder; it must not exist yet")
     new.add_argument("--modes", type=_whole(1), metavar="N", help="number of lanes")
+    new.add_argument("--rings", type=_whole(1), metavar="R", help="rings of hexagons")
+    new.add_argument("--rows", type=_whole(1), metavar="R", help="rows of hexagons, squares or pairs of triangles")
+    new.add_argument("--columns", type=_whole(1), metavar="C", help="columns of them")
     new.add_argument("--cell", choices=("mzi", "gap"), default="mzi", help="Mach-Zehnder or tunable coupler")
     new.add_argument("--spare", type=_whole(0), default=0, metavar="K", help="extra columns")
     new.add_argument("--balanced", action="store_true", help="dummy losses where lanes skip a column")
@@ -87,6 +102,14 @@ def parser() -> argparse.ArgumentParser:
     solve.add_argument("target", metavar="TARGET", help=TARGET)
     solve.add_argument("-o", "--out", metavar="PLAN", help="write the plan to this file")
     solve.add_argument("--free", choices=FREE, default="nothing", help="port phases that do not count")
+    descend = solve.add_mutually_exclusive_group()
+    descend.add_argument(
+        "--refine", action="store_true", default=None, help="descend on the chip model; default where not exact"
+    )
+    descend.add_argument("--no-refine", dest="refine", action="store_false", help="the closed form alone")
+    solve.add_argument("--starts", type=_whole(1), default=1, metavar="N", help="descents from different settings")
+    solve.add_argument("--seconds", type=_positive, metavar="S", help="stop refining after this time")
+    solve.add_argument("--seed", type=_whole(0), default=0, metavar="SEED", help="of the further starts")
     solve.add_argument("--least-power", action="store_true", help="use what the matrix does not see to save power")
     solve.add_argument("--best-effort", action="store_true", help="hold what is out of reach at its limit")
 

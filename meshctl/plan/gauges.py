@@ -97,7 +97,9 @@ def least_power_flips(
     descent = _Descent(chip, form, reach, background, time.monotonic() + seconds)
     cells = descent.cells.tolist()
     singles: list[tuple[int, ...]] = [(c,) for c in cells]
-    pairs = [(c, d) for i, c in enumerate(cells) for d in cells[:i]] if len(cells) <= PAIRS_TO else []
+    pairs: list[tuple[int, ...]] = (
+        [(c, d) for i, c in enumerate(cells) for d in cells[:i]] if len(cells) <= PAIRS_TO else []
+    )
     rng = np.random.default_rng(0)
     chosen, least = np.zeros(form.n_cells, np.uint8), np.inf
     for start in range(starts):

@@ -1,15 +1,18 @@
 """The main job from end to end: target -> settings -> volts and codes -> what the chip will really do.
 
-Public: solve, predict, Prediction.
+Public: solve, predict, Prediction, Effort.
 """
 
 from __future__ import annotations
 
+import dataclasses
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import numpy as np
 
+from meshctl.errors import NoClosedForm
 from meshctl.mesh.graph import Mesh, frozen
 from meshctl.optics.measures import matrix_error, throughput, throughput_per_input
 from meshctl.plan.chip import Chip
@@ -24,6 +27,10 @@ from meshctl.solver.solution import Shortfall, Solution
 from meshctl.solver.target import Target, described, from_description
 from meshctl.units import TWO_PI, turns
 
+if TYPE_CHECKING:  # pragma: no cover
+    from meshctl.solver.refine import Progress
+
+BLIND_STARTS = 8  # descents where no closed form gives a first one
 _DEAD_ROUNDS = 8  # settings -> drive -> warmth at dead heaters -> settings; crosstalk makes each far smaller
 _DEAD_WITHIN = 1e-9  # rad
 CODES_WORTH = 0.01  # share of E^2 that codes must add before they are rounded against the matrix
@@ -69,11 +76,26 @@ def _refuse_limits(chip: Chip, missed: list[Shortfall]) -> NoReturn:
     refuse(chip, int(chip.primary[worst.setting]), change, rows)
 
 
+@dataclass(frozen=True)
+class Effort:
+    """How hard to look for better settings than the closed form's.
+
+    `refine` None refines where the closed form is not exact, or where there is none.
+    """
+
+    refine: bool | None = None
+    starts: int = 1
+    seconds: float | None = None
+    seed: int = 0
+    progress: Callable[[Progress], None] | None = None
+    cancel: Callable[[], bool] | None = None
+
+
 @dataclass(frozen=True, eq=False)
 class _Work:
     """What solving and placing came to."""
 
-    free: Solution  # with the drive's limits off
+    continuous: Solution  # with the drive's limits off
     solution: Solution
     placed: Placed
     saved_mw: float
@@ -89,34 +111,88 @@ def _moved_by(chip: Chip, settings: np.ndarray, background: np.ndarray, least_po
     return np.where(other, chip.partner, chip.primary)
 
 
-def _settled(chip: Chip, target: Target, best_effort: bool, least_power: bool) -> _Work:
-    """Solve and place; where neighbours warm what the answer depends on, again with that warmth known."""
-    form = ClosedForm(chip.net, chip.mesh.as_built, target)
-    background = np.zeros(chip.net.n_settings)
-    dead = fixed_settings(chip) & np.isnan(chip.mesh.as_built.stuck_rad)
-    warmed = chip.actuators.crosstalk is not None and bool(dead.any())
-    flip, plain_mw, settled = None, 0.0, False
-    for round_ in range(_DEAD_ROUNDS):
-        reach = reach_of(chip, np.where(dead, background, 0.0))
-        if least_power and round_ == 1:
-            flip = least_power_flips(chip, form, reach, background)
-        solution = form.solution(reach, flip)
-        missed = _beyond_limits(chip, solution)
-        if missed and not best_effort:
-            _refuse_limits(chip, missed)
-        chosen = least_power and round_ > 0
-        moved_by = _moved_by(chip, solution.settings, background, chosen)
-        placed = place(chip, solution.settings, best_effort=best_effort, moved_by=moved_by)
-        warmth = _warmth(chip, placed.change)
-        if round_ == 0:
-            plain_mw = float(chip.power_mw(placed.levels).sum())
-        settled = not warmed or float(np.abs((warmth - background)[dead]).max()) < _DEAD_WITHIN
-        background = warmth
-        if settled and (round_ > 0 or not least_power):
-            break
-    free = form.solution(_unlimited(chip, reach), flip)
-    saved = plain_mw - float(chip.power_mw(placed.levels).sum()) if least_power else 0.0
-    return _Work(free, solution, placed, saved)
+class _Settling:
+    """Solve, refine and place until what dead heaters take from their neighbours is known."""
+
+    def __init__(self, chip: Chip, target: Target, best_effort: bool, least_power: bool, effort: Effort) -> None:
+        self.chip, self.target, self.effort = chip, target, effort
+        self.best_effort, self.least_power = best_effort, least_power
+        self.flip: np.ndarray | None = None
+        self.form: ClosedForm | None = None
+        self.refined: np.ndarray | None = None
+        try:
+            self.form = ClosedForm(chip.net, chip.mesh.as_built, target)
+        except NoClosedForm:
+            if effort.refine is False:
+                raise
+
+    def solution(self, reach: Reach) -> Solution:
+        """The closed form, and what descent makes of it where that is wanted."""
+        closed = None if self.form is None else self.form.solution(reach, self.flip)
+        if closed is not None:
+            missed = _beyond_limits(self.chip, closed)
+            if missed and not self.best_effort:
+                _refuse_limits(self.chip, missed)
+        wanted = self.effort.refine
+        if wanted is False or (wanted is None and closed is not None and closed.reason == "exact"):
+            assert closed is not None
+            return closed
+        return self._descend(closed, reach)
+
+    def _descend(self, closed: Solution | None, reach: Reach) -> Solution:
+        from meshctl.solver.objective import MatrixError
+        from meshctl.solver.refine import refine
+
+        effort, starts = self.effort, self.effort.starts
+        if self.refined is not None:
+            begin = self.refined
+        elif closed is not None:
+            begin = closed.settings
+        else:
+            begin, starts = reach.idle, max(starts, BLIND_STARTS)
+        found = refine(
+            self.chip.net,
+            self.chip.mesh.as_built,
+            MatrixError(self.target.matrix, free=self.target.free),
+            reach,
+            begin,
+            starts=starts,
+            seconds=effort.seconds,
+            seed=effort.seed,
+            progress=effort.progress,
+            cancel=effort.cancel,
+        )
+        self.refined = found.settings
+        if closed is None:
+            return found
+        return dataclasses.replace(found, shortfalls=closed.shortfalls, counts={**closed.counts, **found.counts})
+
+    def run(self) -> _Work:
+        chip, least_power = self.chip, self.least_power and self.form is not None
+        background = np.zeros(chip.net.n_settings)
+        dead = fixed_settings(chip) & np.isnan(chip.mesh.as_built.stuck_rad)
+        warmed = chip.actuators.crosstalk is not None and bool(dead.any())
+        plain_mw = 0.0
+        for round_ in range(_DEAD_ROUNDS):
+            reach = reach_of(chip, np.where(dead, background, 0.0))
+            if least_power and round_ == 1:
+                assert self.form is not None
+                self.flip, self.refined = least_power_flips(chip, self.form, reach, background), None
+            solution = self.solution(reach)
+            moved_by = _moved_by(chip, solution.settings, background, least_power and round_ > 0)
+            placed = place(chip, solution.settings, best_effort=self.best_effort, moved_by=moved_by)
+            warmth = _warmth(chip, placed.change)
+            if round_ == 0:
+                plain_mw = float(chip.power_mw(placed.levels).sum())
+            settled = not warmed or float(np.abs((warmth - background)[dead]).max()) < _DEAD_WITHIN
+            background = warmth
+            if settled and (round_ > 0 or not least_power):
+                break
+        saved = plain_mw - float(chip.power_mw(placed.levels).sum()) if least_power else 0.0
+        continuous = solution
+        if self.form is not None and _beyond_limits(chip, solution):
+            continuous = self.form.solution(_unlimited(chip, reach), self.flip)
+        return _Work(continuous, solution, placed, saved)
 
 
 def _warmth(chip: Chip, change: np.ndarray) -> np.ndarray:
@@ -132,7 +208,7 @@ def solve(
     best_effort: bool = False,
     least_power: bool = False,
     aware: bool = True,
-    seed: int = 0,
+    effort: Effort | None = None,
 ) -> Plan:
     """Volts and codes for a target, and how near the chip will come.
 
@@ -143,6 +219,7 @@ def solve(
     best_effort : hold actuators at their limits rather than raise
     least_power : use what does not touch the matrix to save power: signs of inner phases, second heaters
     aware : round codes against the matrix; plain rounding else
+    effort : whether and how long to refine; by default where the closed form is not exact
 
     Returns
     -------
@@ -151,14 +228,15 @@ def solve(
     Raises
     ------
     NoClosedForm
-        For nets that no decomposition fits.
+        For nets that no decomposition fits, where refining is off.
     Unreachable, VoltageOutOfRange and other findings of the drive
         Where limits are in the way and `best_effort` is off.
 
     Cost: O(N^3) for N modes.
     """
     chip = Chip(mesh)
-    work = _settled(chip, target, best_effort, least_power)
+    effort = effort or Effort()
+    work = _Settling(chip, target, best_effort, least_power, effort).run()
     solution, placed = work.solution, work.placed
     codes = placed.codes
     ahead = predict_codes(chip, codes, target)
@@ -169,7 +247,7 @@ def solve(
     reason = solution.reason
     if placed.held or _beyond_limits(chip, solution):
         reason = "limits"
-    elif reason == "exact" and ahead.matrix_error > max(CODES_SHOW, 2 * solution.matrix_error):
+    elif reason in ("exact", "met") and ahead.matrix_error > max(CODES_SHOW, 2 * solution.matrix_error):
         reason = "codes"
     return Plan(
         mesh.name,
@@ -183,14 +261,14 @@ def solve(
         frozen(headroom_v(chip, ahead.volts)),
         ahead.fidelity,
         ahead.matrix_error,
-        {"fidelity": work.free.fidelity, "matrix_error": work.free.matrix_error},
+        {"fidelity": work.continuous.fidelity, "matrix_error": work.continuous.matrix_error},
         ahead.throughput,
         ahead.throughput_per_input.tolist(),
         reason,
         _warnings(chip, solution, placed),
         [_shown(chip, s) for s in solution.shortfalls],
         work.saved_mw,
-        seed,
+        effort.seed,
     )
 
 
@@ -270,4 +348,4 @@ def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None) ->
     return predict_codes(Chip(mesh), plan.codes, from_description(plan.target), wavelengths_nm)
 
 
-__all__ = ["Prediction", "headroom_v", "predict", "predict_codes", "solve"]
+__all__ = ["Effort", "Prediction", "headroom_v", "predict", "predict_codes", "solve"]
