@@ -78,6 +78,11 @@ class ClosedForm:
         self.net, self.as_built, self.target = net, as_built, target
         self.response = Response(net, as_built)
         n = len(net.inputs)
+        if self.response.loops:
+            raise NoClosedForm(
+                "no closed form: this net has a loop, a link against the light or a part that reflects",
+                remedy="set its cells by routes, or take a mesh whose light runs one way for a whole matrix",
+            )
         self.table = cell_table(net, self.response.circuit)
         self.places: list[tuple[Steps, np.ndarray]] = []
         decomposed: dict[str, Steps] = {}
