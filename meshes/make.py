@@ -11,6 +11,7 @@ from pathlib import Path
 
 import numpy as np
 
+from meshctl.laws.gap import GAP_LAW
 from meshctl.mesh.meshfile import lattice, load
 from meshctl.mesh.tables import table_text
 
@@ -197,6 +198,58 @@ def _common_heaters(names: list[str], rng: np.random.Generator) -> str:
     return table_text(("actuator", "law", "offset_rad", "p2pi_mw", "r_ohm"), rows)
 
 
+DUNLIN = f"""\
+# Add-drop switch: rows in1 -> out1 and in2 -> out2 meet columns add1 -> drop1 and add2 -> drop2, with an
+# electrostatic gap coupler where each row meets each column. Straight on is bar, so a row and a column cross
+# in a waveguide crossing behind every coupler; the crossings are in the loss budget.
+# Independent potentials on one ground. Closing a gap raises its angle: bar is reached at pi, cross at 3 pi/2.
+format = 1
+name = "dunlin"
+note = "{NOTE}"
+wavelength_nm = 1550.0
+inputs = ["in1", "in2", "add1", "add2"]
+outputs = ["out1", "out2", "drop1", "drop2"]
+elements = [
+    ["x11", "coupler"], ["x12", "coupler"], ["x21", "coupler"], ["x22", "coupler"],
+    ["w11", "crossing"], ["w12", "crossing"], ["w21", "crossing"], ["w22", "crossing"],
+]
+tunable = ["x11", "x12", "x21", "x22"]
+links = [
+    "in1 x11.a1", "x11.b1 w11.a1", "w11.b2 x12.a1", "x12.b1 w12.a1", "w12.b2 out1",
+    "in2 x21.a1", "x21.b1 w21.a1", "w21.b2 x22.a1", "x22.b1 w22.a1", "w22.b2 out2",
+    "add1 x11.a2", "x11.b2 w11.a2", "w11.b1 x21.a2", "x21.b2 w21.a2", "w21.b1 drop1",
+    "add2 x12.a2", "x12.b2 w12.a2", "w12.b1 x22.a2", "x22.b2 w22.a2", "w22.b1 drop2",
+]
+
+[coupler]
+loss_db = 0.1
+angle_slope_per_nm = 0.002
+
+[crossing]
+loss_db = 0.03
+
+[actuator.coupler]
+law = "gap"
+gap_nm = 200.0
+stiffness_n_per_m = 2.0
+area_um2 = 20.0
+decay_nm = 50.0
+rest_rad = 3.05
+margin = 0.8
+
+[channel]
+bits = 14
+min_v = 0.0
+max_v = 8.0
+
+[rest]
+state = "bar"
+
+[budget]
+loss_db = 0.6
+"""
+
+
 def _heaters(folder: Path, rng: np.random.Generator, dead: str = "") -> str:
     """actuators.csv: measured offset, power for 2 pi and resistance of every heater."""
     mesh = load(folder)
@@ -219,6 +272,24 @@ def _couplers(folder: Path, rng: np.random.Generator, sigma_rad: float) -> str:
     return table_text(("element", "error_rad", "loss_db", "stuck_rad", "sigma_rad"), rows)
 
 
+def _gaps(rng: np.random.Generator) -> tuple[str, str]:
+    """actuators.csv of four gaps, and tables.csv: angles as measured at a dozen voltages, 1 mrad of noise."""
+    names = ("x11", "x12", "x21", "x22")
+    actuators, points = [], []
+    volts = np.arange(0.0, 4.01, 0.4)
+    for k, name in enumerate(names, 1):
+        rest, gap, v_pi = 3.05 + 0.02 * rng.normal(), 200 + rng.normal(), round(5.17 + 0.03 * rng.normal(), 3)
+        rest, gap = round(rest, 4), round(gap, 1)
+        actuators.append((name, name, f"g{k}", "gap", 0, rest, gap, v_pi))
+        p = {"rest_rad": rest, "gap_nm": gap, "v_pi_v": v_pi, "decay_nm": 50.0, "area_um2": 20.0, "margin": 0.8}
+        rows = {key: np.array([value]) for key, value in p.items()} | {"stiffness_n_per_m": np.array([2.0])}
+        for v in volts:
+            angle = float(GAP_LAW.rest_rad(rows)[0] + GAP_LAW.change_rad(np.array([v]), rows)[0])
+            points.append((name, round(float(v), 2), round(angle + 0.001 * rng.normal(), 4), 0.001))
+    head = ("actuator", "element", "channel", "law", "dead", "rest_rad", "gap_nm", "v_pi_v")
+    return table_text(head, actuators), table_text(("actuator", "volts_v", "value_rad", "sigma_rad"), points)
+
+
 def make(into: Path) -> None:
     """Write all demo meshes into a folder."""
     rng = np.random.default_rng(SEED)
@@ -233,6 +304,12 @@ def make(into: Path) -> None:
             tables["elements"] = _couplers(folder, rng, 0.002)
         for table, rows in tables.items():
             (folder / f"{table}.csv").write_text(rows)
+    folder = into / "dunlin"
+    folder.mkdir(parents=True, exist_ok=True)
+    (folder / "mesh.toml").write_text(DUNLIN)
+    actuators, points = _gaps(np.random.default_rng(SEED + 1))
+    (folder / "actuators.csv").write_text(actuators)
+    (folder / "tables.csv").write_text(points)
     _make_curlew(into / "curlew")
 
 

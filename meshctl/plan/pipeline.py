@@ -30,7 +30,7 @@ from meshctl.units import TWO_PI, turns
 if TYPE_CHECKING:  # pragma: no cover
     from meshctl.solver.refine import Progress
 
-BLIND_STARTS = 8  # descents where no closed form gives a first one
+BLIND_STARTS = 16  # descents where no closed form gives a first one
 _DEAD_ROUNDS = 8  # settings -> drive -> warmth at dead heaters -> settings; crosstalk makes each far smaller
 _DEAD_WITHIN = 1e-9  # rad
 CODES_WORTH = 0.01  # share of E^2 that codes must add before they are rounded against the matrix
@@ -143,29 +143,46 @@ class _Settling:
         from meshctl.solver.objective import MatrixError
         from meshctl.solver.refine import refine
 
-        effort, starts = self.effort, self.effort.starts
-        if self.refined is not None:
-            begin = self.refined
-        elif closed is not None:
-            begin = closed.settings
-        else:
-            begin, starts = reach.idle, max(starts, BLIND_STARTS)
-        found = refine(
-            self.chip.net,
-            self.chip.mesh.as_built,
-            MatrixError(self.target.matrix, free=self.target.free),
-            reach,
-            begin,
-            starts=starts,
-            seconds=effort.seconds,
-            seed=effort.seed,
-            progress=effort.progress,
-            cancel=effort.cancel,
+        effort = self.effort
+        begins = (
+            [closed.settings if self.refined is None else self.refined] if closed is not None else self._blind(reach)
         )
+        found: Solution | None = None
+        for begin in begins:
+            reached = refine(
+                self.chip.net,
+                self.chip.mesh.as_built,
+                MatrixError(self.target.matrix, free=self.target.free),
+                reach,
+                begin,
+                starts=effort.starts,
+                seconds=effort.seconds,
+                seed=effort.seed,
+                progress=effort.progress,
+                cancel=effort.cancel,
+            )
+            if found is None or reached.matrix_error < found.matrix_error:
+                found = reached
+            if found.reason in ("met", "stopped", "time"):
+                break
+        assert found is not None
         self.refined = found.settings
         if closed is None:
             return found
         return dataclasses.replace(found, shortfalls=closed.shortfalls, counts={**closed.counts, **found.counts})
+
+    def _blind(self, reach: Reach) -> list[np.ndarray]:
+        """First settings where no closed form gives any: at rest, then drawn evenly from the reach."""
+        if self.refined is not None:
+            return [self.refined]
+        drawn = [reach.idle]
+        for k in range(1, BLIND_STARTS):
+            rng = np.random.Generator(np.random.PCG64([self.effort.seed, k]))
+            span = np.where(
+                reach.period > 0.0, np.minimum(reach.high - reach.low, reach.period), reach.high - reach.low
+            )
+            drawn.append(reach.low + span * rng.random(len(span)))
+        return drawn
 
     def run(self) -> _Work:
         chip, least_power = self.chip, self.least_power and self.form is not None
