@@ -278,6 +278,8 @@ class Mesh:
         return self.actuators.names(self.net)
 
     def _repr_html_(self) -> str:
+        from html import escape
+
         net = self.net
         rows: list[tuple[str, Any]] = [
             ("shape", self.shape or "explicit"),
@@ -286,8 +288,8 @@ class Mesh:
             ("settings", net.n_settings),
             ("wavelength", f"{net.wavelength_nm} nm"),
         ]
-        body = "".join(f"<tr><th>{k}</th><td>{v}</td></tr>" for k, v in rows)
-        return f"<table><caption>mesh {self.name}</caption>{body}</table>"
+        body = "".join(f"<tr><th>{k}</th><td>{escape(str(v))}</td></tr>" for k, v in rows)
+        return f"<table><caption>mesh {escape(self.name)}</caption>{body}</table>"
 
 
 def check_net(net: Net) -> None:

@@ -58,17 +58,19 @@ class Plan:
     version: str = __version__
 
     def _repr_html_(self) -> str:
+        from html import escape
+
         rows = (
             ("mesh", self.mesh_name),
-            ("target", self.target.get("source", "")),
+            ("target", str(self.target.get("source", ""))),
             ("fidelity", f"{self.fidelity:.9f}"),
             ("matrix error", f"{self.matrix_error:.3g}"),
             ("throughput", f"{self.throughput:.4f}"),
             ("power", f"{float(self.power_mw.sum()):.1f} mW"),
             ("reason", self.reason),
         )
-        body = "".join(f"<tr><th>{name}</th><td>{value}</td></tr>" for name, value in rows)
-        return f"<table><caption>plan for {self.mesh_name}</caption>{body}</table>"
+        body = "".join(f"<tr><th>{name}</th><td>{escape(value)}</td></tr>" for name, value in rows)
+        return f"<table><caption>plan for {escape(self.mesh_name)}</caption>{body}</table>"
 
 
 def plan_text(plan: Plan) -> str:
