@@ -1,7 +1,8 @@
 """The best settings for the chip as it is: descent on the whole model from one or several starts.
 
 Quasi-Newton descent within bounds. Phases that turn fully have no bounds while only the centre
-wavelength counts, as whole turns then change nothing; stuck and dead settings are no unknowns.
+wavelength counts, as whole turns then change nothing; over a band they do, and are tried one by one. Stuck and
+dead settings are no unknowns.
 Public: refine, Progress.
 """
 
@@ -28,6 +29,8 @@ WINDOW = 60  # steps in which a descent has to gain
 GAIN = 1e-3  # this share of its value, else it has converged
 MOST_STEPS = 20000
 KICK_RAD = 0.5  # standard deviation of what is added to the best settings for a further start
+MOST_TURNS = 64  # settings tried for whole turns in a round, those that promise most first
+TURN_ROUNDS = 10
 AT_BOUND = 1e-9  # rad from its bound at which a setting counts as held there
 
 
@@ -80,6 +83,7 @@ class _Search:
     start: int = 1
     best: float = math.inf
     best_x: np.ndarray = field(default_factory=lambda: np.empty(0))
+    loose: bool = False  # places out of reach are visited: they are no answers
     told: float = -1.0
 
     def evaluate(self, x: np.ndarray) -> tuple[float, np.ndarray]:
@@ -104,7 +108,7 @@ class _Search:
                 f"the objective is {value}",
                 remedy="look for NaN in the mesh's element table and in the target",
             )
-        if value < self.best:
+        if value < self.best and not self.loose:
             self.best, self.best_x = value, x.copy()
         if self.progress is not None and elapsed - self.told >= 0.1:
             self.told = elapsed
@@ -112,8 +116,8 @@ class _Search:
         return value, gradient
 
 
-def _descend(search: _Search, x: np.ndarray, low: np.ndarray, high: np.ndarray) -> str:
-    """One descent; returns why it ended."""
+def _descend(search: _Search, x: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[str, np.ndarray]:
+    """One descent; returns why it ended, and where."""
     history: list[float] = []
 
     def ended(step: Step) -> bool:
@@ -122,10 +126,43 @@ def _descend(search: _Search, x: np.ndarray, low: np.ndarray, high: np.ndarray) 
         slow = len(history) > WINDOW and history[-1 - WINDOW] - step.value <= GAIN * history[-1 - WINDOW]
         return step.value <= MET or slow or step.count >= MOST_STEPS
 
-    descend(search.evaluate, x, low, high, ended)
-    if search.best <= MET:
-        return "met"
-    return "steps" if len(history) >= MOST_STEPS else "converged"
+    there = descend(search.evaluate, x, low, high, ended)
+    if (history and history[-1] <= MET) or search.best <= MET:
+        return "met", there
+    return "steps" if len(history) >= MOST_STEPS else "converged", there
+
+
+def _by_a_turn(search: _Search, x: np.ndarray, centre_nm: float) -> np.ndarray:
+    """First-order change of the objective for a whole turn more on each unknown, others left.
+
+    At the centre a turn changes nothing; elsewhere it turns on by 2 pi (l0 / l - 1), which is small.
+    """
+    waves = np.asarray(search.objective.wavelengths_nm)
+    search.settings[search.unknown] = x
+    matrix = search.model.matrix(search.settings, waves)
+    _, cotangent = search.objective.evaluate(matrix)
+    change = np.zeros(len(x))
+    for w in range(len(waves)):
+        by_setting = search.model.pullback(search.settings, cotangent[w : w + 1], waves[w : w + 1])[search.unknown]
+        change += by_setting * (1.0 - waves[w] / centre_nm)
+    return 2.0 * np.pi * change
+
+
+def _try_turns(search: _Search, low: np.ndarray, high: np.ndarray, period: np.ndarray, centre_nm: float) -> bool:
+    """Add or take off whole turns of the best settings where that gains; True if any did."""
+    x = search.best_x.copy()
+    change = _by_a_turn(search, x, centre_nm)
+    sign = -np.sign(change)
+    there = x + sign * period
+    open_ = np.flatnonzero((period > 0.0) & (sign != 0.0) & (there >= low) & (there <= high))
+    gained = False
+    for k in open_[np.argsort(-np.abs(change[open_]), kind="stable")][:MOST_TURNS]:
+        trial = search.best_x.copy()
+        trial[k] += sign[k] * period[k]
+        before = search.best
+        value, _ = search.evaluate(trial)
+        gained |= value < before
+    return gained
 
 
 def _lowest(x: np.ndarray, low: np.ndarray, high: np.ndarray, period: np.ndarray) -> np.ndarray:
@@ -139,6 +176,15 @@ def _lowest(x: np.ndarray, low: np.ndarray, high: np.ndarray, period: np.ndarray
     ended = np.where(over <= low + p - wrapped, high, low)
     wrapped = np.where(over > 0.0, ended, wrapped)
     return np.where(turns, wrapped, np.clip(x, low, high))
+
+
+def _within(x: np.ndarray, low: np.ndarray, high: np.ndarray, period: np.ndarray) -> np.ndarray:
+    """The nearest equal value within reach, or its nearer end."""
+    p = np.where(period > 0.0, period, 1.0)
+    moved = (
+        x + p * np.where(x < low, np.ceil((low - x) / p), 0.0) - p * np.where(x > high, np.ceil((x - high) / p), 0.0)
+    )
+    return np.clip(np.where(period > 0.0, moved, x), low, high)
 
 
 def _check(net: Net, reach: Reach, start: np.ndarray, starts: int, seconds: float | None) -> None:
@@ -204,26 +250,36 @@ def refine(
     centre = waves is None or bool(np.all(np.asarray(waves) == net.wavelength_nm))
     unknown = np.flatnonzero(np.isnan(as_built.stuck_rad) & (reach.high > reach.low))
     low, high, period = reach.low[unknown], reach.high[unknown], reach.period[unknown]
-    full = (period > 0.0) & (high - low >= period - AT_BOUND) & centre
+    turning = (period > 0.0) & (high - low >= period - AT_BOUND)
+    full = turning & centre
     fixed = np.setdiff1d(np.arange(net.n_settings), unknown)
     settings = start.copy()
     settings[fixed] = np.clip(start, reach.low, reach.high)[fixed]
     turn = period if centre else np.zeros(len(unknown))
     bounds = np.where(full, -np.inf, low), np.where(full, np.inf, high)
+    loose = np.where(turning, -np.inf, low), np.where(turning, np.inf, high)
 
     search = _Search(used, objective, settings, unknown, starts, seconds, progress, cancel)
-    x = start[unknown]
-    x = np.where((x < low) | (x > high), _lowest(x, low, high, period), x)
+    x = _within(start[unknown], low, high, period)
     reason = "converged"
     try:
-        if not len(unknown):
-            search.evaluate(x)
+        search.evaluate(x)
         for k in range(starts if len(unknown) else 0):
             search.start = k + 1
             if k:
                 rng = np.random.Generator(np.random.PCG64([seed, k]))
                 x = _lowest(search.best_x + rng.normal(0.0, KICK_RAD, len(unknown)), low, high, turn)
-            reason = _descend(search, x, *bounds)
+            reason, _ = _descend(search, x, *bounds)
+            if not centre and turning.any() and reason != "met":
+                # whole turns are nearly free: descend as if they were, then put them within reach
+                search.loose = True
+                _, there = _descend(search, x, *loose)
+                search.loose = False
+                reason, _ = _descend(search, _within(there, low, high, period), *bounds)
+            for _ in range(0 if centre else TURN_ROUNDS):
+                if reason == "met" or not _try_turns(search, low, high, period, net.wavelength_nm):
+                    break
+                reason, _ = _descend(search, search.best_x, *bounds)
             if reason == "met":
                 break
     except _Stopped as stop:

@@ -1,0 +1,191 @@
+"""Derivatives of light through loop-free nets, against dense products, central differences and jax alone."""
+
+import time
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from meshctl.errors import WrongSize
+from meshctl.mesh.meshfile import lattice
+from meshctl.mesh.response import Response
+from meshctl.optics import adjoint
+from meshctl.optics.feedforward import propagate
+
+DIFFERENCE = 1e-8  # of a central difference with step 1e-5: truncation 1e-10, rounding 1e-11, times some terms
+
+
+def draw(*shape, seed=0):
+    rng = np.random.default_rng(seed)
+    return rng.standard_normal(shape) + 1j * rng.standard_normal(shape)
+
+
+def chip(cell="mzi", modes=5, loss_db=0.0, seed=0, **more):
+    """A response with errors and losses everywhere, and settings."""
+    mesh, rng = lattice("rectangular", modes=modes, cell=cell, **more), np.random.default_rng(seed)
+    n = mesh.net.n_elements
+    built = replace(mesh.as_built, error_rad=rng.normal(0, 0.1, n), loss_db=rng.uniform(0, loss_db, n))
+    return Response(mesh.net, built), rng.uniform(0, 6, mesh.net.n_settings)
+
+
+def differences(value, settings, step=1e-5):
+    moved = step * np.eye(len(settings))
+    return np.array([(value(settings + e) - value(settings - e)) / (2 * step) for e in moved])
+
+
+@pytest.mark.parametrize("cell", ["mzi", "gap"])
+@pytest.mark.parametrize("loss_db", [0.0, 0.5, 20.0])
+def test_gradient_by_settings_matches_differences(cell, loss_db):
+    response, settings = chip(cell, loss_db=loss_db)
+    waves = np.array([1530.0, 1550.0, 1580.0])
+    cotangent = draw(3, 5, 5)
+    numeric = differences(lambda s: np.vdot(cotangent, response.matrix(s, waves)).real, settings)
+    np.testing.assert_allclose(response.pullback(settings, cotangent, waves), numeric, atol=DIFFERENCE)
+
+
+def test_gradient_by_blocks_matches_dense_products():
+    rng, lanes, columns = np.random.default_rng(1), 4, 3
+    lane_a, lane_b = np.array([0, 2, 1, 3, 0], np.int32), np.array([1, 3, 2, -1, 3], np.int32)
+    blocks = rng.normal(size=(5, 8))
+    fields, g = draw(lanes, columns, seed=2), draw(lanes, columns, seed=3)
+    dense = []
+    for a, b, row in zip(lane_a, lane_b, blocks, strict=True):
+        whole, block = np.eye(lanes, dtype=complex), (row[::2] + 1j * row[1::2]).reshape(2, 2)
+        at = [a, b] if b >= 0 else [a]
+        whole[np.ix_(at, at)] = block[: len(at), : len(at)]
+        dense.append(whole)
+    real, imag = fields.real.copy(), fields.imag.copy()
+    propagate(lane_a, lane_b, blocks, real, imag)
+    g_real, g_imag, gradient, none = g.real.copy(), g.imag.copy(), np.empty((5, 8)), np.empty((0, 2, columns))
+    at = np.full(5, -1, np.int32)
+    adjoint.propagate_back(lane_a, lane_b, blocks, at, none, none, real, imag, g_real, g_imag, gradient)
+    # product rule: G of factor k is (what follows)^H g (what came)^H
+    for k, (a, b) in enumerate(zip(lane_a, lane_b, strict=True)):
+        came, follows = fields, np.eye(lanes)
+        for m in dense[:k]:
+            came = m @ came
+        for m in dense[k + 1 :]:
+            follows = m @ follows
+        by_dense = follows.conj().T @ g @ came.conj().T
+        got = (gradient[k, ::2] + 1j * gradient[k, 1::2]).reshape(2, 2)
+        at = [a, b] if b >= 0 else [a]
+        # inverses of five random blocks, condition numbers up to some tens each
+        np.testing.assert_allclose(got[: len(at), : len(at)], by_dense[np.ix_(at, at)], rtol=1e-9, atol=1e-9)
+    np.testing.assert_allclose(real + 1j * imag, fields, atol=1e-9)
+
+
+def test_opaque_parts_still_give_gradients():
+    response, settings = chip(modes=4)
+    loss = response.as_built.loss_db.copy()
+    loss[response.net.names.element_row["c2_1.split1"]] = 6000.0  # no light at all: an amplitude of 1e-300
+    loss[response.net.names.element_row["c3_1.inner"]] = 80.0
+    dark = Response(response.net, replace(response.as_built, loss_db=loss))
+    cotangent = draw(4, 4)
+    numeric = differences(lambda s: np.vdot(cotangent, dark.matrix(s)).real, settings)
+    got = dark.pullback(settings, cotangent)
+    np.testing.assert_allclose(got, numeric, atol=DIFFERENCE)
+    assert np.abs(got).max() > 0.1
+
+
+def test_fields_are_kept_where_light_fades():
+    response, _ = chip(modes=6)
+    amplitude = np.ones(response.net.n_elements)
+    assert len(adjoint.keeping(response.circuit, amplitude).blocks) == 0
+    # three cells deep at 0.1 each is just short of 1000, four are beyond it
+    per_cell = {name: row for name, row in response.net.names.element_row.items() if name.endswith("inner")}
+    amplitude[list(per_cell.values())] = 0.0999
+    kept = adjoint.keeping(response.circuit, amplitude)
+    column = {row: int(name[1]) for name, row in per_cell.items()}
+    blocks = [response.circuit.element[response.circuit.first[b] : response.circuit.first[b + 1]] for b in kept.blocks]
+    assert {column[e] for block in blocks for e in block if e in column} == {3, 6}
+    assert (kept.at[kept.blocks] == np.arange(len(kept.blocks))).all()
+
+
+def test_stuck_settings_have_no_gradient():
+    response, settings = chip()
+    stuck = np.full(len(settings), np.nan)
+    stuck[3] = 1.0
+    held = Response(response.net, replace(response.as_built, stuck_rad=stuck))
+    got = held.pullback(settings, draw(5, 5))
+    assert got[3] == 0.0
+    assert np.count_nonzero(got) == len(settings) - 1
+
+
+def test_shared_settings_add_their_gradients():
+    response, settings = chip()
+    net, cotangent = response.net, draw(5, 5)
+    apart = response.pullback(np.r_[settings[0], settings[0], settings[2:]], cotangent)
+    shared_of = np.maximum(net.setting_of - (net.setting_of > 0), np.where(net.setting_of < 0, -1, 0))
+    fewer = replace(response.as_built, stuck_rad=response.as_built.stuck_rad[1:])
+    shared = Response(replace(net, setting_of=shared_of.astype(np.int32)), fewer)
+    together = shared.pullback(np.r_[settings[0], settings[2:]], cotangent)
+    np.testing.assert_allclose(together, np.r_[apart[0] + apart[1], apart[2:]], atol=1e-13)
+
+
+def test_cotangent_may_be_a_function():
+    response, settings = chip()
+    waves, wanted = np.array([1540.0, 1550.0]), draw(2, 5, 5)
+    seen = []
+
+    def cotangent(matrix):
+        seen.append(matrix)
+        return 2 * (matrix - wanted)
+
+    got = response.pullback(settings, cotangent, waves)
+    np.testing.assert_array_equal(seen, [response.matrix(settings, waves)])
+    np.testing.assert_array_equal(got, response.pullback(settings, 2 * (seen[0] - wanted), waves))
+
+
+def test_cotangents_of_wrong_shape_are_refused():
+    response, settings = chip()
+    with pytest.raises(WrongSize, match=r"the cotangent has shape \(4, 5\); the matrix \(5, 5\)"):
+        response.pullback(settings, draw(4, 5))
+
+
+@pytest.mark.slow
+def test_jax_alone_gives_same_gradient():
+    import jax
+    import jax.numpy as jnp
+
+    from meshctl.optics.elements import COUPLER
+
+    jax.config.update("jax_enable_x64", True)
+    response, settings = chip(modes=8)
+    net, circuit, cotangent = response.net, response.circuit, draw(8, 8)
+
+    def value(s):
+        m = jnp.eye(8, dtype=complex)
+        in_force = jnp.where(net.setting_of >= 0, s[net.setting_of], net.nominal) + response.as_built.error_rad
+        for e in circuit.element:
+            a, b, v = circuit.element_lane_a[e], circuit.element_lane_b[e], in_force[e]
+            if net.kind[e] == COUPLER:
+                upper = jnp.cos(v) * m[a] + 1j * jnp.sin(v) * m[b]
+                m = m.at[b].set(1j * jnp.sin(v) * m[a] + jnp.cos(v) * m[b]).at[a].set(upper)
+            elif net.setting_of[e] >= 0:
+                m = m.at[a].multiply(jnp.exp(1j * v))
+            else:
+                m = m.at[a].multiply(jnp.exp(1j * response.as_built.error_rad[e]))
+        return jnp.sum(jnp.conj(cotangent) * m[circuit.output_lane]).real
+
+    by_jax = jax.grad(value)(jnp.asarray(settings))
+    np.testing.assert_allclose(response.pullback(settings, cotangent), by_jax, atol=1e-12)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("modes", "products"), [(64, 25), (128, 50)])
+def test_gradient_costs_few_matrix_products(modes, products):
+    mesh = lattice("rectangular", modes=modes)
+    response, wanted = Response(mesh.net, mesh.as_built), draw(modes, modes)
+    settings, other = np.random.default_rng(0).uniform(0, 6, mesh.net.n_settings), draw(modes, modes, seed=1)
+
+    def least(function, times):
+        spent = []
+        for _ in range(times):
+            began = time.perf_counter()
+            function()
+            spent.append(time.perf_counter() - began)
+        return min(spent)
+
+    product = least(lambda: wanted @ other, 400)
+    whole = least(lambda: response.pullback(settings, lambda m: 2 * (m - wanted)), 60)
+    assert whole <= products * product
