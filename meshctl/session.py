@@ -79,7 +79,9 @@ class Session:
     def elements(self) -> Iterator[LightRow]:
         """The parts in light order, settings as the codes of the plan give them."""
         plan = self._in_hand()
-        return light_order(self.mesh.net, self.mesh.as_built, plan.settings, Chip(self.mesh).actual(plan.codes))
+        chip = Chip(self.mesh)
+        as_built = chip.as_built(chip.levels(plan.codes))
+        return light_order(self.mesh.net, as_built, plan.settings, chip.actual(plan.codes))
 
     def energy(self) -> Energy:
         """What holding the plan in hand costs, and reaching it from power off."""

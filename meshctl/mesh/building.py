@@ -16,6 +16,7 @@ import numpy as np
 from meshctl.errors import DuplicateName, OutOfRange, UnsoundFile
 from meshctl.mesh.actuation import CHANNEL_NUMBERS, join_actuation
 from meshctl.mesh.description import MESH_TOML, Description
+from meshctl.mesh.drag import with_drag
 from meshctl.mesh.explicit import explicit_net
 from meshctl.mesh.graph import FREE, Actuators, AsBuilt, Channels, Mesh, Net, frozen
 from meshctl.mesh.inserts import with_inserts
@@ -66,6 +67,13 @@ def _assembled(description: Description, folder: Path | None) -> tuple[Assembly,
     if description.insert:
         assembly, setting_of = with_inserts(assembly, setting_of, description.insert, folder)
     return assembly, setting_of
+
+
+def _drags(description: Description, actuators: Table | None) -> bool:
+    """True where some coupler drags a phase along as it moves."""
+    keys = ("phase_rad_per_nm", "phase_rad_per_nm2")
+    given = any(description.actuator.get("coupler", {}).get(key) for key in keys)
+    return given or (actuators is not None and any(any(actuators.column(key)) for key in keys))
 
 
 def _net(description: Description, assembly: Assembly, setting_of: np.ndarray) -> Net:
@@ -178,6 +186,8 @@ def build_mesh(description: Description, tables: Tables, text: str, folder: Path
     UnsoundFile or a finding under it, with file, line or key, value, what is allowed and what to do.
     """
     assembly, setting_of = _assembled(description, folder)
+    if _drags(description, tables.actuators):
+        assembly, setting_of = with_drag(assembly, setting_of)
     net = _net(description, assembly, setting_of)
     as_built = _as_built(description, net, tables.elements)
     actuators, channels = join_actuation(

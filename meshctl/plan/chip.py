@@ -6,7 +6,7 @@ Public: Chip, Bounds.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -15,7 +15,7 @@ from meshctl.drive.codes import Source
 from meshctl.errors import WrongSize
 from meshctl.laws.law import MA_PER_A, MW_PER_W
 from meshctl.mesh.actuation import law_groups
-from meshctl.mesh.graph import Mesh
+from meshctl.mesh.graph import AsBuilt, Mesh
 from meshctl.mesh.response import Response
 from meshctl.units import TWO_PI, turns
 
@@ -132,9 +132,35 @@ class Chip:
         settings = self.reference_rad + self.total_changes(self.own_changes(self.levels(codes)))
         return self.mesh.as_built.in_force(settings)
 
+    @cached_property
+    def drag(self) -> np.ndarray | None:
+        """Rows of the phase parts that moving couplers drag along, i32[S, 2]; None where none does."""
+        if not any(
+            "phase_rad_per_nm" in group.p and group.p["phase_rad_per_nm"].any() for group in self.groups
+        ) and not any("phase_rad_per_nm2" in group.p and group.p["phase_rad_per_nm2"].any() for group in self.groups):
+            return None
+        from meshctl.mesh.drag import drag_rows
+
+        return drag_rows(self.net)
+
+    def as_built(self, levels: np.ndarray) -> AsBuilt:
+        """The die as it is at levels [K]: with the phases that moved couplers drag along."""
+        if self.drag is None:
+            return self.mesh.as_built
+        error = self.mesh.as_built.error_rad.copy()
+        at = levels[self.actuators.channel]
+        for group in self.groups:
+            phase = group.law.parasitic_phase_rad(at[group.rows], group.p)
+            for a, extra in zip(group.rows.tolist(), phase.tolist(), strict=True):
+                rows = self.drag[self.actuators.setting[a]]
+                if rows[0] >= 0 and not self.actuators.dead[a]:
+                    error[rows] += extra
+        return replace(self.mesh.as_built, error_rad=error)
+
     def matrix(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
         """Field matrix for codes: (out, in), or (W, out, in) where wavelengths are given."""
-        return self.response.matrix(self.actual(codes), wavelengths_nm)
+        response = self.response if self.drag is None else Response(self.net, self.as_built(self.levels(codes)))
+        return response.matrix(self.actual(codes), wavelengths_nm)
 
     def powers(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
         """Power at every output for unit power in every input: |matrix|^2."""

@@ -120,10 +120,14 @@ class _Settling:
         self.flip: np.ndarray | None = None
         self.form: ClosedForm | None = None
         self.refined: np.ndarray | None = None
+        self.as_built = chip.mesh.as_built
+        self._form()
+
+    def _form(self) -> None:
         try:
-            self.form = ClosedForm(chip.net, chip.mesh.as_built, target)
+            self.form = ClosedForm(self.chip.net, self.as_built, self.target)
         except NoClosedForm:
-            if effort.refine is False:
+            if self.effort.refine is False:
                 raise
 
     def solution(self, reach: Reach) -> Solution:
@@ -151,7 +155,7 @@ class _Settling:
         for begin in begins:
             reached = refine(
                 self.chip.net,
-                self.chip.mesh.as_built,
+                self.as_built,
                 MatrixError(self.target.matrix, free=self.target.free),
                 reach,
                 begin,
@@ -203,6 +207,11 @@ class _Settling:
                 plain_mw = float(chip.power_mw(placed.levels).sum())
             settled = not warmed or float(np.abs((warmth - background)[dead]).max()) < _DEAD_WITHIN
             background = warmth
+            if chip.drag is not None:  # angles first, then the phases that they drag along
+                moved = chip.as_built(placed.levels)
+                settled &= float(np.abs(moved.error_rad - self.as_built.error_rad).max()) < _DEAD_WITHIN
+                self.as_built = moved
+                self._form()
             if settled and (round_ > 0 or not least_power):
                 break
         saved = plain_mw - float(chip.power_mw(placed.levels).sum()) if least_power else 0.0
@@ -334,7 +343,7 @@ def predict_codes(
     levels = chip.levels(codes)
     volts = chip.volts(levels)
     actual = chip.actual(codes)
-    matrix = chip.response.matrix(actual, wavelengths_nm)
+    matrix = chip.matrix(codes, wavelengths_nm)
     wanted = target.matrix if wavelengths_nm is None else np.broadcast_to(target.matrix, matrix.shape)
     error = matrix_error(matrix, wanted, target.free)
     return Prediction(
