@@ -197,6 +197,25 @@ def _counted(counts: dict[str, int]) -> str:
     return ", ".join(f"{n} {name}" for name, n in counts.items())
 
 
+def _path_table(found: Inventory) -> list[str]:
+    """Loss between ports by kind of part."""
+    kinds = list(dict.fromkeys(name for path in found.paths for name in path.counts if name not in ("phase", "guide")))
+    port = max(8, *(len(p.input) + len(p.output) + 2 for p in found.paths))
+    lines = [
+        f"{'from:to':<{port}}{'least dB':>9}{'most dB':>9}"
+        + "".join(f"{name + ' dB':>16}" for name in kinds)
+        + f"{'guide mm dB':>18}"
+    ]
+    for p in found.paths:
+        cells = "".join(f"{p.counts.get(name, 0):>7d} {p.loss_db.get(name, 0.0):>8.3f}" for name in kinds)
+        guide = f"{p.guide_mm:>9.3f} {p.loss_db.get('guide', 0.0):>8.3f}"
+        lines.append(f"{p.input + ':' + p.output:<{port}}{p.least_db:>9.3f}{p.most_db:>9.3f}{cells}{guide}")
+    how = "on the way of least loss" if found.loops else "on the way of most loss"
+    pairs = "" if len(found.paths) > len(found.outputs) else "; from the input that is worst for each output"
+    lines.append(f"parts {how}{pairs}; how the light is split comes on top")
+    return lines
+
+
 def inventory_text(found: Inventory) -> str:
     """What `check` prints."""
     lines = [
@@ -214,13 +233,9 @@ def inventory_text(found: Inventory) -> str:
         f"dead          {', '.join(found.dead) or 'none'}",
         "loops         " + ("yes: light has no single order" if found.loops else "none"),
     ]
+    lines += [f"measured      {name}: {source}" for name, source in found.measured.items()]
     if found.paths:
-        lines += ["", f"{'output':<10}{'least dB':>10}{'most dB':>10}{'couplers':>10}{'crossings':>11}{'guide mm':>10}"]
-        lines += [
-            f"{p.output:<10}{p.least_db:>10.3f}{p.most_db:>10.3f}{p.couplers:>10d}{p.crossings:>11d}{p.guide_mm:>10.3f}"
-            for p in found.paths
-        ]
-        lines.append("loss of the parts on the way from any input; how the light is split comes on top")
+        lines += ["", *_path_table(found)]
     return "\n".join(line for line in lines if line)
 
 
