@@ -17,6 +17,7 @@ from meshctl.optics.elements import (
 )
 
 EXACT = 1e-15  # one or two roundings of numbers of order one
+PASSING = [kind.name for kind in KINDS if not kind.reflects]  # through and cross amplitudes say all of these
 C_UM_THZ = 299.792458  # speed of light, um * THz (SI definition)
 WAVES = {"wavelength_nm": 1543.0, "centre_nm": 1550.0, "n_eff": 2.4, "n_group": 4.2, "angle_slope_per_nm": 2e-3}
 
@@ -115,7 +116,7 @@ def test_coupler_angle_follows_its_slope():
     assert abs(x[0] - 1j * np.sin(0.51)) <= EXACT
 
 
-@pytest.mark.parametrize("kind", [kind.name for kind in KINDS])
+@pytest.mark.parametrize("kind", PASSING)
 def test_every_kind_loses_its_decibels(kind):
     # 10 dB are a tenth of the power (definition); a lossless part keeps all of it, both lanes apart
     value = 0.0 if kind == "loss" else 0.7
@@ -130,7 +131,7 @@ def test_loss_element_loses_its_value():
 
 def test_unknown_kinds_have_no_row():
     assert kind_row("ring") is None
-    assert [kind_row(kind.name) for kind in KINDS] == list(range(len(KINDS)))
+    assert all(KINDS[kind_row(kind.name)].name == kind.name for kind in KINDS)
 
 
 @pytest.mark.slow
@@ -140,8 +141,8 @@ def test_jax_arrays_give_numpy_blocks():
     jax.config.update("jax_enable_x64", True)
     import jax.numpy as jnp
 
-    for kind in KINDS:
-        ours, theirs = amplitudes(kind.name, 0.7, 0.2, 30.0), amplitudes(kind.name, 0.7, 0.2, 30.0, xp=jnp)
+    for kind in PASSING:
+        ours, theirs = amplitudes(kind, 0.7, 0.2, 30.0), amplitudes(kind, 0.7, 0.2, 30.0, xp=jnp)
         assert all(np.abs(a - np.asarray(b)).max() <= 1e-14 for a, b in zip(ours, theirs, strict=True))
     inner, outer = np.array([0.4, 2.0]), np.array([1.0, -1.0])
     theirs = cell_block(jnp.asarray(inner), jnp.asarray(outer), 0.1, 0.2, xp=jnp)

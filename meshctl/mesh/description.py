@@ -40,7 +40,8 @@ def _quantity(name: str) -> AfterValidator:
 
     def check(value: Any) -> Any:
         if not math.isfinite(value):
-            raise _Refused(NotFinite(f"{value} is no number to use", remedy=f"write {quantity.allowed}"))
+            left_out = "" if math.isnan(quantity.default) else ", or leave the key out"
+            raise _Refused(NotFinite(f"{value} is no number to use", remedy=f"write {quantity.allowed}{left_out}"))
         if not quantity.allows(value):
             raise _Refused(OutOfRange(f"{value:g} is out of range", remedy=f"allowed is {quantity.allowed}"))
         return value

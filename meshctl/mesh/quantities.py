@@ -37,7 +37,7 @@ class Quantity:
             return f"any finite number{' in' + unit if unit else ''}"
         if self.high == INF:
             return f"{'above' if self.low_open else 'at least'} {self.low:g}{unit}"
-        return f"{self.low:g} to {self.high:g}{unit}"
+        return f"{'above ' if self.low_open else ''}{self.low:g} to {self.high:g}{unit}"
 
 
 def _q(name: str, unit: str, low: float, high: float, default: float, text: str, open_: bool = False) -> Quantity:

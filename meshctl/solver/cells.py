@@ -118,7 +118,7 @@ def _in_light_order(net: Net, circuit: Circuit, element: np.ndarray, forms: np.n
     loose = (net.cell_of[order] < 0) & (circuit.element_lane_b[order] < 0)
     events = order[is_last[order] | loose]
     cells = net.cell_of[events[is_last[events]]]
-    position = np.full(net.n_cells, -1, np.int32)
+    position = np.full(net.n_cells + 1, -1, np.int32)  # the last one is that of parts in no cell
     position[cells] = np.arange(len(cells))
     event = np.where(net.cell_of[events] >= 0, position[net.cell_of[events]], -1 - events).astype(np.int32)
     lane = circuit.element_lane_a[last[cells]]

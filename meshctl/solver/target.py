@@ -182,7 +182,8 @@ def _from_csv(path: Path) -> np.ndarray:
 
 def _from_npy(path: Path) -> np.ndarray:
     try:
-        loaded = np.load(path, allow_pickle=False)
+        with path.open("rb") as opened:
+            loaded = np.load(opened, allow_pickle=False)
     except (ValueError, EOFError, OSError, MemoryError, BadZipFile) as problem:
         raise UnsoundFile(
             f"not readable as a numpy array: {problem}", where=str(path), remedy="save it with numpy.save"
@@ -330,7 +331,21 @@ def described(target: Target) -> dict[str, Any]:
 
 
 def from_description(entry: dict[str, Any]) -> Target:
-    """The target that `described` wrote."""
+    """The target that `described` wrote.
+
+    Raises
+    ------
+    UnsoundFile
+        Where `described` cannot have written it.
+    """
+    try:
+        return _from_description(entry)
+    except (KeyError, IndexError, TypeError, ValueError, AttributeError) as problem:
+        what = f"the target of the plan is not readable: {type(problem).__name__} {problem}"
+        raise UnsoundFile(what, remedy="solve again") from None
+
+
+def _from_description(entry: dict[str, Any]) -> Target:
     shape = (int(entry["size"][0]), int(entry["size"][1]))
     matrix = np.array(entry["real"]) + 1j * np.array(entry["imag"]) if "real" in entry else None
     if entry.get("wish"):
