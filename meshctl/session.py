@@ -15,20 +15,34 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import MissingFile, WrongUsage
+from meshctl.errors import MissingFile, OutOfReach, WrongUsage
 from meshctl.mesh.files import new_folder, write_whole
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.inventory import Inventory, inventory
 from meshctl.mesh.lightorder import HEAD, LightRow, light_order
 from meshctl.mesh.meshfile import MESH_TOML, die_tables, lattice, load, write
+from meshctl.mesh.tables import unknown_name
+from meshctl.optics.features import Feature
 from meshctl.plan.chip import Chip
 from meshctl.plan.energy import Energy, energy
 from meshctl.plan.pipeline import Effort, Prediction, predict, solve
+from meshctl.plan.placing import require_sound_crosstalk
 from meshctl.plan.plan import Plan, check_fresh, plan_text, read_plan
+from meshctl.plan.spectrum import Spectrum, features, spectrum
 from meshctl.solver.target import Target, read_target
-from meshctl.units import db
 
 DEMO_MESH = "plover8"
+SPECTRUM_HEAD = (
+    "wavelength_nm",
+    "frequency_thz",
+    "input",
+    "output",
+    "amplitude",
+    "power",
+    "power_db",
+    "phase_rad",
+    "group_delay_ps",
+)
 
 
 class Session:
@@ -48,6 +62,7 @@ class Session:
     # ---- looking
     def check(self) -> Inventory:
         """What is on the chip, its faults and its loss budget."""
+        require_sound_crosstalk(Chip(self.mesh))
         return inventory(self.mesh)
 
     def open_plan(self, path: str | Path, *, stale_ok: bool = False) -> Plan:
@@ -75,6 +90,36 @@ class Session:
     def predict(self, wavelengths_nm: np.ndarray | None = None) -> Prediction:
         """What the chip does with the codes of the plan in hand."""
         return predict(self.mesh, self._in_hand(), wavelengths_nm)
+
+    def port_pair(self, words: str, option: str) -> tuple[str, str]:
+        """IN:OUT as two port names of the mesh."""
+        entry, _, leaving = words.partition(":")
+        for name, known, side in ((entry, self.mesh.net.inputs, "input"), (leaving, self.mesh.net.outputs, "output")):
+            if name not in known:
+                finding = unknown_name(side, name, known, "")
+                raise WrongUsage(f"{option} {words}: {finding.what}", remedy=f"write IN:OUT; {finding.remedy}")
+        return entry, leaving
+
+    def spectrum(self, wavelengths_nm: np.ndarray | None, pairs: list[tuple[str, str]] | None = None) -> Spectrum:
+        """Fields with their group delay between port pairs (None: all) as the codes of the plan in hand give them."""
+        waves = np.array([self.mesh.net.wavelength_nm]) if wavelengths_nm is None else wavelengths_nm
+        return spectrum(Chip(self.mesh), self._in_hand().codes, waves, pairs)
+
+    def feature(self, wavelengths_nm: np.ndarray, pair: tuple[str, str], kind: str | None) -> Feature:
+        """Free spectral range, bandwidth, extinction and finesse of what a port pair shows over wavelength."""
+        found = features(Chip(self.mesh), self._in_hand().codes, wavelengths_nm, pair, kind)
+        if found is None:
+            raise OutOfReach(
+                f"{pair[0]} to {pair[1]} shows no {kind or 'peak or dip'} between {wavelengths_nm.min():.6g} and "
+                f"{wavelengths_nm.max():.6g} nm",
+                remedy="widen --wavelengths, give more of them, or choose another pair",
+            )
+        if found.narrow:
+            self.remarks.append(
+                f"{pair[0]} to {pair[1]}: its {found.kind} is narrower than the wavelengths are apart; others may be "
+                "missed: give more wavelengths"
+            )
+        return found
 
     def elements(self) -> Iterator[LightRow]:
         """The parts in light order, settings as the codes of the plan give them."""
@@ -104,22 +149,41 @@ class Session:
         write_whole(Path(path), out.getvalue())
         return count
 
-    def write_spectrum(self, prediction: Prediction, path: str | Path) -> None:
-        """Write a prediction as CSV: one row per wavelength, input and output."""
+    def write_spectrum(self, spectrum: Spectrum, path: str | Path) -> None:
+        """Write a spectrum as CSV: one row per wavelength and port pair."""
         require_suffix(path, ".csv")
-        net = self.mesh.net
         out = io.StringIO()
         writer = csv.writer(out, lineterminator="\n")
-        writer.writerow(("wavelength_nm", "input", "output", "power", "power_db", "phase_rad"))
-        centre = prediction.wavelengths_nm is None
-        wavelengths = [net.wavelength_nm] if centre else prediction.wavelengths_nm.tolist()  # type: ignore[union-attr]
-        for w, matrix in zip(wavelengths, prediction.matrix[None] if centre else prediction.matrix, strict=True):
-            power, phase = np.abs(matrix) ** 2, np.angle(matrix)
-            for i, entry in enumerate(net.inputs):
-                for o, leaving in enumerate(net.outputs):
-                    p = float(power[o, i])
-                    writer.writerow((w, entry, leaving, repr(p), f"{db(p):.6g}", repr(float(phase[o, i]))))
+        writer.writerow(SPECTRUM_HEAD)
+        size, power, phase = np.abs(spectrum.field), spectrum.power, spectrum.phase_rad
+        with np.errstate(divide="ignore"):
+            power_db = 10.0 * np.log10(power)
+        delay = spectrum.group_delay_ps
+        inputs, outputs = zip(*spectrum.pairs, strict=True)
+        for w, (wave, thz) in enumerate(zip(spectrum.wavelengths_nm.tolist(), spectrum.thz.tolist(), strict=True)):
+            delays = ["" if d != d else repr(d) for d in delay[w].tolist()]  # dark: no delay
+            columns = (size[w].tolist(), power[w].tolist(), power_db[w].round(6).tolist(), phase[w].tolist(), delays)
+            rows = zip(inputs, outputs, *columns, strict=True)
+            writer.writerows((wave, thz, *row) for row in rows)
         write_whole(Path(path), out.getvalue())
+
+    def write_figure(
+        self,
+        spectrum: Spectrum,
+        path: str | Path,
+        feature: Feature | None = None,
+        pair: tuple[str, str] | None = None,
+    ) -> None:
+        """Draw a spectrum into a file."""
+        from meshctl.plots import LINES_MOST, spectrum_figure
+
+        require_suffix(path, ".png", ".svg", ".pdf")
+        if len(spectrum.pairs) > LINES_MOST:
+            raise WrongUsage(
+                f"a figure of {len(spectrum.pairs)} port pairs cannot be read; {LINES_MOST} at most",
+                remedy="choose pairs with --between IN:OUT",
+            )
+        spectrum_figure(spectrum, path, self.mesh.name, feature, pair)
 
     def write_matrix(self, prediction: Prediction, path: str | Path) -> None:
         """Write the field matrix as a numpy file, [out, in] or [wavelength, out, in]."""
@@ -158,34 +222,11 @@ def demo_mesh_folder(name: str = DEMO_MESH) -> Path:
     raise MissingFile("the shipped meshes are not there", where=str(shared), remedy="install meshctl again")
 
 
-def require_suffix(path: str | Path, suffix: str) -> None:
+def require_suffix(path: str | Path, *suffixes: str) -> None:
     """Refuse a file name that does not end as its content asks."""
-    if Path(path).suffix != suffix:
-        raise WrongUsage(f"'{path}' is no {suffix} file", remedy=f"name a file that ends in {suffix}")
+    if Path(path).suffix not in suffixes:
+        listed = " or ".join(suffixes)
+        raise WrongUsage(f"'{path}' is no {listed} file", remedy=f"name a file that ends in {listed}")
 
 
-def wavelength_range(words: str) -> np.ndarray:
-    """FROM:TO:COUNT in nm as wavelengths (W,).
-
-    Raises
-    ------
-    WrongUsage
-    """
-    parts = words.split(":")
-    try:
-        first, last, count = float(parts[0]), float(parts[1]), int(parts[2])
-        fits = len(parts) == 3
-    except (ValueError, IndexError):
-        fits = False
-    if not fits:
-        raise WrongUsage(
-            f"--wavelengths {words} is no range", remedy="write FROM:TO:COUNT in nm, such as 1540:1560:201"
-        )
-    if not (200.0 <= first <= 20000.0 and 200.0 <= last <= 20000.0 and 1 <= count <= 1_000_000):
-        raise WrongUsage(
-            f"--wavelengths {words} is out of range", remedy="wavelengths are 200 to 20000 nm, 1 to 1000000 of them"
-        )
-    return np.linspace(first, last, count)
-
-
-__all__ = ["Effort", "Session", "demo_mesh_folder", "new_mesh", "require_suffix", "wavelength_range"]
+__all__ = ["Effort", "Session", "demo_mesh_folder", "new_mesh", "require_suffix"]

@@ -157,10 +157,13 @@ class Chip:
                     error[rows] += extra
         return replace(self.mesh.as_built, error_rad=error)
 
+    def response_at(self, codes: np.ndarray) -> Response:
+        """The response of the die as it is at these codes."""
+        return self.response if self.drag is None else Response(self.net, self.as_built(self.levels(codes)))
+
     def matrix(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
         """Field matrix for codes: (out, in), or (W, out, in) where wavelengths are given."""
-        response = self.response if self.drag is None else Response(self.net, self.as_built(self.levels(codes)))
-        return response.matrix(self.actual(codes), wavelengths_nm)
+        return self.response_at(codes).matrix(self.actual(codes), wavelengths_nm)
 
     def powers(self, codes: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
         """Power at every output for unit power in every input: |matrix|^2."""

@@ -50,6 +50,8 @@ class Prediction:
     throughput: float
     throughput_per_input: np.ndarray  # f64[in]
     wavelengths_nm: np.ndarray | None = None
+    residual: float | None = None  # of a scattering solve: largest breach of a link over the largest field
+    dark_loops: int = 0  # loops that no light enters
 
 
 def _unlimited(chip: Chip, reach: Reach) -> Reach:
@@ -343,7 +345,8 @@ def predict_codes(
     levels = chip.levels(codes)
     volts = chip.volts(levels)
     actual = chip.actual(codes)
-    matrix = chip.matrix(codes, wavelengths_nm)
+    response = chip.response_at(codes)
+    matrix = response.matrix(actual, wavelengths_nm)
     wanted = target.matrix if wavelengths_nm is None else np.broadcast_to(target.matrix, matrix.shape)
     error = matrix_error(matrix, wanted, target.free)
     return Prediction(
@@ -356,6 +359,8 @@ def predict_codes(
         throughput(matrix),
         throughput_per_input(matrix),
         wavelengths_nm,
+        response.waves.residual if response.loops else None,
+        response.waves.dark_loops if response.loops else 0,
     )
 
 

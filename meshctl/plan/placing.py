@@ -1,17 +1,17 @@
 """Settings put on the electronics: whole turns, volts and codes within limits; the inverse of `chip`.
 
-Public: Placed, place, reach_of.
+Public: Placed, place, reach_of, fixed_settings, require_sound_crosstalk.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from typing import NoReturn
+from typing import Any, NoReturn
 
 import numpy as np
 
 from meshctl.drive.wraps import LIMIT_TOLERANCE, Wraps, least_power_wraps
-from meshctl.errors import CurrentOutOfRange, DriveFinding, SharedChannel, VoltageOutOfRange
+from meshctl.errors import CrosstalkUnsound, CurrentOutOfRange, DriveFinding, SharedChannel, VoltageOutOfRange
 from meshctl.plan.chip import Chip
 from meshctl.plan.refusal import refuse
 from meshctl.solver.reach import Reach
@@ -57,6 +57,10 @@ def reach_of(chip: Chip, background: np.ndarray | None = None) -> Reach:
     fixed = is_stuck | ~alive
     low[~alive & ~is_stuck] = high[~alive & ~is_stuck] = reference[~alive & ~is_stuck]
     period = np.where(fixed, 0.0, chip.period_rad)
+    if chip.actuators.crosstalk is not None:
+        # neighbours give phase too: what is out of reach is for the search of whole turns to say
+        turning = period > 0.0
+        high[turning] = np.maximum(high, low + period)[turning]
     return Reach(low, high, period, np.clip(reference, low, high))
 
 
@@ -96,10 +100,30 @@ class _Placement:
         from meshctl.drive.crosstalk import Crosstalk
 
         signs = diags_array(self.sign)
-        return Crosstalk(signs @ matrix.tocsr()[self.live][:, self.actuator] @ signs)
+        try:
+            return Crosstalk(signs @ matrix.tocsr()[self.live][:, self.actuator] @ signs)
+        except CrosstalkUnsound as finding:
+            raise self._where_unsound(matrix, finding) from None
+
+    def _where_unsound(self, matrix: Any, finding: CrosstalkUnsound) -> CrosstalkUnsound:
+        """The same finding with the actuators that it is about."""
+        dense = np.eye(len(self.live)) + matrix.tocsr()[self.live][:, self.actuator].toarray()
+        _, sizes, kernel = np.linalg.svd(dense)
+        worst = np.argsort(-np.abs(kernel[-1]), kind="stable")[:2]
+        names = self.names()
+        condition = float(sizes[0] / sizes[-1]) if sizes[-1] > 0.0 else np.inf
+        return CrosstalkUnsound(
+            f"{finding.what} (condition {condition:.2g}): '{names[worst[0]]}' and '{names[worst[-1]]}' "
+            "cannot be told apart by what they heat",
+            where=finding.where or "crosstalk.csv",
+            remedy=finding.remedy,
+        )
 
     def search(self) -> Wraps:
-        return least_power_wraps(self.wanted, self.wraps, self.crosstalk, self.low, self.high, self.weight)
+        try:
+            return least_power_wraps(self.wanted, self.wraps, self.crosstalk, self.low, self.high, self.weight)
+        except DriveFinding as finding:
+            raise finding.named(self.names()) from None
 
     def names(self) -> list[str]:
         names = self.chip.mesh.actuator_names
