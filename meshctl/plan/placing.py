@@ -182,6 +182,12 @@ def _held(placement: _Placement, found: Wraps) -> tuple[Wraps, tuple[int, ...]]:
     return Wraps(own, found.wraps, 0.0, found.verdict, found.rounds), held
 
 
+def require_sound_crosstalk(chip: Chip) -> None:
+    """Refuse crosstalk that no drive can be found through, with the actuators concerned."""
+    if chip.actuators.crosstalk is not None:
+        _Placement(chip, chip.reference_rad, chip.primary)
+
+
 def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False, moved_by: np.ndarray | None = None) -> Placed:
     """Volts and codes for settings, whole turns chosen for least power within limits.
 
