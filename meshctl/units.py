@@ -1,7 +1,7 @@
 """Decibel, wavelength and frequency: the only place where a factor of 10 or the speed of light appears.
 
 Public: SPEED_OF_LIGHT_M_PER_S, amplitude_from_loss_db, power_from_loss_db, loss_db_from_power, db,
-thz_from_nm, nm_from_thz, turns, radians.
+thz_from_nm, nm_from_thz, ps_from_phase_slope, turns, radians.
 """
 
 from __future__ import annotations
@@ -12,6 +12,7 @@ from typing import Any
 SPEED_OF_LIGHT_M_PER_S = 299_792_458.0  # exact, SI definition of the metre
 UM_PER_CM = 1e4
 NM_PER_UM = 1e3
+THZ_PER_GHZ = 1e-3
 TWO_PI = 2.0 * math.pi
 _LN10 = math.log(10.0)
 
@@ -44,6 +45,11 @@ def thz_from_nm(wavelength_nm: Any) -> Any:
 def nm_from_thz(frequency_thz: Any) -> Any:
     """Vacuum wavelength in nm of an optical frequency in THz."""
     return SPEED_OF_LIGHT_M_PER_S / frequency_thz * 1e-3
+
+
+def ps_from_phase_slope(rad_per_thz: Any) -> Any:
+    """Delay in ps of a phase that grows with frequency: 2 pi rad per THz is 1 ps."""
+    return rad_per_thz / TWO_PI
 
 
 def turns(angle_rad: Any) -> Any:

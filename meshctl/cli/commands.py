@@ -15,7 +15,10 @@ from typing import Any
 from meshctl.cli import printing
 from meshctl.cli.watch import Watch
 from meshctl.errors import DONE, INTERRUPTED, WrongUsage
-from meshctl.session import Effort, Session, demo_mesh_folder, new_mesh, require_suffix, wavelength_range
+from meshctl.optics.grid import wavelengths_of
+from meshctl.session import Effort, Session, demo_mesh_folder, new_mesh, require_suffix
+
+FIGURES = (".png", ".svg", ".pdf")
 
 
 def _json(entry: dict[str, Any]) -> int:
@@ -99,20 +102,32 @@ def solve(words: Namespace) -> int:
 
 def predict(words: Namespace) -> int:
     session = Session(words.mesh)
-    wavelengths = wavelength_range(words.wavelengths) if words.wavelengths else None
-    for path, suffix in ((words.matrix, ".npy"), (words.out, ".csv")):
+    wavelengths = wavelengths_of(words.wavelengths) if words.wavelengths else None
+    for path, suffixes in ((words.matrix, (".npy",)), (words.out, (".csv",)), (words.figure, FIGURES)):
         if path:
-            require_suffix(path, suffix)
+            require_suffix(path, *suffixes)
+    if wavelengths is None and (words.feature or words.figure):
+        raise WrongUsage("--feature and --figure need --wavelengths", remedy="give a range, such as 1540:1560:2001")
+    pairs = [session.port_pair(word, "--between") for word in words.between] or None
+    marked, kind = printing.marked(words.feature)
+    pair = session.port_pair(marked, "--feature") if marked else None
     plan = session.open_plan(words.plan, stale_ok=words.stale_ok)
     prediction = session.predict(wavelengths)
     if words.matrix:
         session.write_matrix(prediction, words.matrix)
-    if words.out:
-        session.write_spectrum(prediction, words.out)
+    spectrum = session.spectrum(wavelengths, pairs) if words.out else None
+    if spectrum is not None:
+        session.write_spectrum(spectrum, words.out)
+    feature = None
+    if pair and wavelengths is not None:
+        feature = session.feature(wavelengths, pair, kind)
+    if words.figure:
+        drawn = pairs or ([pair] if pair else None)
+        session.write_figure(session.spectrum(wavelengths, drawn), words.figure, feature, pair)
     _remark(session.remarks)
     if words.json:
-        return _json(printing.prediction_entry(session.mesh, plan, prediction))
-    print(printing.prediction_text(session.mesh, plan, prediction))
+        return _json(printing.prediction_entry(session.mesh, plan, prediction, feature))
+    print(printing.prediction_text(session.mesh, plan, prediction, feature))
     return DONE
 
 

@@ -5,6 +5,7 @@ Public: plan_entry, plan_table, plan_summary, prediction_entry, prediction_text,
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from typing import Any, NoReturn
 
@@ -14,6 +15,7 @@ from meshctl.errors import WrongUsage
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.inventory import Inventory
 from meshctl.mesh.tables import unknown_name
+from meshctl.optics.features import Feature
 from meshctl.plan.energy import Energy
 from meshctl.plan.pipeline import Prediction
 from meshctl.plan.plan import Plan
@@ -122,7 +124,28 @@ def plan_summary(plan: Plan) -> str:
 
 
 # ---- predictions
-def prediction_entry(mesh: Mesh, plan: Plan, prediction: Prediction) -> dict[str, Any]:
+def marked(words: str | None) -> tuple[str, str | None]:
+    """IN:OUT and peak, dip or None, of IN:OUT, IN:OUT:peak or IN:OUT:dip."""
+    if not words:
+        return "", None
+    pair, _, kind = words.rpartition(":")
+    return (pair, kind) if kind in ("peak", "dip") else (words, None)
+
+
+def feature_text(feature: Feature) -> str:
+    """A line for each figure of a feature."""
+    places = ", ".join(f"{thz:.6f}" for thz in feature.thz[:8]) + (", .." if len(feature.thz) > 8 else "")
+    lines = [
+        f"{feature.kind}s{' ' * (13 - len(feature.kind))}{places} THz",
+        f"free range    {feature.free_spectral_range_ghz:.6f} GHz",
+        f"bandwidth     {feature.bandwidth_ghz:.6f} GHz",
+        f"extinction    {feature.extinction_db:.2f} dB",
+        f"finesse       {feature.finesse:.3f}",
+    ]
+    return "\n".join(f"{line[:14]}not in range" if "nan" in line else line for line in lines)
+
+
+def prediction_entry(mesh: Mesh, plan: Plan, prediction: Prediction, feature: Feature | None = None) -> dict[str, Any]:
     """The JSON object of `predict`."""
     waves = prediction.wavelengths_nm
     return finite(
@@ -138,11 +161,14 @@ def prediction_entry(mesh: Mesh, plan: Plan, prediction: Prediction) -> dict[str
             "power_mw": float(prediction.power_mw.sum()),
             "inputs": list(mesh.net.inputs),
             "outputs": list(mesh.net.outputs),
+            "residual": prediction.residual,
+            "dark_loops": prediction.dark_loops,
+            "feature": None if feature is None else dataclasses.asdict(feature),
         }
     )
 
 
-def prediction_text(mesh: Mesh, plan: Plan, prediction: Prediction) -> str:
+def prediction_text(mesh: Mesh, plan: Plan, prediction: Prediction, feature: Feature | None = None) -> str:
     """Fidelity and throughput; for few ports also the power matrix in dB."""
     waves = prediction.wavelengths_nm
     at = f"{mesh.net.wavelength_nm:g} nm" if waves is None else f"{waves[0]:g} to {waves[-1]:g} nm, {len(waves)} points"
@@ -160,6 +186,11 @@ def prediction_text(mesh: Mesh, plan: Plan, prediction: Prediction) -> str:
             f"{n} {t:.4f}" for n, t in zip(mesh.net.inputs, prediction.throughput_per_input[:64], strict=False)
         )
         lines.append(f"per input     {per}")
+    if prediction.residual is not None:
+        dark = f", {prediction.dark_loops} loops that no light enters" if prediction.dark_loops else ""
+        lines.append(f"residual      {prediction.residual:.1e} of the largest field{dark}")
+    if feature is not None:
+        lines.append(feature_text(feature))
     return "\n".join(lines)
 
 

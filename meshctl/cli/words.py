@@ -121,8 +121,17 @@ def parser() -> argparse.ArgumentParser:
     predict.add_argument("mesh", metavar="MESH")
     predict.add_argument("plan", metavar="PLAN")
     predict.add_argument("--matrix", metavar="FILE.npy", help="write the field matrix")
-    predict.add_argument("--wavelengths", metavar="FROM:TO:COUNT", help="in nm")
-    predict.add_argument("-o", "--out", metavar="FILE.csv", help="write powers and phases")
+    predict.add_argument(
+        "--wavelengths", metavar="FROM:TO:COUNT", help="in nm; FROM:TO:COUNTthz; channels itu:GHZ:FIRST:LAST"
+    )
+    predict.add_argument(
+        "--between", metavar="IN:OUT", action="append", default=[], help="only this port pair; may be repeated"
+    )
+    predict.add_argument("-o", "--out", metavar="FILE.csv", help="write amplitude, power, phase and group delay")
+    predict.add_argument("--figure", metavar="FILE.png", help="draw power and group delay over wavelength")
+    predict.add_argument(
+        "--feature", metavar="IN:OUT[:peak|:dip]", help="free spectral range, bandwidth, extinction, finesse"
+    )
     _stale(predict)
 
     elements = verb(

@@ -216,21 +216,36 @@ class Response:
         runs = [self._run(self._blocks(value, float(w)), flat) for w in wavelengths_nm]
         return np.array(runs).reshape(len(runs), -1, *columns.shape[1:])
 
-    def slope_per_nm(self, settings: np.ndarray, wavelengths_nm: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    def slope_per_nm(
+        self,
+        settings: np.ndarray,
+        wavelengths_nm: np.ndarray,
+        inputs: np.ndarray | None = None,
+        outputs: np.ndarray | None = None,
+    ) -> tuple[np.ndarray, np.ndarray]:
         """Field matrices and their derivative by the wavelength, complex [W, out, in] both.
+
+        Parameters
+        ----------
+        settings : float (S,), rad
+        wavelengths_nm : float (W,)
+        inputs, outputs : positions among the inputs and outputs, None: all
 
         Cost: two to three times `matrix`; without loops one pass through all parts one by one.
         """
         value, waves = self.values(settings), np.asarray(wavelengths_nm, float)
         if self.loops:
-            return self.waves.slope_per_nm(value, waves)
+            return self.waves.slope_per_nm(value, waves, inputs, outputs)
         from meshctl.optics.slope import follow
 
         circuit = self.circuit
         found = np.empty((2, len(waves), len(circuit.output_lane), circuit.n_inputs), complex)
         for w, wave in enumerate(waves.tolist()):
             found[:, w] = follow(circuit, self._table(value, wave), self._table_slope(value, wave))
-        return found[0], found[1]
+        rows = np.arange(found.shape[2]) if outputs is None else outputs
+        columns = np.arange(found.shape[3]) if inputs is None else inputs
+        chosen = found[:, :, rows[:, None], columns]
+        return chosen[0], chosen[1]
 
     def _table_slope(self, value: np.ndarray, wavelength_nm: float) -> np.ndarray:
         """Derivative by the wavelength of the amplitudes [4, E] of all parts."""

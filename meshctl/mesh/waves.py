@@ -262,13 +262,21 @@ class Waves:
         return slope
 
     # ---- light
-    def solved(self, value: np.ndarray, waves: np.ndarray, *, keep: bool = False) -> Scattered:
+    def solved(
+        self,
+        value: np.ndarray,
+        waves: np.ndarray,
+        inputs: np.ndarray | None = None,
+        outputs: np.ndarray | None = None,
+        *,
+        keep: bool = False,
+    ) -> Scattered:
         """Scattering between inputs and outputs for element values [E] at wavelengths [W]."""
         found = scatter(
             self.woven.pattern,
             self.entries(value, waves),
-            self.inputs,
-            self.outputs,
+            self.inputs if inputs is None else self.inputs[inputs],
+            self.outputs if outputs is None else self.outputs[outputs],
             keep=keep,
             reuse=self._kept if keep else None,
         )
@@ -291,12 +299,14 @@ class Waves:
         runs = [self.solved(value, waves[k]).response for k in self._chunks(waves, self.woven.pattern.n_entries)]
         return np.concatenate(runs) if runs else np.empty((0, len(self.outputs), len(self.inputs)), complex)
 
-    def slope_per_nm(self, value: np.ndarray, waves: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    def slope_per_nm(
+        self, value: np.ndarray, waves: np.ndarray, inputs: np.ndarray | None = None, outputs: np.ndarray | None = None
+    ) -> tuple[np.ndarray, np.ndarray]:
         """Field matrices and their derivative by the wavelength, [W, out, in] both."""
         self._fresh()
         matrices, slopes = [], []
         for k in self._chunks(waves, self.woven.pattern.fronts.size):
-            found = self.solved(value, waves[k], keep=True)
+            found = self.solved(value, waves[k], inputs, outputs, keep=True)
             matrices.append(found.response)
             slopes.append(jvp(found, self._entry_slopes(value, waves[k], found.s_values)))
         return np.concatenate(matrices), np.concatenate(slopes)

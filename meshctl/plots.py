@@ -1,0 +1,59 @@
+"""Figures, drawn with matplotlib and written to files.
+
+Public: spectrum_figure.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+
+from meshctl.optics.features import Feature
+from meshctl.plan.spectrum import Spectrum
+from meshctl.units import nm_from_thz
+
+LINES_MOST = 12  # port pairs that one figure can show and still be read
+FLOOR_DB = -80.0
+
+
+def spectrum_figure(
+    spectrum: Spectrum,
+    path: str | Path,
+    title: str,
+    feature: Feature | None = None,
+    pair: tuple[str, str] | None = None,
+) -> None:
+    """Power and group delay over wavelength, one line for each port pair.
+
+    Parameters
+    ----------
+    spectrum : Spectrum of at most LINES_MOST pairs
+    path : .png, .svg or .pdf
+    feature, pair : peaks or dips to mark, and the pair that they belong to
+    """
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    figure = Figure(figsize=(8.0, 6.0), layout="constrained")
+    FigureCanvasAgg(figure)
+    above, below = figure.subplots(2, 1, sharex=True)
+    waves = spectrum.wavelengths_nm
+    with np.errstate(divide="ignore"):
+        power_db = np.maximum(10.0 * np.log10(spectrum.power), FLOOR_DB)
+    marker = "o" if len(waves) < 40 else ""
+    for k, (entry, leaving) in enumerate(spectrum.pairs):
+        above.plot(waves, power_db[:, k], marker=marker, ms=3, label=f"{entry} to {leaving}")
+        below.plot(waves, spectrum.group_delay_ps[:, k], marker=marker, ms=3)
+    if feature is not None and pair is not None:
+        places = nm_from_thz(np.array(feature.thz))
+        level = np.maximum(10.0 * np.log10(np.maximum(feature.power, 1e-300)), FLOOR_DB)
+        above.plot(places, level, "v" if feature.kind == "peak" else "^", color="black", label=f"{feature.kind}s")
+    above.set_ylabel("power (dB)")
+    below.set_ylabel("group delay (ps)")
+    below.set_xlabel("wavelength (nm)")
+    above.set_title(title)
+    above.legend(loc="best", fontsize="small")
+    for axes in (above, below):
+        axes.grid(visible=True, alpha=0.3)
+    figure.savefig(path, dpi=150)
