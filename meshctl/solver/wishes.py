@@ -361,8 +361,10 @@ def _wish(
         made["wavelengths_nm"], made["least_db"], made["most_db"] = _bands(
             text["band"], shape, in_names, out_names, where
         )
+    if "over" in text and len(made.get("wavelengths_nm", ())) < 2:
+        raise WrongUsage("over is given for a single wavelength", where=where, remedy="give wavelengths_nm or bands")
     nearest = _flag(text, "nearest", where)
-    plain = weight is None and not nearest and not {"wavelengths_nm", "dark"} & set(made)
+    plain = weight is None and not nearest and not {"wavelengths_nm", "dark", "power"} & set(made)
     if matrix is not None and plain:
         return make_target(matrix, shape, free, where)
     return make_wish(shape, matrix=matrix, weight=weight, **made)
