@@ -86,7 +86,8 @@ def draw(
     shown = None if lit is None else _Shown.of(mesh.net, lit)
     circuit = circuit_of(mesh.net)
     if circuit is None:
-        body = [f"net with loops, one line for each of {len(sites)} cells", "", *table(mesh, sites, marks)]
+        head = f"net with loops, one line for each of {len(sites)} cells"
+        body = [*textwrap.wrap(head, width), "", *table(mesh, sites, marks, width)]
     elif circuit.n_lanes > MOST_LANES:
         layout = layout_of(mesh.net, sites, marks)
         named = ", cell cK_R in column K, row R" if _told_by_place(mesh.net, sites, layout) else ""

@@ -28,7 +28,7 @@ def summary(layout: Layout, head: str, width: int) -> list[str]:
     return lines
 
 
-def table(mesh: Mesh, sites: Sites, marks: Marks) -> list[str]:
+def table(mesh: Mesh, sites: Sites, marks: Marks, width: int) -> list[str]:
     """A line for each cell of any net: name, state, cross power, and what its ports are joined to."""
     net = mesh.net
     neighbour = _Neighbours(net)
@@ -38,7 +38,11 @@ def table(mesh: Mesh, sites: Sites, marks: Marks) -> list[str]:
         cell, element = int(sites.cell[site]), int(sites.element[site])
         rows.append((neighbour.name(element), glyph, power, "  ".join(neighbour.of(cell, element))))
     name, mark, cross = (max(len(row[k]) for row in rows) for k in range(3))
-    return [f"{a:<{name}}  {b:^{mark}}  {c:>{cross}}  {d}" for a, b, c, d in rows]
+    lines = []
+    for a, b, c, d in rows:
+        start = f"{a:<{name}}  {b:^{mark}}  {c:>{cross}}  "
+        lines += textwrap.wrap(start + d, width, subsequent_indent=" " * len(start), drop_whitespace=False) or [start]
+    return lines
 
 
 class _Neighbours:
