@@ -43,14 +43,15 @@ def goal_of(
 
 
 def _no_such_length(wish: Wish, lengths: np.ndarray) -> str:
-    near = lengths[np.argsort(np.abs(lengths - wish.cells), kind="stable")][:4]
-    listed = ", ".join(str(x) for x in np.sort(near))
+    assert wish.cells is not None
     ends = f"'{wish.source}' and '{wish.sinks[0]}'"
-    if len(lengths) > 1 and len(np.unique(lengths % 2)) == 1 and wish.cells is not None and wish.cells > lengths[0]:
-        even = "an even" if lengths[0] % 2 == 0 else "an odd"
-        return f"every way between {ends} passes {even} number of cells, never {wish.cells}; near it are {listed}"
     if not len(lengths):
         return f"no way between {ends} passes {wish.cells} cells or up to {BEYOND} more"
+    near = lengths[np.argsort(np.abs(lengths - wish.cells), kind="stable")][:4]
+    listed = ", ".join(str(x) for x in np.sort(near))
+    if len(lengths) > 1 and ((lengths - wish.cells) % 2 == 1).all():
+        even = "an even" if lengths[0] % 2 == 0 else "an odd"
+        return f"every way between {ends} passes {even} number of cells, never {wish.cells}; near it are {listed}"
     return f"no way between {ends} passes {wish.cells} cells; near it are {listed}"
 
 

@@ -22,42 +22,48 @@ import numpy as np
 from meshctl.errors import NoClosedForm, WrongUsage
 from meshctl.mesh.response import circuit_of
 from meshctl.optics.elements import CROSSING
-from meshctl.optics.kernels import boolean, filled, float64, given, int32, int64, kernel, uint8, void
+from meshctl.optics.kernels import filled, given, int32, int64, kernel, uint8, void
 from meshctl.solver.waves import RouteGraph
 
-MOST_STEPS = 20_000_000  # cells passed in random tries for one permutation: some tenths of a second
+MOST_TRIES, MOST_STEPS = 20_000, 20_000_000  # tries, and cells passed in them: some hundredths of a second
 
 
 @kernel(
-    boolean(
-        given(int32), given(int32), given(uint8, 2), given(int32), given(float64, 2), int64,
-        float64, float64, filled(int32), filled(int32),
+    int64(
+        given(int32), given(int32), given(uint8, 2), given(int32), int64, int64, filled(int32), filled(int32),
     )
 )  # fmt: skip
-def _sort(upper, lower, allowed, wanted, chance, shift, wait, detour, at, state):  # type: ignore[no-untyped-def]
-    """Cross where the order is wrong; True if all lanes end right.
+def _sort(upper, lower, allowed, wanted, tries, seed, at, state):  # type: ignore[no-untyped-def]
+    """Cross where the order is wrong; returns the number of the try in which all lanes ended right, or -1.
 
-    wait, detour: chance that a wrong pair stays and that a right pair crosses; chance[c] are numbers drawn
-    once, `shift` picks others of them.
+    The first try does just that. In later ones a wrong pair may stay and a right pair may cross, by chance.
     """
-    at[:] = wanted
     n = len(upper)
-    for c in range(n):
-        a, b = upper[c], lower[c]
-        wrong = at[a] > at[b]
-        x, y = chance[(c + shift) % n]
-        cross = wrong and x >= wait or (not wrong) and y < detour
-        if not allowed[c, 1 if cross else 0]:
-            cross = not cross
+    draw = (seed * 7919 + 12345) & 0x7FFFFFFF
+    for k in range(tries):
+        at[:] = wanted
+        wait, detour = 0, 0  # chances in 2^31
+        if k:
+            draw = (draw * 1103515245 + 12345) & 0x7FFFFFFF
+            wait = draw >> 1
+            draw = (draw * 1103515245 + 12345) & 0x7FFFFFFF
+            detour = draw >> 2
+        fits = True
+        for c in range(n):
+            a, b = upper[c], lower[c]
+            draw = (draw * 1103515245 + 12345) & 0x7FFFFFFF
+            cross = draw >= wait if at[a] > at[b] else draw < detour
             if not allowed[c, 1 if cross else 0]:
-                return False
-        state[c] = 1 if cross else 0
-        if cross:
-            at[a], at[b] = at[b], at[a]
-    for lane in range(len(at)):
-        if at[lane] != lane:
-            return False
-    return True
+                cross = not cross
+                fits = fits and allowed[c, 1 if cross else 0]
+            state[c] = 1 if cross else 0
+            if cross:
+                at[a], at[b] = at[b], at[a]
+        for lane in range(len(at)):
+            fits = fits and at[lane] == lane
+        if fits:
+            return k
+    return -1
 
 
 @kernel(
@@ -192,7 +198,7 @@ class Permuter:
         NoClosedForm
             Where cells cannot be set as wanted and no other order of crossings was found.
 
-        Cost: one pass over the cells; random tries up to some tenths of a second.
+        Cost: one pass over the cells; with stuck cells random tries, up to a tenth of a second.
         """
         wanted = np.asarray(order)
         if wanted.shape != (self.n,) or not np.array_equal(np.sort(wanted), np.arange(self.n)):
@@ -210,7 +216,7 @@ class Permuter:
         state, everyone = np.zeros(n_switches, np.int32), np.arange(n_switches)
         choice = np.zeros(mesh.enter.shape[:2], np.int32)
         rng = np.random.default_rng(seed)
-        for _ in range(1 if self._allowed.all() else max(1, MOST_STEPS // (64 * n_switches))):
+        for _ in range(1 if self._allowed.all() else max(1, min(MOST_TRIES // 64, MOST_STEPS // (64 * n_switches)))):
             _loop(
                 mesh.enter, mesh.leave, mesh.inlet, mesh.outlet, mesh.into, mesh.back, wanted.astype(np.int32), choice,
                 state,
@@ -229,19 +235,9 @@ class Permuter:
         n = len(mesh.switch)
         allowed = np.ascontiguousarray(self._allowed[mesh.switch], np.uint8)
         at, state = np.empty(self.n, np.int32), np.empty(n, np.int32)
-        found = _sort(
-            mesh.upper, mesh.lower, allowed, at_entrance, np.zeros((max(n, 1), 2)), 0, 0.0, 0.0, at, state
-        )  # fmt: skip
-        if not found:
-            rng = np.random.default_rng(seed)
-            for k in range(MOST_STEPS // max(n, 1)):
-                if k % n == 0:
-                    chance = rng.random((n, 2))
-                often = rng.random(2) * (0.5, 0.2)
-                found = _sort(mesh.upper, mesh.lower, allowed, at_entrance, chance, k % n, *often, at, state)
-                if found:
-                    break
-        if not found:
+        tries = 1 if allowed.all() else max(1, min(MOST_TRIES, MOST_STEPS // max(n, 1)))
+        found = _sort(mesh.upper, mesh.lower, allowed, at_entrance, tries, seed, at, state)
+        if found < 0:
             raise NoClosedForm(
                 f"no order of crossings was found with {int((~allowed.astype(bool)).any(1).sum())} cells that cannot "
                 "take both states",
@@ -364,7 +360,8 @@ def _halves(
         if (first[0], port) in taken:
             return None
         # everything that is joined to this port without passing the outer switches
-        inside, gates_in, gates_out = set(), {first[0]: port}, {}
+        inside: set[int] = set()
+        gates_in, gates_out = {first[0]: port}, dict[int, int]()
         waiting = [int(ahead[first[0], port]) >> 2]
         while waiting:
             r = waiting.pop()

@@ -15,12 +15,13 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from meshctl.errors import NoClosedForm, WrongUsage
-from meshctl.solver.conflict import Demand, Verdict, decide
+from meshctl.solver.conflict import decide, without_rings
+from meshctl.solver.flows import Demand, Passes
 from meshctl.solver.lengths import Goal, goal_of
 from meshctl.solver.permute import permuter
 from meshctl.solver.search import FAR, Search, Way
 from meshctl.solver.split import Tree, grow, shares_of
-from meshctl.solver.unused import closed_loops
+from meshctl.solver.unused import closed_loops, unused_states
 from meshctl.solver.waves import RouteGraph
 from meshctl.solver.wish import Wish, parse_wish
 
@@ -34,6 +35,7 @@ STATUSES = {
 }
 ROUNDS, RESTARTS = 60, 4
 FIRST_PRICE, PRICE_GROWTH, MEMORY, DEAREST = 0.5, 1.3, 0.4, 1e3
+MOST_OPENING_S = 1.0  # for ways that leave no closed loop, where the first found do
 SPLIT = 2  # third state of a lot: divided for one wave, of use to no other
 
 
@@ -43,7 +45,7 @@ class Route:
 
     wish: Wish
     sink: str
-    passes: tuple[tuple[int, int], ...]  # (node, state) in light order
+    passes: Passes  # (node, state) in light order
     loss_db: float  # of switches and fixed parts; what a split sends elsewhere does not count
     length_um: float  # of guides
     delay_ps: float
@@ -99,11 +101,11 @@ class Task:
 class Taken:
     """Ways of one task, by sink, and what they need."""
 
-    ways: tuple[tuple[tuple[int, int], ...], ...]
+    ways: tuple[Passes, ...]
     needs: dict[int, int]  # lot -> bar, cross or SPLIT
 
 
-def _needs(graph: RouteGraph, ways: Iterable[tuple[tuple[int, int], ...]]) -> dict[int, int]:
+def _needs(graph: RouteGraph, ways: Iterable[Passes]) -> dict[int, int]:
     needs: dict[int, int] = {}
     for way in ways:
         for node, state in way:
@@ -141,7 +143,7 @@ class _Negotiation:
         for restart in range(restarts):
             taken = self._once(rounds, restart)
             if taken is not None:
-                return self._shortened(taken)
+                return self.shortened(taken)
             if time.monotonic() > self.stop:
                 break
         return None
@@ -201,7 +203,7 @@ class _Negotiation:
         out: np.ndarray = np.unique(self.graph.lot[np.flatnonzero(label >= 0) >> 2])
         return out
 
-    def _shortened(self, taken: list[Taken]) -> list[Taken]:
+    def shortened(self, taken: list[Taken]) -> list[Taken]:
         """Each route once more with the others held, while that saves anything."""
         use = np.zeros((max(self.graph.n_lots, 1), 3))
         for t in taken:
@@ -383,9 +385,18 @@ def _find(
         taken, words = _closed_form(graph, tasks, seed), "found in closed form, other lanes as they came"
     if taken is None:
         taken, status, words, conflict = _decided(graph, search, tasks, seed, stop)
+        taken = None if taken is None else negotiation.shortened(taken)
     counts = {"searches": search.searches, "rounds": negotiation.rounds, "cells": len(graph.switches)}
     if taken is None:
         return _answer(graph, wishes, status, words, conflict, counts)
+    if len(_loops(graph, _state_of(graph, taken))):
+        opened, proved = _opened(graph, tasks, stop)
+        if opened is not None:
+            taken, words = opened, "found by satisfiability in layers of length, no loop closed"
+        elif proved:
+            words += "; all routes that are not much longer leave a closed loop beside them"
+        else:
+            words += "; a closed loop beside them is left, and none without was found"
     return _settled(graph, wishes, tasks, taken, words, counts)
 
 
@@ -411,6 +422,36 @@ def _refused_at_once(wishes: Sequence[Wish]) -> tuple[str, str, tuple[Wish, ...]
     return None
 
 
+def _loops(graph: RouteGraph, used: np.ndarray) -> list[list[tuple[int, int]]]:
+    """Loops that no states of the unused cells open, each as (lot, state): those of the routes alone, or others.
+
+    used : int (R,), 0, 1, -1: free or split
+    """
+    state = used
+    loops, label = closed_loops(graph, used)
+    if not loops:
+        complete = unused_states(graph, np.where(used >= 0, used, np.nan).astype(float), policy="cross")
+        if not complete.loops:
+            return []
+        state = np.where(np.isnan(complete.share), -1, complete.share).astype(np.int32)
+        loops, label = closed_loops(graph, state)
+    cells = [np.unique(np.flatnonzero(label == k) >> 2).tolist() for k in range(loops)]
+    return [[(int(graph.lot[r]), int(state[r])) for r in ring] for ring in cells]
+
+
+def _opened(graph: RouteGraph, tasks: Sequence[Task], stop: float) -> tuple[list[Taken] | None, bool]:
+    """The same routes by ways that close no loop; whether there are proved to be none."""
+    if any(len(t.sinks) > 1 or t.goal is not None for t in tasks):
+        return None, False
+
+    def rings(ways: tuple[tuple[Passes, ...], ...]) -> list[list[tuple[int, int]]]:
+        return _loops(graph, _state_of(graph, _taken(graph, ways)))
+
+    demands = [Demand(task.node, task.sinks) for task in tasks]
+    ways, proved = without_rings(graph, demands, rings, min(MOST_OPENING_S, stop - time.monotonic()))
+    return (None if ways is None else _taken(graph, ways)), proved
+
+
 def _closed_form(graph: RouteGraph, tasks: Sequence[Task], seed: int) -> list[Taken] | None:
     """Routes as part of a permutation of all lanes, where the mesh has a closed form for those."""
     if any(len(t.sinks) > 1 or t.goal is not None for t in tasks):
@@ -425,51 +466,44 @@ def _closed_form(graph: RouteGraph, tasks: Sequence[Task], seed: int) -> list[Ta
         state = form.states(order, seed=seed)
     except NoClosedForm:
         return None
-    ways = [_until_out(graph, tuple(graph.trace(state, task.source))) for task in tasks]
-    for task, way in zip(tasks, ways, strict=True):
-        if not way or graph.leaves[way[-1]] != task.sinks[0]:
+    taken = _taken(graph, [(tuple(graph.trace(state, task.source)),) for task in tasks])
+    for task, t in zip(tasks, taken, strict=True):
+        if not t.ways[0] or graph.leaves[t.ways[0][-1]] != task.sinks[0]:
             return None  # past a part that is to be avoided
-    return [Taken((way,), _needs(graph, (way,))) for way in ways]
+    return taken
 
 
 def _decided(
     graph: RouteGraph, search: Search, tasks: list[Task], seed: int, stop: float
 ) -> tuple[list[Taken] | None, str, str, tuple[Wish, ...]]:
     """What the proofs say of tasks that negotiation did not bring together."""
-    demands, owner = [], []
-    for k, task in enumerate(tasks):
-        for sink in task.sinks:
-            exact = None
-            if task.goal is not None and task.goal.in_cells and len(task.goal.lengths) == 1:
-                exact = task.goal.lengths[0]
-            demands.append(Demand(task.node, sink, exact))
-            owner.append(k)
-    pure = len(demands) == len(tasks)
-    if not pure:
-        # each output of a split is a route of its own only where no two share a way: ask about the others
-        demands = [d for d, k in zip(demands, owner, strict=True) if len(tasks[k].sinks) == 1]
-        owner = [k for k in owner if len(tasks[k].sinks) == 1]
-    if not demands:
-        return None, "not_found", "no tree of cells was found for the split", ()
+    timed = any(t.goal is not None and not (t.goal.in_cells and len(t.goal.lengths) == 1) for t in tasks)
+    demands = [
+        Demand(t.node, t.sinks, t.goal.lengths[0] if t.goal is not None and t.goal.in_cells else None) for t in tasks
+    ]
 
     def tried(subset: Sequence[int]) -> bool:
-        chosen = [tasks[owner[d]] for d in subset]
+        chosen = [tasks[d] for d in subset]
         quick = _Negotiation(search, chosen, np.ones(len(chosen)), seed, stop)
         return quick.run(12, 1) is not None
 
-    verdict: Verdict = decide(graph, demands, max(stop - time.monotonic(), 0.0), tried=tried)
-    conflict = tuple(dict.fromkeys(tasks[owner[d]].wish for d in verdict.conflict))
-    timed = any(t.goal is not None and not t.goal.in_cells for t in tasks)
-    if verdict.status == "exists" and verdict.state is not None and pure and not timed:
-        ways = [tuple(graph.trace(verdict.state, task.source)) for task in tasks]
-        ways = [_until_out(graph, way) for way in ways]
-        return [Taken((way,), _needs(graph, (way,))) for way in ways], "found", verdict.words, ()
+    verdict = decide(graph, demands, max(stop - time.monotonic(), 0.0), tried=tried)
+    if verdict.status == "exists" and verdict.ways is not None and not timed:
+        return _taken(graph, verdict.ways), "found", verdict.words, ()
     if verdict.status in ("impossible", "impossible_within"):
-        return None, verdict.status, verdict.words, conflict
+        return None, verdict.status, verdict.words, tuple(tasks[d].wish for d in verdict.conflict)
     return None, "not_found", verdict.words if verdict.status == "unknown" else "none found in the time given", ()
 
 
-def _until_out(graph: RouteGraph, way: tuple[tuple[int, int], ...]) -> tuple[tuple[int, int], ...]:
+def _taken(graph: RouteGraph, ways: Sequence[tuple[Passes, ...]]) -> list[Taken]:
+    out = []
+    for by_sink in ways:
+        cut = tuple(_until_out(graph, way) for way in by_sink)
+        out.append(Taken(cut, _needs(graph, cut)))
+    return out
+
+
+def _until_out(graph: RouteGraph, way: Passes) -> Passes:
     for k, (node, state) in enumerate(way):
         if graph.leaves[node, state] >= 0:
             return way[: k + 1]
@@ -513,12 +547,11 @@ def _settled(
         for name in wish.sinks:
             known = routes.get((wish.source, name))
             everything.append(known or _route(graph, wish, name, graph.source(wish.source), ()))
-    loops, _ = closed_loops(graph, state)
-    counts = {**counts, "cells_used": int((~np.isnan(share)).sum()), "closed_by_routes": loops}
+    counts = {**counts, "cells_used": int((~np.isnan(share)).sum()), "loops_left": len(_loops(graph, state))}
     return Routing(graph, tuple(wishes), "found", words, tuple(everything), share, entering, counts=counts)
 
 
-def _route(graph: RouteGraph, wish: Wish, sink: str, source: int, way: tuple[tuple[int, int], ...]) -> Route:
+def _route(graph: RouteGraph, wish: Wish, sink: str, source: int, way: Passes) -> Route:
     node = np.array([n for n, _ in way], np.int64)
     state = np.array([s for _, s in way], np.int64)
     loss = float(graph.entry_loss_db[source] + graph.loss_db[node, state].sum())

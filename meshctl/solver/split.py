@@ -10,11 +10,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from meshctl.solver.flows import Passes
 from meshctl.solver.search import FAR, Search
 from meshctl.solver.waves import RouteGraph
 from meshctl.units import power_from_loss_db
-
-Passes = tuple[tuple[int, int], ...]
 
 
 @dataclass(frozen=True)

@@ -7,7 +7,7 @@ moves it, its drive: the coupler's angle, or the phase difference of the arms, b
 - couplers k1, k2 and phase difference d: cross power sin^2(k1 + k2) cos^2(d/2) + sin^2(k1 - k2) sin^2(d/2),
   so the extremes stand at d = 0 and pi, again after every 2 pi.
 
-Public: BAR, CROSS, Switches, find_switches, settings_for.
+Public: BAR, CROSS, Switches, find_switches, settings_for, Passing, passing.
 """
 
 from __future__ import annotations
@@ -18,7 +18,7 @@ from functools import cached_property
 import numpy as np
 
 from meshctl.mesh.graph import AsBuilt, Net
-from meshctl.optics.elements import COUPLER, CROSSING, LOSS
+from meshctl.optics.elements import COUPLER, CROSSING, GUIDE, KINDS, LOSS, PHASE
 from meshctl.solver.reach import Reach
 from meshctl.units import TWO_PI, UM_PER_CM, amplitude_from_loss_db
 
@@ -214,17 +214,28 @@ def _value_in_force(net: Net, as_built: AsBuilt) -> np.ndarray:
     return np.where(net.setting_of >= 0, 0.0, net.nominal) + as_built.error_rad
 
 
-def loss_db_of(net: Net, as_built: AsBuilt) -> np.ndarray:
-    """Loss of every element in dB per lane, f64[E]."""
-    own = np.where(net.kind == LOSS, net.nominal, 0.0)
-    out: np.ndarray = as_built.loss_db + own + net.length_um / UM_PER_CM * net.guide_loss_db_per_cm
+@dataclass(frozen=True, eq=False)
+class Passing:
+    """Light through fixed parts, for every port that it enters; P ports."""
+
+    after: np.ndarray  # i32[P], port that it leaves by; -1: it stops or is divided there
+    loss_db: np.ndarray  # f64[P]
+
+
+def element_loss_db(net: Net, as_built: AsBuilt) -> np.ndarray:
+    """Loss of every element but measured ones in dB per lane, f64[E]."""
+    own = np.array([kind.unit == "dB" for kind in KINDS])[net.kind]
+    out: np.ndarray = (
+        as_built.loss_db + np.where(own, net.nominal, 0.0) + net.length_um / UM_PER_CM * net.guide_loss_db_per_cm
+    )
     return out
 
 
-def hop(net: Net) -> np.ndarray:
-    """For every port that light enters: the port it leaves by, straight through two-port parts and crossings.
+def passing(net: Net, as_built: AsBuilt) -> Passing:
+    """How fixed parts pass light on: straight through two ports, crossed in crossings.
 
-    -1 where light stops or is divided: couplers and parts of one port. i32[P]
+    A measured part of four ports passes light as it does with most of it, if what goes astray is little. Light that
+    parts return is lost to routes.
     """
     owner = net.element_of_port
     place = np.arange(len(net.mate)) - net.port_start[owner]
@@ -232,29 +243,52 @@ def hop(net: Net) -> np.ndarray:
     after = np.full(len(net.mate), -1, np.int32)
     two = size == 2
     after[two] = net.port_start[owner[two]] + 1 - place[two]
-    crossing = (net.kind[owner] == CROSSING) & (size == 4)
+    crossing = net.kind[owner] == CROSSING
     after[crossing] = net.port_start[owner[crossing]] + 3 - place[crossing]  # a1 - b2, a2 - b1
-    return after
+    loss = element_loss_db(net, as_built)[owner]
+    for e, part in net.measured.items():
+        power = np.abs(part.at(np.array([net.wavelength_nm]))[0]) ** 2  # [out, in]
+        first, n = int(net.port_start[e]), len(power)
+        into = np.arange(n)
+        to = 1 - into if n == 2 else _most(power)
+        if to is None:
+            continue
+        after[first : first + n] = first + to
+        with np.errstate(divide="ignore"):
+            loss[first : first + n] -= 10.0 * np.log10(power[to, into])
+    return Passing(after, loss)
 
 
-def _arms(net: Net, leaving: np.ndarray, after: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Follow light through two-port parts of the same cell from ports [n].
+def _most(power: np.ndarray) -> np.ndarray | None:
+    """Ports that a part of four ports sends light to from each, or None where it divides light."""
+    into = np.arange(4)
+    for to in (np.array([2, 3, 0, 1]), np.array([3, 2, 1, 0])):
+        astray = power.sum(0) - power[to, into]
+        if (astray <= 10.0 ** (-0.1 * LEAST_EXTINCTION_DB) * power[to, into]).all():
+            return to
+    return None
+
+
+def _arms(net: Net, leaving: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Follow light through phases, guides and losses of the same cell from ports [n].
 
     Returns the port it ends before (-1: free), and the elements passed as pairs (row, element).
     """
-    owner, cell = net.element_of_port, net.cell_of
+    owner, cell, start = net.element_of_port, net.cell_of, net.port_start
     home = cell[owner[leaving]]
+    plain = np.isin(net.kind, (PHASE, GUIDE, LOSS))
     at = net.mate[leaving].astype(np.int64)
     rows, elements = [], []
     for _ in range(net.n_elements):
         e = owner[at]
-        go = (at >= 0) & (after[at] >= 0) & (net.kind[e] != CROSSING) & (cell[e] == home)
+        go = (at >= 0) & plain[e] & (cell[e] == home)
         if not go.any():
             break
         moving = np.flatnonzero(go)
         rows.append(moving)
         elements.append(e[moving])
-        at[moving] = net.mate[after[at[moving]]]
+        passed = e[moving]
+        at[moving] = net.mate[2 * start[passed] + 1 - at[moving]]
     none = np.empty(0, np.int64)
     return at, np.concatenate([none, *rows]), np.concatenate([none, *elements])
 
@@ -276,13 +310,13 @@ def find_switches(net: Net, as_built: AsBuilt, reach: Reach) -> Switches:
 
     Cost: a few passes over ports.
     """
-    owner, after = net.element_of_port, hop(net)
-    value, loss = _value_in_force(net, as_built), loss_db_of(net, as_built)
+    owner = net.element_of_port
+    value, loss = _value_in_force(net, as_built), element_loss_db(net, as_built)
     couplers = np.flatnonzero(net.kind == COUPLER)
     start = net.port_start
     fixed = couplers[net.setting_of[couplers] < 0]
-    upper, up_row, up_element = _arms(net, start[fixed] + 2, after)
-    lower, low_row, low_element = _arms(net, start[fixed] + 3, after)
+    upper, up_row, up_element = _arms(net, start[fixed] + 2)
+    lower, low_row, low_element = _arms(net, start[fixed] + 3)
     other = np.where(upper >= 0, owner[upper], -1)
     joined = (upper >= 0) & (lower == upper + 1) & (upper == start[other])
     joined &= (net.kind[other] == COUPLER) & (net.setting_of[other] < 0) & (net.cell_of[other] == net.cell_of[fixed])

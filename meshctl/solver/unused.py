@@ -76,6 +76,7 @@ class Unused:
     loops: int  # closed loops left anywhere
     beside_routes: int  # of these, loops that pass a cell of a route
     turned: int  # switches that differ from the policy to open loops
+    driven: int  # free switches that would change their state if the drive failed
 
 
 def _all_cross(graph: RouteGraph) -> np.ndarray:
@@ -122,7 +123,7 @@ def unused_states(
     share : float (R,), cross shares that routes need, NaN: free
     policy : a key of POLICIES to start from; "": the best of all
     score : what to judge complete shares [R] by, lower is better, such as the ripple that a simulation finds;
-        None: loops beside routes, then all loops, then switches that differ from their state at rest
+        None: loops beside routes, then all loops, then the order of POLICIES
 
     Returns
     -------
@@ -138,14 +139,11 @@ def unused_states(
     if policy and policy not in POLICIES:
         raise WrongUsage(f"policy is '{policy}'", remedy=f"use one of: {', '.join(POLICIES)}")
     rng = np.random.default_rng(seed)
-    rest = _at_rest(graph)
-    best: tuple[tuple[float, ...], Unused] | None = None
+    best: tuple[tuple[float, float], Unused] | None = None
     for name in [policy] if policy else POLICIES:
         found = _opened(graph, share, POLICIES[name](graph), name, rng)
-        differs = float(np.count_nonzero(found.share != rest))
-        key: tuple[float, ...] = (float(found.beside_routes), float(found.loops), differs)
-        if score is not None:
-            key = (float(found.beside_routes), score(found.share), *key[1:])
+        judged = float(found.loops) if score is None else score(found.share)
+        key = float(found.beside_routes), judged
         if best is None or key < best[0]:
             best = key, found
     assert best is not None
@@ -161,26 +159,42 @@ def _opened(graph: RouteGraph, share: np.ndarray, wanted: np.ndarray, name: str,
     # a switch with one state has that, one with none stays as it is: light runs through it both ways
     state[rows] = np.where(allowed[rows, state[rows]], state[rows], 1 - state[rows])
     stiff = rows[~allowed[rows].any(1)]
-    state[stiff] = _at_rest(graph)[stiff]
+    rest = _at_rest(graph)
+    state[stiff] = rest[stiff]
     _agree(graph, state, ~free)
     start = state.copy()
     turnable = free & allowed.all(1)
-    members: dict[int, np.ndarray] = {}
-    lot = graph.lot
     busy = np.zeros(graph.n_lots, bool)
-    busy[lot[~free]] = True
-    turnable &= ~busy[lot]
+    busy[graph.lot[~free]] = True
+    turnable &= ~busy[graph.lot]
+    loops, label = _open_one_by_one(graph, state, turnable, rng)
+    if loops:
+        loops, label = _open_together(graph, state, turnable, label, rng)
+    final = np.where(free, state, share).astype(float)
+    final[stiff] = np.nan
+    used = ~free
+    beside = np.unique(label.reshape(-1, 4)[used]) if used.any() else np.empty(0)
+    return Unused(
+        final, name, loops, int((beside >= 0).sum()), int((state != start).sum()), int((state != rest)[rows].sum())
+    )
+
+
+def _open_one_by_one(
+    graph: RouteGraph, state: np.ndarray, turnable: np.ndarray, rng: np.random.Generator
+) -> tuple[int, np.ndarray]:
+    """Turn switches in `state` as long as each leaves fewer loops."""
+    lot = graph.lot
     loops, label = closed_loops(graph, state)
     for _ in range(MOST_TURNS):
         if not loops:
             break
-        cells = np.flatnonzero((label.reshape(-1, 4) >= 0).any(1) & turnable)
-        four = label.reshape(-1, 4)[cells]
-        # waves of two different ways meet in these; others would only cut a loop in two
-        cells = cells[(four[:, 0] != four[:, 1]) | (four[:, 2] != four[:, 3])]
+        four = label.reshape(-1, 4)
+        # only where waves of two different ways meet: elsewhere a turn would cut a loop in two
+        apart = (four[:, 0] != four[:, 1]) | (four[:, 2] != four[:, 3])
+        cells = np.flatnonzero((four >= 0).any(1) & apart & turnable)
         rng.shuffle(cells)
         for r in cells.tolist():
-            together = members.setdefault(int(lot[r]), np.flatnonzero(lot == lot[r]))
+            together = lot == lot[r]
             state[together] ^= 1
             fewer, relabelled = closed_loops(graph, state)
             if fewer < loops:
@@ -189,11 +203,26 @@ def _opened(graph: RouteGraph, share: np.ndarray, wanted: np.ndarray, name: str,
             state[together] ^= 1
         else:
             break
-    final = np.where(free, state, share).astype(float)
-    final[stiff] = np.nan
-    used = ~free
-    beside = np.unique(label.reshape(-1, 4)[used]) if used.any() else np.empty(0)
-    return Unused(final, name, loops, int((beside >= 0).sum()), int((state != start).sum()))
+    return loops, label
+
+
+def _open_together(
+    graph: RouteGraph, state: np.ndarray, turnable: np.ndarray, label: np.ndarray, rng: np.random.Generator
+) -> tuple[int, np.ndarray]:
+    """Turn several switches at once: some by chance, then again one by one; the fewest loops are kept."""
+    best = int(label.max()) + 1, state.copy()
+    rows = np.flatnonzero(turnable)
+    for _ in range(MOST_TURNS if len(rows) > 1 else 0):
+        state[:] = best[1]
+        for r in rng.choice(rows, min(len(rows), int(rng.integers(2, 6))), replace=False).tolist():
+            state[graph.lot == graph.lot[r]] ^= 1
+        loops, _ = _open_one_by_one(graph, state, turnable, rng)
+        if loops < best[0]:
+            best = loops, state.copy()
+        if not loops:
+            break
+    state[:] = best[1]
+    return closed_loops(graph, state)
 
 
 def _agree(graph: RouteGraph, state: np.ndarray, used: np.ndarray) -> None:

@@ -18,7 +18,7 @@ from meshctl.errors import WrongUsage
 from meshctl.mesh.graph import AsBuilt, Net
 from meshctl.mesh.tables import unknown_name
 from meshctl.solver.reach import Reach
-from meshctl.solver.switches import BAR, CROSS, LEAST_EXTINCTION_DB, Switches, find_switches, hop, loss_db_of
+from meshctl.solver.switches import LEAST_EXTINCTION_DB, Passing, Switches, find_switches, passing
 from meshctl.units import NM_PER_UM, SPEED_OF_LIGHT_M_PER_S
 
 NOWHERE = -1
@@ -141,14 +141,14 @@ class RouteGraph:
 
 
 def _ways(
-    net: Net, as_built: AsBuilt, leaving: np.ndarray
+    net: Net, through: Passing, leaving: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, list[np.ndarray]]:
     """Follow fixed parts from ports that light leaves by, all at once.
 
     Returns the last port: one that a divider or an end is entered by, or a free port with its sign turned
     (-2 - port); loss in dB; length in um; and pairs (start, element) of the parts passed.
     """
-    after, owner, loss = hop(net), net.element_of_port, loss_db_of(net, as_built)
+    after, owner = through.after, net.element_of_port
     at = leaving.astype(np.int64)
     stop = np.full(len(at), NOWHERE, np.int64)
     total, length = np.zeros(len(at)), np.zeros(len(at))
@@ -165,7 +165,7 @@ def _ways(
         if not len(moving):
             break
         e = owner[port]
-        total[moving] += loss[e]
+        total[moving] += through.loss_db[port]
         length[moving] += net.length_um[e]
         starts.append(moving)
         elements.append(e.astype(np.int64))
@@ -191,7 +191,7 @@ def route_graph(
 
     Cost: a few passes over ports.
     """
-    switches = find_switches(net, as_built, reach)
+    switches, through = find_switches(net, as_built, reach), passing(net, as_built)
     n_nodes, n_ports = 4 * len(switches), len(net.mate)
     node_of_port = np.full(n_ports, NOWHERE, np.int32)
     node_of_port[switches.ports.ravel()] = np.arange(n_nodes)
@@ -202,8 +202,8 @@ def route_graph(
 
     left_by = switches.ports[:, OTHER_END].reshape(-1)
     # light entering at an external port has, as it were, left a port whose mate that is
-    first, loss0, length0, passed0 = _entered(net, as_built, port_of_end)
-    stop, loss, length, passed = _ways(net, as_built, left_by)
+    first, loss0, length0, passed0 = _entered(net, through, port_of_end)
+    stop, loss, length, passed = _ways(net, through, left_by)
     onward, leaves = _landing(stop, node_of_port, end_of_port)
     entry, entry_leaves = _landing(first, node_of_port, end_of_port)
     loss = loss.reshape(-1, 2) + switches.state_loss_db.reshape(-1, 2)
@@ -234,18 +234,14 @@ def _landing(stop: np.ndarray, node_of_port: np.ndarray, end_of_port: np.ndarray
 
 
 def _entered(
-    net: Net, as_built: AsBuilt, ports: np.ndarray
+    net: Net, through: Passing, ports: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, list[np.ndarray]]:
     """`_ways` for light that enters free ports."""
-    after, owner, loss = hop(net), net.element_of_port, loss_db_of(net, as_built)
-    leaving = after[ports]
-    through = np.flatnonzero(leaving >= 0)
+    owner, leaving = net.element_of_port, through.after[ports]
+    rows = np.flatnonzero(leaving >= 0)
     stop = ports.astype(np.int64)
     total, length = np.zeros(len(ports)), np.zeros(len(ports))
-    e = owner[ports[through]].astype(np.int64)
-    ended, more, longer, passed = _ways(net, as_built, leaving[through])
-    stop[through], total[through], length[through] = ended, loss[e] + more, net.length_um[e] + longer
-    return stop, total, length, [np.r_[through, through[passed[0]]], np.r_[e, passed[1]]]
-
-
-__all__ = ["BAR", "CROSS", "NOWHERE", "RouteGraph", "route_graph"]
+    e = owner[ports[rows]].astype(np.int64)
+    ended, more, longer, passed = _ways(net, through, leaving[rows])
+    stop[rows], total[rows], length[rows] = ended, through.loss_db[ports[rows]] + more, net.length_um[e] + longer
+    return stop, total, length, [np.r_[rows, rows[passed[0]]], np.r_[e, passed[1]]]

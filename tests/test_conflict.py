@@ -1,0 +1,124 @@
+"""Proofs that routes do not exist, and routes that the heuristic alone would miss, against an integer programme."""
+
+import time
+
+import numpy as np
+import pytest
+from plane_nets import as_drawn, least_total_cells, plane_net, wide_reach
+
+from meshctl.mesh.plane import hexagonal
+from meshctl.solver import conflict
+from meshctl.solver.conflict import decide
+from meshctl.solver.flows import Demand
+from meshctl.solver.route import find_routes
+from meshctl.solver.waves import route_graph
+
+pytest.importorskip("pysat", reason="the extra [exact] is not installed")
+
+
+def graph_of(lattice):
+    net = plane_net(lattice)
+    return route_graph(net, as_drawn(net), wide_reach(net))
+
+
+LATTICE = hexagonal(2)
+GRAPH = graph_of(LATTICE)
+
+
+def random_wishes(rim, count, seed):
+    ends = np.random.default_rng(seed).choice(rim, 2 * count, replace=False) + 1
+    return [f"p{a}:p{b}" for a, b in zip(ends[:count], ends[count:], strict=True)]
+
+
+def without_exact(monkeypatch):
+    monkeypatch.setattr(conflict, "has_exact", lambda: False)
+
+
+def agreement(seeds, **words):
+    verdicts = []
+    for seed in seeds:
+        wishes = random_wishes(36, 2 + seed % 4, seed)
+        routing = find_routes(GRAPH, wishes, **words)
+        exists = least_total_cells(LATTICE, wishes) is not None  # an independent integer programme
+        assert routing.status == ("found" if exists else "impossible"), wishes
+        verdicts.append(exists)
+    return verdicts
+
+
+def test_verdicts_agree_with_integer_programme():
+    assert set(agreement(range(12))) == {True, False}
+
+
+@pytest.mark.slow
+def test_sixty_verdicts_agree_with_integer_programme():
+    assert set(agreement(range(60))) == {True, False}
+
+
+def test_verdicts_agree_without_the_extra(monkeypatch):
+    without_exact(monkeypatch)
+    assert set(agreement(range(8))) == {True, False}
+
+
+@pytest.mark.parametrize("extra", [True, False], ids=["satisfiability", "flows"])
+def test_conflict_has_no_superfluous_route(extra, monkeypatch):
+    if not extra:
+        without_exact(monkeypatch)
+    refused = 0
+    for seed in range(6):
+        routing = find_routes(GRAPH, random_wishes(36, 5, seed))
+        if routing.status != "impossible":
+            continue
+        refused += 1
+        named = [str(w) for w in routing.conflict]
+        assert least_total_cells(LATTICE, named) is None
+        for k in range(len(named)):
+            fewer = named[:k] + named[k + 1 :]
+            assert not fewer or least_total_cells(LATTICE, fewer) is not None
+    assert refused >= 3
+
+
+def demands_of(wishes):
+    ends = [w.split(":") for w in wishes]
+    return [Demand(int(GRAPH.entry[GRAPH.end_row[a]]), (GRAPH.end_row[b],)) for a, b in ends]
+
+
+@pytest.mark.parametrize("extra", [True, False], ids=["satisfiability", "flows"])
+def test_proof_finds_routes_that_exist(extra, monkeypatch):
+    if not extra:
+        without_exact(monkeypatch)
+    wishes = next(w for w in (random_wishes(36, 3, s) for s in range(50)) if least_total_cells(LATTICE, w) is not None)
+    verdict = decide(GRAPH, demands_of(wishes), 20.0)
+    assert verdict.status == "exists"
+    state = np.full(len(GRAPH.switches), -1)
+    for wish, (way,) in zip(wishes, verdict.ways, strict=True):
+        for node, s in way:
+            assert state[node >> 2] in (-1, s)  # one state for each cell
+            state[node >> 2] = s
+        source, sink = wish.split(":")
+        assert way[0][0] == GRAPH.entry[GRAPH.end_row[source]]
+        assert GRAPH.ends[GRAPH.leaves[way[-1]]] == sink
+
+
+def test_no_time_gives_no_verdict():
+    wishes = next(w for w in (random_wishes(36, 5, s) for s in range(50)) if least_total_cells(LATTICE, w) is None)
+    assert decide(GRAPH, demands_of(wishes), 0.0).status == "unknown"
+    assert find_routes(GRAPH, wishes, seconds=1e-9).status == "not_found"
+
+
+def test_words_say_how_it_was_proved():
+    routing = next(r for r in (find_routes(GRAPH, random_wishes(36, 5, s)) for s in range(20)) if not r.found)
+    assert routing.words.startswith("proved by")
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("rings", "limit_s"), [(6, 4.0), (11, 15.0)])  # twice what is aimed at: shared machines
+def test_verdict_comes_within_seconds(rings, limit_s):
+    lattice = hexagonal(rings)
+    graph = graph_of(lattice)
+    for count in (5, 20):
+        for seed in range(4):
+            wishes = random_wishes(len(lattice.rim), count, 1000 * count + seed)
+            start = time.perf_counter()
+            routing = find_routes(graph, wishes, seconds=limit_s)
+            assert time.perf_counter() - start < limit_s
+            assert routing.found or (routing.status == "impossible" and 1 <= len(routing.conflict) <= 3)
