@@ -132,6 +132,7 @@ TABLES = [
     ("elements", [["element"], ["c1_1.split1"], ["c1_1.split1"]], ["line 3", "stands twice", "keep one row"]),
     ("elements", [["element", "stuck_rad"], ["c1_1.split1", 1]], ["line 2", "which nothing moves", "error_rad"]),
     ("elements", [["element", "loss_db"], ["c1_1.split1", 1, 2]], ["line 2", "3 fields where the head has 2"]),
+    ("elements", [["element", "loss_db"], ["c1_1.split1", "1\n" * 99]], ["elements.csv line", "'1 1 1", "no number"]),
     ("elements", [["loss_db"], [1]], ["line 1", "column 'element' is missing"]),
     ("elements", [], ["elements.csv", "is empty", "element"]),
     ("actuators", [["actuator"], ["c1_1.split1"]], ["line 2", "'c1_1.split1' has no setting to move"]),
@@ -186,6 +187,7 @@ TARGETS = [
     ("t.csv", "", ["t.csv", "empty", "one row per output"]),
     ("t.csv", "1,0\n0,x\n", ["t.csv", "row 2 column 2 is 'x'", "0.5-0.2j"]),
     ("t.csv", "1,0\n0\n", ["t.csv", "row 2 has 1 cells where row 1 has 2"]),
+    ("t.csv", '1,0\n0,"1\n1\n1\n', ["t.csv", "not readable as CSV", "mend"]),
     ("t.csv", b"\xff\xfe1", ["t.csv", "UTF-8"]),
     ("t.csv", "1" * 200_000, ["t.csv", "not readable as CSV", "mend"]),
 ]

@@ -50,7 +50,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         sys.stdout.flush()
         return code
     except Finding as finding:
-        print(f"meshctl {chosen.command}: {finding}", file=sys.stderr)
+        line = " ".join(str(finding).split())  # one line, whatever a file held
+        print(f"meshctl {chosen.command}: {line}", file=sys.stderr)
         return finding.exit_code
     except KeyboardInterrupt:
         print(f"meshctl {chosen.command}: interrupted", file=sys.stderr)

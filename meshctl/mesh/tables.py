@@ -1,7 +1,7 @@
 """The CSV tables of a mesh folder: read into columns with every field checked, and written back.
 
 An empty field means the default. Every message names file, line, column, value and what is allowed.
-Public: Column, Table, read_table, table_text.
+Public: Table, read_table, table_text, unknown_name, brief.
 """
 
 from __future__ import annotations
@@ -25,12 +25,18 @@ def _close_to(word: str, known: Iterable[str]) -> str:
     return f"; did you mean '{near[0]}'?" if near else ""
 
 
+def brief(text: str) -> str:
+    """A user's own words for a message: one line, and not a whole table where a quote was never closed."""
+    words = " ".join(text.split())
+    return words if len(words) <= 60 else f"{words[:57]}.."
+
+
 def unknown_name(kind: str, word: str, known: Iterable[str], where: str) -> UnknownKey:
     """The error for a name that nothing carries, with the nearest one that exists."""
     known = list(known)
     few = ", ".join(known[:8]) + (", .." if len(known) > 8 else "")
     return UnknownKey(
-        f"{kind} '{word}' is not known{_close_to(word, known)}",
+        f"{kind} '{brief(word)}' is not known{_close_to(word, known)}",
         where=where,
         remedy=f"use one of: {few}" if known else "remove it",
     )
@@ -59,7 +65,7 @@ def _number(text: str, quantity: Quantity, where: str) -> float:
         value = float(text)
     except ValueError:
         raise UnsoundFile(
-            f"{quantity.name} is '{text}', which is no number",
+            f"{quantity.name} is '{brief(text)}', which is no number",
             where=where,
             remedy=f"write {quantity.allowed}, or leave the field empty for the default",
         ) from None
@@ -113,7 +119,7 @@ def _parsed(
     required: Sequence[str],
     allowed: Sequence[str],
 ) -> Table:
-    reader = csv.reader(io.StringIO(text))
+    reader = csv.reader(io.StringIO(text), strict=True)
     head = [h.strip() for h in next(reader, [])]
     if not head:
         raise MissingRow("the file is empty", where=name, remedy=f"give it the head {','.join(required)},..")

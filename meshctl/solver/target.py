@@ -17,7 +17,7 @@ from zipfile import BadZipFile
 import numpy as np
 
 from meshctl.errors import MissingFile, NotFinite, NotUnitary, UnsoundFile, WrongSize, WrongUsage
-from meshctl.mesh.tables import unknown_name
+from meshctl.mesh.tables import brief, unknown_name
 from meshctl.optics.measures import FREE_PHASES, unitarity_defect
 
 UNITARY_WITHIN = 1e-9
@@ -151,7 +151,7 @@ def _from_csv(path: Path) -> np.ndarray:
     rows: list[list[complex]] = []
     with path.open(newline="", encoding="utf-8-sig") as lines:
         try:
-            for row in (r for r in csv.reader(lines) if any(field.strip() for field in r)):
+            for row in (r for r in csv.reader(lines, strict=True) if any(field.strip() for field in r)):
                 line = len(rows) + 1
                 values = []
                 for column, field in enumerate(row, 1):
@@ -160,7 +160,7 @@ def _from_csv(path: Path) -> np.ndarray:
                         values.append(complex(text))
                     except ValueError:
                         raise UnsoundFile(
-                            f"row {line} column {column} is '{field.strip()}'",
+                            f"row {line} column {column} is '{brief(field)}'",
                             where=str(path),
                             remedy="write cells like 0.5-0.2j",
                         ) from None
