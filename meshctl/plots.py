@@ -9,8 +9,10 @@ from pathlib import Path
 
 import numpy as np
 
+from meshctl.errors import WrongUsage
 from meshctl.optics.features import Feature
 from meshctl.plan.spectrum import Spectrum
+from meshctl.session import require_suffix
 from meshctl.units import nm_from_thz
 
 LINES_MOST = 12  # port pairs that one figure can show and still be read
@@ -31,7 +33,18 @@ def spectrum_figure(
     spectrum : Spectrum of at most LINES_MOST pairs
     path : .png, .svg or .pdf
     feature, pair : peaks or dips to mark, and the pair that they belong to
+
+    Raises
+    ------
+    WrongUsage
+        For another kind of file, or more pairs than can be read.
     """
+    require_suffix(path, ".png", ".svg", ".pdf")
+    if len(spectrum.pairs) > LINES_MOST:
+        raise WrongUsage(
+            f"a figure of {len(spectrum.pairs)} port pairs cannot be read; {LINES_MOST} at most",
+            remedy="choose pairs with --between IN:OUT",
+        )
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 

@@ -167,24 +167,6 @@ class Session:
             writer.writerows((wave, thz, *row) for row in rows)
         write_whole(Path(path), out.getvalue())
 
-    def write_figure(
-        self,
-        spectrum: Spectrum,
-        path: str | Path,
-        feature: Feature | None = None,
-        pair: tuple[str, str] | None = None,
-    ) -> None:
-        """Draw a spectrum into a file."""
-        from meshctl.plots import LINES_MOST, spectrum_figure
-
-        require_suffix(path, ".png", ".svg", ".pdf")
-        if len(spectrum.pairs) > LINES_MOST:
-            raise WrongUsage(
-                f"a figure of {len(spectrum.pairs)} port pairs cannot be read; {LINES_MOST} at most",
-                remedy="choose pairs with --between IN:OUT",
-            )
-        spectrum_figure(spectrum, path, self.mesh.name, feature, pair)
-
     def write_matrix(self, prediction: Prediction, path: str | Path) -> None:
         """Write the field matrix as a numpy file, [out, in] or [wavelength, out, in]."""
         require_suffix(path, ".npy")

@@ -123,7 +123,9 @@ def predict(words: Namespace) -> int:
         feature = session.feature(wavelengths, pair, kind)
     if words.figure:
         drawn = pairs or ([pair] if pair else None)
-        session.write_figure(session.spectrum(wavelengths, drawn), words.figure, feature, pair)
+        from meshctl.plots import spectrum_figure
+
+        spectrum_figure(session.spectrum(wavelengths, drawn), words.figure, session.mesh.name, feature, pair)
     _remark(session.remarks)
     if words.json:
         return _json(printing.prediction_entry(session.mesh, plan, prediction, feature))
