@@ -263,14 +263,15 @@ def test_physics_in_toml_changes_the_hash(tmp_path, old, new):
         {"elements": [["element", "error_rad"], ["c1_1.coupler", 1e-12]]},
         {"elements": [["element", "loss_db"], ["c1_1.coupler", 0.0]]},
         {"elements": [["element", "stuck_rad"], ["c1_1.coupler", 0.0]]},
-        {"actuators": [["actuator", "dead"], ["out1.phase", 1]]},
-        {"actuators": [["actuator", "offset_rad"], ["out1.phase", 0.1]]},
+        {"actuators": [["actuator", "dead"], ["c1_1.phase", 1]]},
+        {"actuators": [["actuator", "offset_rad"], ["c1_1.phase", 0.1]]},
         {"channels": [["channel", "bits"], ["c1_1.phase", 15]]},
         {"crosstalk": [["from", "to", "coefficient"], ["c1_1.phase", "out1.phase", 1e-3]]},
         {"actuators": [["actuator", "channel"], ["c1_1.phase", "k"], ["out1.phase", "k"]]},
     ],
 )
 def test_physics_in_tables_changes_the_hash(tmp_path, tables):
+    # rows are given for the first setting, so that no order of actuators or channels changes with them
     assert hash_with(tmp_path, **tables) != hash_with(tmp_path)
 
 
