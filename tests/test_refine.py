@@ -11,6 +11,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from scipy.optimize import lsq_linear
+from scipy.signal import butter, freqs
 from scipy.stats import unitary_group
 
 from meshctl.errors import NotFinite, OutOfReach, WrongSize, WrongUsage
@@ -19,7 +20,7 @@ from meshctl.mesh.response import Response
 from meshctl.optics.elements import COUPLER
 from meshctl.optics.measures import matrix_error
 from meshctl.solver.closed import closed_form
-from meshctl.solver.objective import DarkOutputs, MatrixError, PowerError, state_preparation
+from meshctl.solver.objective import DarkOutputs, Mask, MatrixError, OwnWish, PowerError, state_preparation
 from meshctl.solver.quasinewton import descend
 from meshctl.solver.reach import full_reach
 from meshctl.solver.refine import refine
@@ -276,6 +277,71 @@ def test_outputs_are_darkened_for_lit_inputs():
     found = refine(net, as_built, objective, full_reach(net.setting_is_angle), start)
     leaked = np.abs(Response(net, as_built).matrix(found.settings)[np.ix_([1, 4], [0, 2, 3])]) ** 2
     assert leaked.max() <= 1e-8  # -80 dB: where two cells close one way together the last digits come slowly
+
+
+def loops():
+    """The hexagonal lattice of two rings: its response, wavelengths over a part of its spectrum, and reach."""
+    mesh = lattice("hexagonal", rings=2, cell="gap")
+    return Response(mesh.net, mesh.as_built), full_reach(mesh.net.setting_is_angle)
+
+
+@pytest.mark.parametrize("order", [1, 2])
+def test_butterworth_masks_are_met_by_rings(order):
+    response, reach = loops()
+    net, waves = response.net, np.linspace(1549.88, 1550.12, 17)
+    wanted_db = 20 * np.log10(np.abs(freqs(*butter(order, 0.03, analog=True), worN=np.abs(waves - 1550.0))[1]))
+    least, most = np.full((2, len(waves), len(net.outputs), len(net.inputs)), np.nan)
+    passed, stopped = wanted_db >= -3.1, wanted_db <= -10.0
+    least[passed, 11, 0], most[stopped, 11, 0] = wanted_db[passed] - 1.0, wanted_db[stopped] + 3.0
+    start = np.random.default_rng(11).uniform(0, np.pi, net.n_settings)
+    found = refine(net, response.as_built, Mask(least, most, waves), reach, start, starts=4)
+    got_db = 10 * np.log10(np.abs(response.matrix(found.settings, waves)[:, 11, 0]) ** 2)
+    assert (got_db[passed] >= wanted_db[passed] - 1.0 - 1e-6).all()
+    assert (got_db[stopped] <= wanted_db[stopped] + 3.0 + 1e-6).all()
+    assert np.count_nonzero(passed) >= 5
+    assert np.count_nonzero(stopped) >= 4
+
+
+@pytest.mark.slow
+def test_masks_of_hidden_settings_are_met():
+    response, reach = loops()
+    net, waves, met = response.net, np.linspace(1549.6, 1550.4, 33), 0
+    for seed in range(10):
+        rng, contrast = np.random.default_rng(seed), 0.0
+        # of 100 draws the one with the deepest dip: most random settings have hardly any spectrum
+        for _ in range(100):
+            drawn = rng.uniform(reach.low, reach.high)
+            power_db = 10 * np.log10(np.abs(response.matrix(drawn, waves)) ** 2 + 1e-15)
+            depth = np.where(power_db.max(0) > -6.0, np.ptp(power_db, axis=0), 0.0)[:, 0]
+            if depth.max() > contrast:
+                contrast, hidden_db, deepest = depth.max(), power_db, np.argsort(-depth)[:3]
+        least, most = np.full((2, *hidden_db.shape), np.nan)
+        for out in deepest:
+            own = hidden_db[:, out, 0]
+            passed, stopped = own >= own.max() - 3.0, own <= own.max() - 10.0
+            least[passed, out, 0], most[stopped, out, 0] = own[passed] - 1.0, own[stopped] + 3.0
+        mask, start = Mask(least, most, waves), rng.uniform(0, np.pi, net.n_settings)
+        found = refine(net, response.as_built, mask, reach, start, starts=6, seed=seed)
+        met += np.abs(mask.excess_db(response.matrix(found.settings, waves))).max() <= 1e-6
+        assert contrast > 10.0
+    assert met >= 9
+
+
+@pytest.mark.slow
+def test_own_wishes_go_through_jax():
+    import jax.numpy as jnp
+
+    net, as_built = die(4, 0.05, 0)
+    matrix, reach = haar(4, "3"), full_reach(net.setting_is_angle)
+    own = OwnWish(lambda m: 1.0 - jnp.abs(jnp.vdot(matrix, m)) ** 2 / (4.0 * jnp.sum(jnp.abs(m) ** 2)))
+    start = np.random.default_rng(0).uniform(0, TURN, net.n_settings)
+    field = Response(net, as_built).matrix(start)[None]
+    by_hand, by_jax = MatrixError(matrix).evaluate(field), own.evaluate(field)
+    assert by_jax[0] == pytest.approx(by_hand[0], abs=1e-14)
+    np.testing.assert_allclose(by_jax[1], by_hand[1], atol=1e-14)
+    found = refine(net, as_built, own, reach, start, starts=3)
+    # 1 - F as jax computes it has no digits below 1e-16, so E none below 1e-8
+    assert matrix_error(Response(net, as_built).matrix(found.settings), matrix) <= 1e-6
 
 
 @pytest.mark.parametrize("seed", ["0", "1", "11"])

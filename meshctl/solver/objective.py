@@ -2,16 +2,17 @@
 
 All take matrices [wavelength, out, in] and give the value and its cotangent G of that shape, with
 d value = Re sum conj(G) dM. Demands without a wavelength axis hold at every wavelength.
-Public: Objective, MatrixError, PowerError, DarkOutputs, Mask, Combined, state_preparation, objective_of,
+Public: Objective, MatrixError, PowerError, DarkOutputs, Mask, Combined, OwnWish, state_preparation, objective_of,
 smooth_worst.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Protocol
+from functools import cached_property
+from typing import Any, Protocol
 
 import numpy as np
 
@@ -336,6 +337,47 @@ class Combined:
         """Of the first part that wants a matrix."""
         errors = [part.matrix_error(matrix) for _, part in self.parts]
         return next((e for e in errors if not math.isnan(e)), math.nan)
+
+
+@dataclass(frozen=True, eq=False)
+class OwnWish:
+    """A wish of the user's own making: any real function of the matrix, written with jax.numpy.
+
+    Parameters
+    ----------
+    function : takes a complex jax array (W, out, in), returns a real number that is to be small
+    wavelengths_nm : float (W,), or None
+
+    jax is loaded at the first evaluation and follows the function alone; the light goes through the kernels.
+
+    Example
+    -------
+    >>> import jax.numpy as jnp
+    >>> level = OwnWish(lambda m: jnp.var(jnp.abs(m) ** 2))
+    >>> level.evaluate(np.ones((1, 2, 2), complex))[0]
+    0.0
+    """
+
+    function: Callable[[Any], Any]
+    wavelengths_nm: np.ndarray | None = None
+
+    @cached_property
+    def _value_and_grad(self) -> Callable[[Any], Any]:
+        import jax
+
+        compiled: Callable[[Any], Any] = jax.jit(jax.value_and_grad(self.function))
+        return compiled
+
+    def evaluate(self, matrix: np.ndarray) -> tuple[float, np.ndarray]:
+        import jax
+
+        with jax.enable_x64(True):
+            value, gradient = self._value_and_grad(matrix)
+            # jax gives d/dx - i d/dy of a real function
+            return float(value), np.conj(np.asarray(gradient))
+
+    def matrix_error(self, matrix: np.ndarray) -> float:  # noqa: ARG002
+        return math.nan
 
 
 def state_preparation(
