@@ -48,7 +48,10 @@ def light_order(net: Net, as_built: AsBuilt, wanted: np.ndarray, actual: np.ndar
     """
     circuit = circuit_of(net)
     if circuit is None:
-        raise LoopInNet("the net has a loop, and so no light order", remedy="use predict --matrix for its matrix")
+        raise LoopInNet(
+            "the net has a loop, a link against the light or a part that reflects, and so no light order",
+            remedy="use predict --matrix for its matrix",
+        )
     names, order = net.names.elements, 0
     settings = as_built.in_force(actual)
     guide_loss = net.length_um / UM_PER_CM * net.guide_loss_db_per_cm

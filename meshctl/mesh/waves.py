@@ -137,7 +137,7 @@ def _entries(net: Net, e: int) -> Iterator[tuple[int, int, int, complex]]:
         n = len(parts.KINDS[kind].ports)
         yield from ((o, i, 0, 0j) for o in range(n) for i in range(n))
     elif kind == parts.TERMINATOR:
-        yield 0, 0, 0, net.reflections[e]
+        yield 0, 0, 0, net.reflections.get(e, 0j)
     elif kind in FOLDED:
         yield from ((1, 0, 0, 1.0 + 0j), (0, 1, 0, 1.0 + 0j))
     else:
