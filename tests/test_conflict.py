@@ -45,13 +45,9 @@ def agreement(seeds, **words):
     return verdicts
 
 
-def test_verdicts_agree_with_integer_programme():
-    assert set(agreement(range(12))) == {True, False}
-
-
-@pytest.mark.slow
 def test_sixty_verdicts_agree_with_integer_programme():
-    assert set(agreement(range(60))) == {True, False}
+    verdicts = agreement(range(60))
+    assert 10 <= sum(verdicts) <= 50  # both answers are well represented
 
 
 def test_verdicts_agree_without_the_extra(monkeypatch):

@@ -1,6 +1,7 @@
 """Routes found on meshes with and without loops, each checked by solving all waves of the chip."""
 
 from dataclasses import replace
+from itertools import permutations, product
 
 import networkx as nx
 import numpy as np
@@ -9,8 +10,10 @@ from plane_nets import Light, as_drawn, least_total_cells, plane_net, reached_by
 
 from meshctl.errors import WrongUsage
 from meshctl.mesh.meshfile import lattice as named_lattice
+from meshctl.mesh.meshfile import load
 from meshctl.mesh.plane import hexagonal, square, trigrid
 from meshctl.mesh.response import Response
+from meshctl.solver import conflict
 from meshctl.solver.reach import Reach, full_reach
 from meshctl.solver.route import STATUSES, find_routes
 from meshctl.solver.switches import settings_for
@@ -282,8 +285,6 @@ def test_routes_on_mesh_without_loops(cell):
 
 
 def test_bare_guide_is_route_without_cells(chip):
-    from meshctl.mesh.meshfile import load
-
     folder = chip(
         """
 format = 1
@@ -354,3 +355,105 @@ def test_wishes_are_written_as_read(text):
 def test_statuses_are_a_closed_list():
     asked = [["p1:p15"], ["p1:p7", "p2:p7"]]
     assert {find_routes(CURLEW.graph, wishes).status for wishes in asked} <= set(STATUSES)
+
+
+@pytest.mark.parametrize("extra", [True, False], ids=["satisfiability", "flows"])
+def test_switch_agrees_with_light_of_all_states(extra, monkeypatch):
+    if not extra:
+        monkeypatch.setattr(conflict, "has_exact", lambda: False)
+    mesh = named_lattice("switch", cell="gap")
+    reach = full_reach(mesh.net.setting_is_angle)
+    graph = route_graph(mesh.net, mesh.as_built, reach)
+    response = Response(mesh.net, mesh.as_built)
+    maps = set()
+    for states in product((0.0, np.pi / 2), repeat=4):  # 16 settings, some of which do the same
+        power = np.abs(response.matrix(np.array(states))) ** 2
+        maps.add(tuple(power.argmax(axis=0).tolist()))
+    for order in permutations(range(4)):
+        wishes = [f"{mesh.net.inputs[k]}:{mesh.net.outputs[o]}" for k, o in enumerate(order)]
+        assert find_routes(graph, wishes).status == ("found" if order in maps else "impossible")
+
+
+TIED = """
+format = 1
+name = "tied"
+wavelength_nm = 1550.0
+inputs = ["in1", "in2", "in3"]
+outputs = ["out1", "out2", "out3"]
+elements = [["x", "coupler"], ["y", "coupler"]]
+tunable = ["x y"]
+links = ["in1 x.a1", "in2 x.a2", "x.b1 out1", "x.b2 y.a1", "in3 y.a2", "y.b1 out2", "y.b2 out3"]
+[actuator.coupler]
+law = "gap"
+gap_nm = 200.0
+stiffness_n_per_m = 2.0
+area_um2 = 20.0
+decay_nm = 50.0
+rest_rad = 3.05
+[channel]
+bits = 14
+max_v = 8.0
+"""
+
+
+@pytest.mark.parametrize("extra", [True, False], ids=["satisfiability", "flows"])
+def test_tied_couplers_take_one_state(chip, extra, monkeypatch):
+    if not extra:
+        monkeypatch.setattr(conflict, "has_exact", lambda: False)
+    mesh = load(chip(TIED))
+    reach = full_reach(mesh.net.setting_is_angle)
+    graph = route_graph(mesh.net, mesh.as_built, reach)
+    assert find_routes(graph, ["in1:out1", "in3:out3"]).status == "found"  # both bar
+    both = find_routes(graph, ["in1:out1", "in3:out2"])  # bar and cross
+    assert both.status == "impossible"
+    assert [str(w) for w in both.conflict] == ["in1:out1", "in3:out2"]
+    routing = find_routes(graph, ["in1:out3", "in2:out1"])  # both cross
+    power = np.abs(
+        Response(mesh.net, mesh.as_built).matrix(settings_for(graph.switches, routing.share, idle=reach.idle))
+    )
+    assert power[[2, 0], [0, 1]] == pytest.approx(1.0, abs=LOSSLESS)
+
+
+PASSED = """
+format = 1
+name = "passed"
+wavelength_nm = 1550.0
+inputs = ["in1", "in2"]
+outputs = ["out1", "out2"]
+monitors = ["pd1"]
+elements = [
+    ["x", "coupler"], ["tap", "coupler", {cross_power = 0.05}], ["w", "crossing"],
+    ["hold", "tether", {loss_db = 0.3, reflection_db = 35.0}], ["gap", "isolation", {loss_db = 0.7}],
+    ["part", "measured", {file = "part.csv", ports = ["a", "b"]}],
+]
+tunable = ["x"]
+links = ["in1 x.a1", "in2 x.a2", "x.b1 tap.a1", "tap.b1 w.a1", "tap.b2 pd1", "w.b2 hold.a", "hold.b out1",
+         "x.b2 gap.a", "gap.b part.a", "part.b w.a2", "w.b1 out2"]
+[crossing]
+loss_db = 0.04
+[actuator.coupler]
+law = "gap"
+gap_nm = 200.0
+stiffness_n_per_m = 2.0
+area_um2 = 20.0
+decay_nm = 50.0
+rest_rad = 3.05
+[channel]
+bits = 14
+max_v = 8.0
+"""
+
+
+def test_parts_on_the_way_cost_their_loss(chip):
+    head = ("wavelength_nm", "out", "in", "amplitude", "phase_rad")
+    rows = [(w, out, into, 0.9 if out != into else 0.0, 0.0) for w in (1540.0, 1560.0) for out in "ab" for into in "ab"]
+    mesh = load(chip(PASSED, part=[head, *rows]))
+    reach = full_reach(mesh.net.setting_is_angle)
+    graph = route_graph(mesh.net, mesh.as_built, reach)
+    routing = find_routes(graph, ["in1:out1", "in2:out2"])
+    settings = settings_for(graph.switches, routing.share, idle=reach.idle)
+    power = np.abs(Response(mesh.net, mesh.as_built).matrix(settings)) ** 2
+    by_hand = [-10 * np.log10(0.95) + 0.04 + 0.3, 0.7 - 20 * np.log10(0.9) + 0.04]
+    assert routing.loss_db == pytest.approx(by_hand, abs=1e-9)
+    # what the tether returns comes back by no way here, so light loses the same
+    assert -10 * np.log10(power[[0, 1], [0, 1]]) == pytest.approx(by_hand, abs=1e-6)

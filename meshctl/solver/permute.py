@@ -163,6 +163,11 @@ class Permuter:
                 "be as many and apart",
                 remedy="ask for routes one by one",
             )
+        if graph.n_lots < len(graph.switches):
+            raise NoClosedForm(
+                f"no closed form for permutations: {len(graph.switches)} cells share {graph.n_lots} settings",
+                remedy="ask for routes one by one",
+            )
         self.n = len(net.inputs)
         # the graph itself is not kept: `permuter` keeps these as long as their graph lives
         self._allowed = graph.allowed
