@@ -99,12 +99,39 @@ def test_known_phase_errors_cost_nothing():
     assert found.shortfalls == ()
 
 
-def test_phase_error_of_bare_lane_is_carried():
-    # a fixed phase in front of a cell is no setting; the cell behind it takes it over
+def test_phase_error_of_guides_is_carried():
+    # guides stand behind the last cells: their phases are taken over by the output phases
     mesh = lattice("rectangular", modes=5)
-    guides = mesh.net.kind == 2
-    found = solved(mesh, haar(5, 1), error_rad=np.where(guides, 1.234, 0.0))
+    error = np.where(mesh.net.kind == 2, np.random.default_rng(2).uniform(-3, 3, mesh.net.n_elements), 0.0)
+    assert solved(mesh, haar(5, 1), error_rad=error).matrix_error <= EXACT
+
+
+def test_fixed_phase_between_cells_is_carried(chip, lattice_toml):
+    insert = '[[insert]]\nname = "p{0}"\nkind = "phase"\nat = "{1}"\nphase_rad = {2}\n'
+    more = insert.format(1, "c1_1.b1", 0.7) + insert.format(2, "c2_1.b2", -1.9) + insert.format(3, "in2", 2.5)
+    mesh = load(chip(lattice_toml(modes=5, more=more)))
+    assert solved(mesh, haar(5, 1)).matrix_error <= EXACT
+
+
+def test_inner_phase_may_take_other_sign():
+    # theta and -theta split alike: inner phases that reach only pi .. 2 pi still reach every splitting
+    mesh = lattice("rectangular", modes=6)
+    inner = np.array([name.endswith("inner") for name in mesh.net.setting_names])
+    low = np.where(inner, np.pi, 0.0)
+    found = solved(mesh, haar(6, 1), Reach(low, np.full(len(low), 2 * np.pi), np.full(len(low), 2 * np.pi), low))
     assert found.matrix_error <= EXACT
+    assert found.settings[inner].min() >= np.pi
+
+
+def test_nearest_end_is_used_beyond_reach():
+    # inner phases held to 2.0 .. 2.2: full cross (0) is nearest to the lower end, bar (pi) to the upper
+    mesh = lattice("rectangular", modes=2)
+    reach = Reach(
+        np.array([0, 2.0, 0, 0]), np.array([7, 2.2, 7, 7]), np.array([7, 0.0, 7, 7]) / 7 * 2 * np.pi, np.zeros(4)
+    )
+    assert mesh.net.setting_names[1] == "c1_1.inner"
+    used = [solved(mesh, read_target(f"permutation:{order}", (2, 2)), reach).settings[1] for order in ("2,1", "1,2")]
+    assert used == [2.0, 2.2]
 
 
 def test_gap_cells_take_their_nearest_branch():

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from meshctl.mesh.graph import AsBuilt, Net
-from meshctl.optics.elements import PHASE
+from meshctl.optics.elements import GUIDE, PHASE
 from meshctl.optics.feedforward import Circuit
 from meshctl.optics.kernels import (
     UniTuple,
@@ -37,7 +37,7 @@ SLACK = 1e-9  # rad beyond its reach that counts as in reach: far below what any
 ALIGNED = 1e-13  # product of bar and cross amplitude below which a cell is bar or cross, its phase free
 
 
-@kernel(float64(float64, float64, float64, float64))
+@inner
 def _nearest(wanted, low, high, period):  # type: ignore[no-untyped-def]
     """The lowest reachable value that equals `wanted` up to whole periods, else the nearest end."""
     if period <= 0.0:
@@ -48,18 +48,18 @@ def _nearest(wanted, low, high, period):  # type: ignore[no-untyped-def]
     return high if x - high <= low - (x - period) else low
 
 
-@kernel(float64(float64, float64))
+@inner
 def _wrapped(x, period):  # type: ignore[no-untyped-def]
     """x less the nearest whole number of periods."""
     return x - period * math.floor(x / period + 0.5)
 
 
-@kernel(complex128(float64))
+@inner
 def _turn(phase):  # type: ignore[no-untyped-def]
     return complex(math.cos(phase), math.sin(phase))
 
 
-@kernel(UniTuple(float64, 2)(float64, float64, float64, float64, float64, float64, float64, float64, uint8))
+@inner
 def _inner_phase(bar, cross, a, b, error, low, high, period, flip):  # type: ignore[no-untyped-def]
     """(setting, wanted) of a Mach-Zehnder cell with couplers a, b that is to split as bar to cross."""
     quarter = math.pi / 4
@@ -84,7 +84,7 @@ def _inner_phase(bar, cross, a, b, error, low, high, period, flip):  # type: ign
     return plus, plus - off_plus
 
 
-@kernel(UniTuple(float64, 2)(float64, float64, float64, float64, float64, float64))
+@inner
 def _coupler_angle(bar, cross, error, low, high, idle):  # type: ignore[no-untyped-def]
     """(setting, wanted) of the angle n pi +- k nearest to rest within reach, else nearest to the reach."""
     k = math.atan2(cross, bar)
@@ -102,7 +102,7 @@ def _coupler_angle(bar, cross, error, low, high, idle):  # type: ignore[no-untyp
     return best, best_wanted
 
 
-@kernel(UniTuple(complex128, 4)(float64, float64, float64))
+@inner
 def _mzi_block(a, b, theta):  # type: ignore[no-untyped-def]
     """C(b) diag(exp(i theta), 1) C(a)."""
     ca, sa, cb, sb, et = math.cos(a), math.sin(a), math.cos(b), math.sin(b), _turn(theta)
@@ -114,7 +114,7 @@ def _mzi_block(a, b, theta):  # type: ignore[no-untyped-def]
     )
 
 
-@kernel(UniTuple(complex128, 4)(float64, float64))
+@inner
 def _step_block(half, outer):  # type: ignore[no-untyped-def]
     """An ideal cell of half angle `half` and outer phase `outer`."""
     s, c, e, g = math.sin(half), math.cos(half), _turn(outer), 1j * _turn(half)
@@ -291,7 +291,7 @@ def fit_cells(
     output = np.full(circuit.n_lanes, -1, np.int32)
     _walk(
         table.event, table.form, table.lane, table.element, step_of, steps.half_angle_rad, steps.outer_rad,
-        net.setting_of, base, circuit.element_lane_a, (net.kind == PHASE).astype(np.uint8),
+        net.setting_of, base, circuit.element_lane_a, np.isin(net.kind, (PHASE, GUIDE)).astype(np.uint8),
         reach.low, reach.high, reach.period, reach.idle,
         np.zeros(len(table.cell), np.uint8) if flip is None else flip, np.uint8(free in ("inputs", "both")),
         settings, wanted, off, carried, aligned, output,
