@@ -6,8 +6,8 @@ from scipy import sparse
 
 from meshctl.drive.crosstalk import DENSE_TO, Crosstalk
 from meshctl.drive.factor import NEGLIGIBLE
-from meshctl.mesh.neighbours import DROPPED_LIMIT_RAD, dropped_error_rad, from_positions, split_far
 from meshctl.errors import CrosstalkNotDominant, CrosstalkUnsound, OutOfRange, UnknownKey
+from meshctl.mesh.neighbours import DROPPED_LIMIT_RAD, dropped_error_rad, from_positions, split_far
 
 BELOW = np.array([0.0, 25.0])  # um, from the heated arm to the other
 

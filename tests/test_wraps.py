@@ -13,9 +13,9 @@ from meshctl.drive import integer
 from meshctl.drive.crosstalk import Crosstalk
 from meshctl.drive.factor import factor
 from meshctl.drive.integer import Programme, prove
-from meshctl.mesh.neighbours import from_positions
 from meshctl.drive.wraps import LIMIT_TOLERANCE, least_power_wraps
 from meshctl.errors import CrosstalkNotDominant, NotFinite, NotFound, Unreachable
+from meshctl.mesh.neighbours import from_positions
 
 EXPONENTIAL = {"amplitude": 0.05 * np.exp(2.0), "length_um": 100.0, "law": "exponential"}  # 5 % at 200 um
 INVERSE = {"amplitude": 0.05, "length_um": 200.0, "law": "inverse"}  # 5 % at 200 um

@@ -2,7 +2,7 @@
 
 Full fastmath would let the compiler assume that NaN never happens and make isnan false; the four flags
 below allow fused multiply-add and reordered sums and nothing else.
-Public: kernel, given, filled, and numba's scalar types.
+Public: kernel, inner, given, filled, and numba's scalar types.
 """
 
 from __future__ import annotations
@@ -16,6 +16,12 @@ FLAGS = {"contract", "reassoc", "nsz", "arcp"}
 
 
 UniTuple = types.UniTuple
+
+
+def inner(function: Callable[..., Any]) -> Callable[..., Any]:
+    """A function that kernels call: compiled with them, so that loading a cached kernel does not load it."""
+    compiled: Callable[..., Any] = njit(function, fastmath=FLAGS, nogil=True)
+    return compiled
 
 
 def given(dtype: Any, dimensions: int = 1) -> Any:
@@ -43,6 +49,7 @@ __all__ = [
     "filled",
     "float64",
     "given",
+    "inner",
     "int32",
     "int64",
     "kernel",

@@ -16,18 +16,7 @@ import numpy as np
 from meshctl.mesh.graph import AsBuilt, Net
 from meshctl.optics.elements import GUIDE, PHASE
 from meshctl.optics.feedforward import Circuit
-from meshctl.optics.kernels import (
-    UniTuple,
-    complex128,
-    filled,
-    float64,
-    given,
-    int32,
-    int64,
-    kernel,
-    uint8,
-    void,
-)
+from meshctl.optics.kernels import complex128, filled, float64, given, inner, int32, int64, kernel, uint8, void
 from meshctl.solver.cells import CellTable
 from meshctl.solver.decompose import Steps
 from meshctl.solver.reach import Reach
@@ -121,6 +110,8 @@ def _step_block(half, outer):  # type: ignore[no-untyped-def]
     return g * e * s, g * c, g * e * c, -g * s
 
 
+# the same rules outside kernels, where compiling them would take longer than they do
+nearest, wrapped = _nearest.py_func, _wrapped.py_func  # type: ignore[attr-defined]
 _IN = given(float64)
 
 
@@ -259,9 +250,9 @@ def _output_phases(
     best = int(np.argmin(1e6 * over.sum(1) + above.sum(1)))
     shortfalls = []
     for setting, v in zip(s.tolist(), (value + common[best]).tolist(), strict=True):
-        x = _nearest(v, reach.low[setting], reach.high[setting], reach.period[setting])
+        x = nearest(v, reach.low[setting], reach.high[setting], reach.period[setting])
         settings[setting] = x
-        off = float(_wrapped(x - v, 2 * math.pi))
+        off = float(wrapped(x - v, 2 * math.pi))
         if abs(off) > 2 * SLACK:
             shortfalls.append(Shortfall(int(setting), x - off, x, 0.0))
     return shortfalls

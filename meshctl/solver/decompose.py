@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from meshctl.optics.kernels import UniTuple, complex128, filled, float64, int64, kernel, void
+from meshctl.optics.kernels import complex128, filled, float64, inner, int64, kernel, void
 
 PAD = 8  # extra columns of the working copy: a row stride of 2^k would map all rows to one cache set
 
@@ -44,7 +44,7 @@ _WORK_AND_STEPS = (
 )
 
 
-@kernel(UniTuple(float64, 4)(float64, float64, float64, float64))
+@inner
 def _nulling(ur, ui, vr, vi):  # type: ignore[no-untyped-def]
     """(|u|, |v|) / length, 0 and 0 where both are nothing, and exp(i (arg u - arg v)), 1 without arguments."""
     u, v = math.sqrt(ur * ur + ui * ui), math.sqrt(vr * vr + vi * vi)
@@ -59,7 +59,7 @@ def _nulling(ur, ui, vr, vi):  # type: ignore[no-untyped-def]
     return 0.0, 0.0, er, ei
 
 
-@kernel(void(filled(float64, 2), filled(float64, 2), int64, int64, float64, float64, complex128))
+@inner
 def _mix_columns(real, imag, r, m, s, c, e):  # type: ignore[no-untyped-def]
     """Columns m, m + 1 of rows 0..r times T^H, e = exp(-ip)."""
     g = -1j * complex(c, -s)
@@ -72,7 +72,7 @@ def _mix_columns(real, imag, r, m, s, c, e):  # type: ignore[no-untyped-def]
         u[m + 1], v[m + 1] = dr * xr - di * xi + fr * yr - fi * yi, dr * xi + di * xr + fr * yi + fi * yr
 
 
-@kernel(void(filled(float64, 2), filled(float64, 2), int64, int64, float64, float64, complex128))
+@inner
 def _mix_rows(real, imag, first, m, s, c, e):  # type: ignore[no-untyped-def]
     """T times rows m, m + 1, columns first.. of a square matrix, e = exp(ip)."""
     g = 1j * complex(c, s)
