@@ -10,7 +10,7 @@ from meshctl.errors import WrongSize
 from meshctl.mesh.meshfile import lattice
 from meshctl.mesh.response import Response
 from meshctl.optics import adjoint
-from meshctl.optics.feedforward import propagate
+from meshctl.optics.feedforward import fuse, propagate
 
 DIFFERENCE = 1e-8  # of a central difference with step 1e-5: truncation 1e-10, rounding 1e-11, times some terms
 
@@ -87,18 +87,48 @@ def test_opaque_parts_still_give_gradients():
     assert np.abs(got).max() > 0.1
 
 
-def test_fields_are_kept_where_light_fades():
-    response, _ = chip(modes=6)
+def kept_columns(cells, factor):
+    """Columns at whose cells fields are kept, if these cells leave this factor of their light."""
+    response, _ = chip(modes=8)
+    circuit, rows = response.circuit, response.net.names.element_row
     amplitude = np.ones(response.net.n_elements)
-    assert len(adjoint.keeping(response.circuit, amplitude).blocks) == 0
-    # three cells deep at 0.1 each is just short of 1000, four are beyond it
-    per_cell = {name: row for name, row in response.net.names.element_row.items() if name.endswith("inner")}
-    amplitude[list(per_cell.values())] = 0.0999
-    kept = adjoint.keeping(response.circuit, amplitude)
-    column = {row: int(name[1]) for name, row in per_cell.items()}
-    blocks = [response.circuit.element[response.circuit.first[b] : response.circuit.first[b + 1]] for b in kept.blocks]
-    assert {column[e] for block in blocks for e in block if e in column} == {3, 6}
+    amplitude[[rows[f"{cell}.inner"] for cell in cells]] = factor
+    kept = adjoint.keeping(circuit, amplitude)
     assert (kept.at[kept.blocks] == np.arange(len(kept.blocks))).all()
+    assert np.count_nonzero(kept.at >= 0) == len(kept.blocks)
+    names = response.net.names.elements
+    return {int(names[circuit.element[circuit.first[b]]][1]) for b in kept.blocks}
+
+
+def test_fields_are_kept_where_light_fades():
+    every = [f"c{c}_{r}" for c in range(1, 9) for r in range(1, 4 if c % 2 == 0 else 5)]
+    assert kept_columns([], 1.0) == set()
+    # four in a row: 0.11^3 is just above a thousandth, 0.11^4 far below; then it begins anew. The outermost
+    # lanes meet no cell in column 4 and come to their fourth, by the light of column 3, in column 5
+    assert kept_columns(every, 0.11) == {4, 5, 8}
+    # light that stays clear on one lane does not undo what the other lost
+    assert kept_columns(["c1_1", "c3_1", "c5_1", "c7_1"], 0.11) == {7}
+
+
+def test_every_side_of_a_block_has_its_derivative():
+    # one block of six parts: phases on the second and first lane, couplers between
+    first, element, side = np.array([0, 6], np.int32), np.arange(6, dtype=np.int32)[::-1].copy(), [2, 0, 1, 2, 0, 2]
+    side, two_lanes = np.array(side, np.uint8), np.array(side)[::-1] == 0
+    values, loss, by_block = np.linspace(0.3, 2.0, 6), np.linspace(0.5, 1.0, 6), draw(1, 4)
+
+    def parts(v):
+        turned = np.where(two_lanes, np.cos(v), np.exp(1j * v)) * loss
+        crossed = np.where(two_lanes, 1j * np.sin(v), 0) * loss
+        return np.array([turned.real, turned.imag, crossed.real, crossed.imag])
+
+    def value(v):
+        block = np.empty((1, 8))
+        fuse(first, element, side, parts(v), block)
+        return np.vdot(by_block, block[:, ::2] + 1j * block[:, 1::2]).real
+
+    pairs, got = np.ascontiguousarray(by_block).view(float), np.empty(6)
+    adjoint.fuse_back(first, element, side, parts(values), pairs, np.empty((6, 8)), got)
+    np.testing.assert_allclose(got, differences(value, values), atol=DIFFERENCE)
 
 
 def test_stuck_settings_have_no_gradient():

@@ -379,6 +379,19 @@ def test_refined_bands_beat_refined_centres():
     assert errors(by_worst).max() <= errors(by_mean).max() * 1.001
 
 
+def test_bands_are_refined_within_reach_alone():
+    waves = np.linspace(1530.0, 1570.0, 3)
+    for seed in range(8):
+        net, as_built = die(4, 0.05, seed)
+        objective, reach = MatrixError(haar(4, str(seed)), wavelengths_nm=waves), full_reach(net.setting_is_angle)
+        start = np.random.default_rng(seed).uniform(0, TURN, net.n_settings)
+        found = refine(net, as_built, objective, reach, start)
+        assert (found.settings >= reach.low).all()
+        assert (found.settings <= reach.high).all()
+        again = objective.evaluate(Response(net, as_built).matrix(found.settings, waves))[0]
+        assert found.objective == pytest.approx(again, rel=1e-9)
+
+
 def test_refining_loads_neither_jax_nor_scipy_optimize():
     words = (
         "import sys; import numpy as np; from meshctl.mesh.meshfile import lattice;"
