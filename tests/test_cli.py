@@ -57,7 +57,7 @@ def test_new_takes_any_folder_name(run, tmp_path):
     assert load(tmp_path / 'my "best" chip').name == 'my "best" chip'
 
 
-def test_new_balances_its_losses(run, tmp_path):
+def test_new_balances_losses_when_asked(run, tmp_path):
     run("new", "rectangular", tmp_path / "m", "--modes", 5, "--balanced")
     toml = tmp_path / "m" / "mesh.toml"
     toml.write_text(toml.read_text().replace("[coupler]\nloss_db = 0.0", "[coupler]\nloss_db = 0.1"))
@@ -88,7 +88,7 @@ def test_check_counts_what_is_there(run, chip, lattice_toml):
     assert remarks in ("", "".join(f"warning: {line}\n" for line in found["warnings"]))
 
 
-def test_check_prints_for_people(run, solved):
+def test_check_prints_text_for_people(run, solved):
     code, said, remarks = run("check", solved[0])
     assert (code, remarks) == (0, "")
     assert "rectangular, 1550 nm" in said
@@ -130,7 +130,7 @@ def test_solve_of_ideal_chip_is_exact(run, tmp_path):
     assert entry["fidelity"] > 0.999999
 
 
-def test_solve_reads_target_files(run, tmp_path, solved):
+def test_solve_reads_targets_from_files(run, tmp_path, solved):
     matrix = np.fft.ifft(np.eye(4), norm="ortho")  # the dft of the conventions: exp(+2 pi i / N)
     np.save(tmp_path / "t.npy", matrix)
     (tmp_path / "t.csv").write_text("\n".join(",".join(repr(complex(z)) for z in row) for row in matrix))
@@ -168,7 +168,7 @@ def test_predict_repeats_what_solve_said(run, solved):
     assert all(entry[key] == plan[key] for key in ("fidelity", "matrix_error", "throughput", "throughput_per_input"))
 
 
-def test_predict_writes_field_matrix(run, tmp_path, solved):
+def test_predict_writes_the_field_matrix(run, tmp_path, solved):
     run("predict", *solved, "--matrix", tmp_path / "m.npy")
     matrix = np.load(tmp_path / "m.npy")
     # no loss on this die: unitary within rounding
@@ -176,7 +176,7 @@ def test_predict_writes_field_matrix(run, tmp_path, solved):
     assert np.abs(matrix.conj().T @ matrix - np.eye(4)).max() <= 1e-14
 
 
-def test_predict_writes_spectrum_rows(run, tmp_path, solved):
+def test_predict_writes_rows_of_spectrum(run, tmp_path, solved):
     code, said, _ = run("predict", *solved, "--wavelengths", "1540:1560:5", "-o", tmp_path / "s.csv", "--json")
     with (tmp_path / "s.csv").open(newline="") as lines:
         rows = list(csv.DictReader(lines))
@@ -210,7 +210,7 @@ def test_stale_plan_passes_with_remark(run, solved):
 
 
 # ---- the rest
-def test_elements_counts_its_rows(run, tmp_path, solved):
+def test_elements_counts_the_rows_written(run, tmp_path, solved):
     code, said, _ = run("elements", *solved, "-o", tmp_path / "l.csv", "--json")
     entry = json.loads(said)
     assert code == 0
@@ -233,7 +233,7 @@ def test_demo_runs_the_main_job(run):
 
 
 @pytest.mark.parametrize("name", ["plover8", "knot16"])
-def test_shipped_meshes_are_sound(run, name):
+def test_shipped_meshes_are_all_sound(run, name):
     from meshctl.session import demo_mesh_folder
 
     folder = demo_mesh_folder(name)
@@ -252,13 +252,13 @@ def test_help_of_every_verb_shows_example(run, verb):
     assert f"meshctl {verb}" in said.split("Example:")[1]
 
 
-def test_help_lists_exit_codes(run):
+def test_help_lists_all_exit_codes(run):
     code, said, _ = run("--help")
     assert code == 0
     assert all(word in said for word in ("0 done", "1 a bug", "2 wrong", "3 unsound", "4 out of reach", "130"))
 
 
-def test_version_is_printed(run):
+def test_version_is_printed_on_request(run):
     import meshctl
 
     assert run("--version")[:2] == (0, f"meshctl {meshctl.__version__}\n")

@@ -178,7 +178,7 @@ def test_written_folder_is_read_back_equal(elements, actuators, crosstalk):
     assert differences(mesh, again) == []
 
 
-def test_comparison_sees_what_differs(tmp_path):
+def test_comparison_sees_a_changed_number(tmp_path):
     # the comparison of the tests above has to see a single changed number
     plain = made(tmp_path / "a", {})
     other = made(tmp_path / "b", {"elements": [["element", "error_rad"], ["c1_1.coupler", 1e-300]]})

@@ -111,7 +111,7 @@ def test_ideal_elements_reach_target_exactly():
     assert plan.reason == "codes"
 
 
-def test_more_bits_come_closer(chip, lattice_toml):
+def test_more_bits_come_closer_still(chip, lattice_toml):
     errors = []
     for bits in (8, 12):
         mesh = load(chip(lattice_toml(modes=6).replace("bits = 16", f"bits = {bits}"), f"b{bits}"))

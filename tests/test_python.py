@@ -28,7 +28,7 @@ def test_bare_import_loads_no_numpy():
     assert subprocess.run([sys.executable, "-c", program], capture_output=True, text=True).stdout == "[]\n"
 
 
-def test_documented_example_runs():
+def test_example_of_documentation_still_runs():
     mesh = meshctl.lattice("rectangular", modes=8, cell="mzi")
     target = stats.unitary_group.rvs(8, random_state=1)
     plan = meshctl.solve(mesh, target)
@@ -38,7 +38,7 @@ def test_documented_example_runs():
     assert abs(plan.fidelity - overlap) <= 1e-12  # F by its definition
 
 
-def test_python_and_command_agree(run, tmp_path):
+def test_python_and_command_line_agree(run, tmp_path):
     mesh = meshctl.lattice("rectangular", modes=5, built=4)
     meshctl.write(mesh, tmp_path / "m")
     said = json.loads(run("solve", tmp_path / "m", "haar:3", "--json")[1])

@@ -32,7 +32,7 @@ def test_dft_turns_by_positive_angle():
     assert matrix[1, 1].imag > 0
 
 
-def test_hadamard_is_scipys_matrix():
+def test_hadamard_is_the_scipy_matrix():
     from scipy.linalg import hadamard
 
     assert np.abs(target("hadamard", 16) - hadamard(16) / 4).max() <= EXACT
@@ -118,7 +118,7 @@ def test_unitary_limit_lies_at_named_value():
         (np.eye(2) * 0.5, NotUnitary, "allowed is 1e-09"),
     ],
 )
-def test_unsound_matrices_are_refused(matrix, finding, says):
+def test_unsound_matrices_are_all_refused(matrix, finding, says):
     with pytest.raises(finding) as caught:
         make_target(matrix, (2, 2))
     assert says in str(caught.value)
@@ -141,7 +141,7 @@ def test_unsound_matrices_are_refused(matrix, finding, says):
         ("none.csv", MissingFile),
     ],
 )
-def test_incomplete_words_are_refused(words, finding):
+def test_incomplete_target_words_are_refused(words, finding):
     with pytest.raises(finding):
         target(words)
 

@@ -304,7 +304,7 @@ def test_wrong_words_are_one_line(run, place, words, exit_code, says):
     ends_with_one_line(run, place, words, exit_code, *says)
 
 
-def test_missing_command_is_told(run):
+def test_missing_command_is_asked_for(run):
     code, said, remarks = run()
     assert (code, said) == (2, "")
     assert "name a command; 'meshctl --help' lists them" in remarks
