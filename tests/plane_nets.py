@@ -146,3 +146,21 @@ def reached_by_all_states(lattice):
             at[todo[going]] = lattice.mate[leaving[going]]
             todo = todo[going]
     return out
+
+
+def cells_by_all_states(lattice):
+    """(start, end) on the rim -> fewest cells on a way between them, over every state of a small lattice."""
+    n, rim = lattice.n_cells, lattice.rim.tolist()
+    least = {}
+    for number in range(2**n):
+        for k, start in enumerate(rim):
+            at, passed = start, 0
+            while True:
+                passed += 1
+                leaving = 4 * (at // 4) + 2 * (1 - at % 4 // 2) + (at % 2 ^ number >> at // 4 & 1)
+                if lattice.mate[leaving] < 0:
+                    break
+                at = int(lattice.mate[leaving])
+            pair = k, rim.index(leaving)
+            least[pair] = min(passed, least.get(pair, passed))
+    return least

@@ -10,6 +10,7 @@ from meshctl.mesh.plane import hexagonal
 from meshctl.solver import conflict
 from meshctl.solver.conflict import decide
 from meshctl.solver.flows import Demand
+from meshctl.solver.layers import Layers
 from meshctl.solver.route import find_routes
 from meshctl.solver.waves import route_graph
 
@@ -99,6 +100,43 @@ def test_no_time_gives_no_verdict():
     wishes = next(w for w in (random_wishes(36, 5, s) for s in range(50)) if least_total_cells(LATTICE, w) is None)
     assert decide(GRAPH, demands_of(wishes), 0.0).status == "unknown"
     assert find_routes(GRAPH, wishes, seconds=1e-9).status == "not_found"
+
+
+def test_layers_of_every_length_decide_alone():
+    verdicts = set()
+    for seed in range(20):
+        wishes = random_wishes(36, 2 + seed % 3, seed)
+        layers = Layers(GRAPH, demands_of(wishes), None)
+        found = layers.solve(range(len(wishes)), 20.0)
+        layers.close()
+        assert not layers.bounded
+        assert found == (least_total_cells(LATTICE, wishes) is not None), wishes
+        verdicts.add(found)
+    assert verdicts == {True, False}
+
+
+def test_layers_find_exact_lengths_only():
+    # p1 to p20 takes 8 cells; with a middle one gone the next ways are longer
+    graph = GRAPH.avoiding(["c16"])
+    shortest = find_routes(GRAPH, ["p1:p20"]).routes[0].cells
+    longer = find_routes(graph, ["p1:p20"]).routes[0].cells
+    assert longer > shortest
+    source, sink = int(graph.entry[graph.end_row["p1"]]), graph.end_row["p20"]
+    for cells, exists in ((shortest, False), (longer, True)):
+        layers = Layers(graph, [Demand(source, (sink,), cells)], None)
+        assert layers.solve([0], 20.0) is exists
+        layers.close()
+
+
+def test_bounded_proof_says_that_it_is_bounded(monkeypatch):
+    wishes = next(w for w in (random_wishes(36, 3, s) for s in range(50)) if least_total_cells(LATTICE, w) is None)
+    monkeypatch.setattr(conflict, "MOST_VARIABLES", 0)
+    monkeypatch.setattr(conflict, "SLACKS", (0, 2))
+    monkeypatch.setattr("meshctl.solver.flows.FlowProgramme.solve", lambda *_, **__: ("unknown", None, None))
+    routing = find_routes(GRAPH, wishes)
+    assert routing.status == "impossible_within"
+    assert "at most 2 cells more than their shortest" in routing.words
+    assert routing.conflict
 
 
 def test_words_say_how_it_was_proved():

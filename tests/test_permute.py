@@ -23,7 +23,7 @@ SHAPES = ("rectangular", "triangular", "benes")
 def prepared(shape, modes, **words):
     mesh = lattice(shape, modes=modes, **words)
     reach = full_reach(mesh.net.setting_is_angle)
-    return mesh, reach, route_graph(mesh.net, mesh.as_built, reach)
+    return mesh, route_graph(mesh.net, mesh.as_built, reach)
 
 
 def arrived(mesh, graph, states):
@@ -49,7 +49,7 @@ def arrived(mesh, graph, states):
 
 @pytest.mark.parametrize("shape", SHAPES)
 def test_all_permutations_of_eight(shape):
-    mesh, _, graph = prepared(shape, 8)
+    mesh, graph = prepared(shape, 8)
     form = permuter(graph)
     wanted = np.array(list(permutations(range(8))))
     states = np.array([form.states(order) for order in wanted])
@@ -60,18 +60,18 @@ def test_all_permutations_of_eight(shape):
 @pytest.mark.parametrize("shape", SHAPES)
 @pytest.mark.parametrize("modes", [2, 4, 16])
 def test_permutation_is_what_light_does(shape, modes):
-    mesh, reach, graph = prepared(shape, modes)
+    mesh, graph = prepared(shape, modes)
     response, rng = Response(mesh.net, mesh.as_built), np.random.default_rng(modes)
     for _ in range(10):
         order = rng.permutation(modes)
-        settings = settings_for(graph.switches, permuter(graph).states(order).astype(float), idle=reach.idle)
+        settings = settings_for(graph.switches, permuter(graph).states(order).astype(float))
         power = np.abs(response.matrix(settings)) ** 2
         assert power[order, np.arange(modes)] == pytest.approx(1.0, abs=1e-9)  # rounding over 31 columns
 
 
 @pytest.mark.parametrize("shape", ["rectangular", "benes"])
 def test_large_permutation_takes_milliseconds(shape):
-    mesh, _, graph = prepared(shape, 256)
+    mesh, graph = prepared(shape, 256)
     form, rng, took = permuter(graph), np.random.default_rng(0), []
     orders = [rng.permutation(256) for _ in range(5)]
     states = []
@@ -100,7 +100,7 @@ def test_stuck_cell_and_spare_columns_route_all():
         reach = with_stuck_bar(mesh, [int(rng.integers(mesh.net.n_cells))])
         graph = route_graph(mesh.net, mesh.as_built, reach)
         order = rng.permutation(8)
-        settings = settings_for(graph.switches, permuter(graph).states(order).astype(float), idle=reach.idle)
+        settings = settings_for(graph.switches, permuter(graph).states(order).astype(float))
         power = np.abs(response.matrix(settings)) ** 2
         assert power[order, np.arange(8)] == pytest.approx(1.0, abs=1e-9)
 
@@ -110,7 +110,7 @@ def test_stuck_cells_agree_with_exhaustion(shape):
     # 4 modes: all 2^6 states of 6 cells by hand; what exists is found, what does not is proved
     mesh = lattice(shape, modes=4)
     everything = (np.arange(64)[:, None] >> np.arange(6)) & 1
-    _, _, free = prepared(shape, 4)
+    _, free = prepared(shape, 4)
     for cell in range(6):
         graph = route_graph(mesh.net, mesh.as_built, with_stuck_bar(mesh, [cell]))
         row = graph.switches.names.index(mesh.net.names.cells[cell])
@@ -121,12 +121,12 @@ def test_stuck_cells_agree_with_exhaustion(shape):
 
 
 def test_partial_permutation_of_many_lanes():
-    mesh, reach, graph = prepared("benes", 32)
+    mesh, graph = prepared("benes", 32)
     rng = np.random.default_rng(7)
     ins, outs = rng.permutation(32)[:24], rng.permutation(32)[:24]
     routing = find_routes(graph, [f"in{a + 1}:out{b + 1}" for a, b in zip(ins, outs, strict=True)])
     assert routing.status == "found"
-    settings = settings_for(graph.switches, routing.share, idle=reach.idle)
+    settings = settings_for(graph.switches, routing.share)
     power = np.abs(Response(mesh.net, mesh.as_built).matrix(settings)) ** 2
     assert power[outs, ins] == pytest.approx(1.0, abs=1e-9)
 
@@ -143,7 +143,7 @@ def test_benes_has_counted_parts(modes, crossings):
 
 
 def test_benes_reaches_every_permutation():
-    mesh, _, graph = prepared("benes", 4)
+    mesh, graph = prepared("benes", 4)
     everything = (np.arange(64)[:, None] >> np.arange(6)) & 1
     reached = {tuple(order) for order in arrived(mesh, graph, everything).tolist()}
     assert len(reached) == 24  # rearrangeable: all 4! of them
@@ -156,7 +156,7 @@ def test_benes_crossings_cost_their_loss(chip, lattice_toml):
     reach = full_reach(mesh.net.setting_is_angle)
     graph = route_graph(mesh.net, mesh.as_built, reach)
     routing = find_routes(graph, ["in2:out7"])
-    settings = settings_for(graph.switches, routing.share, idle=reach.idle)
+    settings = settings_for(graph.switches, routing.share)
     power = np.abs(Response(mesh.net, mesh.as_built).matrix(settings)) ** 2
     assert routing.loss_db[0] > 0.05
     assert routing.loss_db[0] == pytest.approx(-10 * np.log10(power[6, 1]), abs=1e-9)
@@ -179,6 +179,6 @@ def test_meshes_without_closed_form_say_so():
 
 @pytest.mark.parametrize("order", [[0, 1, 2], [0, 0, 1, 2], [1, 2, 3, 4]])
 def test_order_that_is_no_permutation(order):
-    _, _, graph = prepared("rectangular", 4)
+    _, graph = prepared("rectangular", 4)
     with pytest.raises(WrongUsage, match="is no permutation of the 4 outputs"):
         permuter(graph).states(order)

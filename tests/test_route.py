@@ -6,7 +6,16 @@ from itertools import permutations, product
 import networkx as nx
 import numpy as np
 import pytest
-from plane_nets import Light, as_drawn, least_total_cells, plane_net, reached_by_all_states, traced_wishes, wide_reach
+from plane_nets import (
+    Light,
+    as_drawn,
+    cells_by_all_states,
+    least_total_cells,
+    plane_net,
+    reached_by_all_states,
+    traced_wishes,
+    wide_reach,
+)
 
 from meshctl.errors import WrongUsage
 from meshctl.mesh.meshfile import lattice as named_lattice
@@ -35,7 +44,7 @@ class Chip:
 
     def arriving(self, routing, wishes):
         """Power that arrives for each wish, unused cells left at rest."""
-        settings = settings_for(routing.graph.switches, routing.share, routing.entering, idle=self.reach.idle)
+        settings = settings_for(routing.graph.switches, routing.share, routing.entering)
         power = self.light.power(settings)[0]
         return np.array([self.light.between(power, *wish.partition("@")[0].split(":")) for wish in wishes])
 
@@ -135,12 +144,27 @@ def test_small_lattice_agrees_with_all_states():
     assert statuses == {"found", "impossible"}
 
 
+def test_cheapest_way_is_shortest_of_all_states():
+    # brute force over 2^6 states: least number of cells by which each pair is joined at all
+    cells = cells_by_all_states(SMALL.lattice)
+    for a in range(12):
+        for b in range(12):
+            if a == b:
+                continue
+            routing = find_routes(SMALL.graph, [f"p{a + 1}:p{b + 1}"])
+            least = cells.get((a, b))
+            assert routing.found == (least is not None)
+            if routing.found:
+                assert routing.routes[0].cells == least
+                assert routing.words == "found by negotiation"  # without the help of proofs
+
+
 def test_loss_is_what_light_loses():
     chip = Chip(hexagonal(2), side_um=500.0, loss_db_per_cm=2.0)
     lossy = replace(chip.as_built, loss_db=np.where(chip.net.kind == 0, 0.3, 0.0))
     graph = route_graph(chip.net, lossy, chip.reach)
     routing = find_routes(graph, ["p1:p14", "p8:p30"])
-    settings = settings_for(graph.switches, routing.share, idle=chip.reach.idle)
+    settings = settings_for(graph.switches, routing.share)
     power = Light(chip.net, lossy).power(settings)[0]
     for route in routing.routes:
         arrives = chip.light.between(power, route.wish.source, route.sink)
@@ -192,7 +216,7 @@ def test_stuck_cells_are_passed_as_stuck():
         routing = find_routes(graph, [f"p1:p{k}"])
         found += routing.found
         if routing.found:
-            power = light.power(settings_for(graph.switches, routing.share, idle=CURLEW.reach.idle))[0]
+            power = light.power(settings_for(graph.switches, routing.share))[0]
             assert light.between(power, "p1", f"p{k}") == pytest.approx(1.0, abs=LOSSLESS)
     assert found >= 25
 
@@ -238,9 +262,7 @@ def test_wished_delay_is_met_by_light():
     assert routing.routes[0].delay_ps == pytest.approx(shortest.delay_ps + 2 * step, abs=0.51 * step)
     # group delay is d phase / d omega of the field that arrives
     wavelengths = np.array([1549.9995, 1550.0005])
-    fields = CURLEW.light.matrix(
-        settings_for(CURLEW.graph.switches, routing.share, idle=CURLEW.reach.idle), wavelengths
-    )
+    fields = CURLEW.light.matrix(settings_for(CURLEW.graph.switches, routing.share), wavelengths)
     arriving = CURLEW.light.between(fields, "p1", "p15")
     omega = 2 * np.pi * 299792.458 / wavelengths  # rad/ps: speed of light in nm/ps
     delay = np.angle(arriving[1] / arriving[0]) / np.diff(omega)[0]
@@ -279,7 +301,7 @@ def test_routes_on_mesh_without_loops(cell):
         ins, outs = rng.permutation(8)[:count], rng.permutation(8)[:count]
         routing = find_routes(graph, [f"in{a + 1}:out{b + 1}" for a, b in zip(ins, outs, strict=True)])
         assert routing.status == "found"
-        settings = settings_for(graph.switches, routing.share, idle=reach.idle)
+        settings = settings_for(graph.switches, routing.share)
         power = np.abs(response.matrix(settings)) ** 2
         assert power[outs, ins] == pytest.approx(1.0, abs=LOSSLESS)
 
@@ -408,9 +430,7 @@ def test_tied_couplers_take_one_state(chip, extra, monkeypatch):
     assert both.status == "impossible"
     assert [str(w) for w in both.conflict] == ["in1:out1", "in3:out2"]
     routing = find_routes(graph, ["in1:out3", "in2:out1"])  # both cross
-    power = np.abs(
-        Response(mesh.net, mesh.as_built).matrix(settings_for(graph.switches, routing.share, idle=reach.idle))
-    )
+    power = np.abs(Response(mesh.net, mesh.as_built).matrix(settings_for(graph.switches, routing.share)))
     assert power[[2, 0], [0, 1]] == pytest.approx(1.0, abs=LOSSLESS)
 
 
@@ -451,7 +471,7 @@ def test_parts_on_the_way_cost_their_loss(chip):
     reach = full_reach(mesh.net.setting_is_angle)
     graph = route_graph(mesh.net, mesh.as_built, reach)
     routing = find_routes(graph, ["in1:out1", "in2:out2"])
-    settings = settings_for(graph.switches, routing.share, idle=reach.idle)
+    settings = settings_for(graph.switches, routing.share)
     power = np.abs(Response(mesh.net, mesh.as_built).matrix(settings)) ** 2
     by_hand = [-10 * np.log10(0.95) + 0.04 + 0.3, 0.7 - 20 * np.log10(0.9) + 0.04]
     assert routing.loss_db == pytest.approx(by_hand, abs=1e-9)

@@ -25,7 +25,7 @@ def limited(reach, setting, low, high, rest):
 def cross_power(mesh, as_built, reach, share):
     """Power from in1 to out2 with the one cell of a two-mode mesh put to a cross share."""
     switches = find_switches(mesh.net, as_built, reach)
-    settings = settings_for(switches, np.full(len(switches), share), idle=reach.idle)
+    settings = settings_for(switches, np.full(len(switches), share))
     matrix = np.abs(Response(mesh.net, as_built).matrix(settings)) ** 2
     return matrix[1, 0], settings
 

@@ -111,7 +111,7 @@ def test_ripple_stays_below_uniform_choices(errors):
     wavelengths = np.linspace(1540.0, 1560.0, 201)
 
     def ripple_db(share, wishes):
-        power = light.power(settings_for(graph.switches, share, idle=reach.idle), wavelengths)
+        power = light.power(settings_for(graph.switches, share), wavelengths)
         worst = 0.0
         for wish in wishes:
             curve = 10 * np.log10(light.between(power, *wish.split(":")))

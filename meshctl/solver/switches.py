@@ -44,6 +44,7 @@ class Switches:
     high: np.ndarray
     idle: np.ndarray
     length_um: np.ndarray  # f64[R], guides inside (mean of the arms)
+    rest_rad: np.ndarray  # f64[S], where all settings of the net stand without drive
 
     def __len__(self) -> int:
         return len(self.base_rad)
@@ -377,6 +378,7 @@ def find_switches(net: Net, as_built: AsBuilt, reach: Reach) -> Switches:
         high,
         np.clip(idle, low, high),
         of_pair(arm_length) if n_fixed else np.zeros(len(first)),
+        as_built.in_force(reach.idle),
     )
 
 
@@ -391,7 +393,7 @@ def _merged(
 
 
 def settings_for(
-    switches: Switches, share: np.ndarray, entering: np.ndarray | None = None, *, idle: np.ndarray
+    switches: Switches, share: np.ndarray, entering: np.ndarray | None = None, *, idle: np.ndarray | None = None
 ) -> np.ndarray:
     """Settings that put switches into wished states.
 
@@ -400,13 +402,13 @@ def settings_for(
     switches : Switches
     share : float (R,), wished cross share: 0 is bar, 1 is cross, between is a split, NaN leaves it at rest
     entering : int (R,), port (0 to 3) that the light to be split enters; None: a1
-    idle : float (S,), where all settings rest
+    idle : float (S,), where all other settings are to stand; None: at rest
 
     Returns
     -------
-    float (S,), rad: errors as built allowed for, nearest to rest within reach, all other settings at rest.
+    float (S,), rad: errors as built allowed for, nearest to rest within reach.
     """
-    settings = np.array(idle, float)
+    settings = np.array(switches.rest_rad if idle is None else idle, float)
     asked = ~np.isnan(share)
     drive = switches.drives_for(np.where(asked, share, 0.0), entering)
     todo = np.where(asked, drive - switches.idle_rad, 0.0)
