@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from meshctl.optics.kernels import filled, float64, given, int32, int64, kernel, uint8, void
+from meshctl.optics.kernels import filled, float64, given, int32, int64, kernel, sized_kernel, uint8, void
 
 BOTH, FIRST, SECOND = 0, 1, 2  # lanes of its block that a part acts on
 
@@ -37,7 +37,7 @@ class Circuit:
         return len(self.lane_a)
 
 
-@kernel(int64(*[given(int32)] * 3, *[filled(int32)] * 5))
+@sized_kernel(int64(*[given(int32)] * 3, *[filled(int32)] * 5))
 def _order(port_start, mate, owner, lane_of, waiting, queue, lane_a, lane_b):  # type: ignore[no-untyped-def]
     """Follow the light through elements whose entrances are all reached; returns how many were.
 
@@ -71,7 +71,7 @@ def _order(port_start, mate, owner, lane_of, waiting, queue, lane_a, lane_b):  #
     return tail
 
 
-@kernel(int64(*[given(int32)] * 4, *[filled(int32)] * 5))
+@sized_kernel(int64(*[given(int32)] * 4, *[filled(int32)] * 5))
 def _group(queue, lane_a, lane_b, cell_of, open_block, pending, block_of, block_a, block_b):  # type: ignore[no-untyped-def]
     """Assign every element to a block; returns the number of blocks.
 
@@ -163,7 +163,7 @@ def compile_circuit(
 
     waiting = np.bincount(owner[entrance & linked], minlength=n_elements).astype(np.int32)
     queue, lane_a, lane_b = (np.full(n_elements, -1, np.int32) for _ in range(3))
-    done = _order(port_start, mate, owner, lane_of, waiting, queue, lane_a, lane_b)
+    done = _order(n_elements, port_start, mate, owner, lane_of, waiting, queue, lane_a, lane_b)
     if done < n_elements:
         return None
     if _is_light_order(mate, owner, entrance):
@@ -172,7 +172,7 @@ def compile_circuit(
     block_of, pending = np.empty(n_elements, np.int32), np.full(n_elements, -1, np.int32)
     block_a, block_b = np.empty(n_elements, np.int32), np.empty(n_elements, np.int32)
     open_block = np.full(n_lanes, -1, np.int32)
-    n_blocks = _group(queue, lane_a, lane_b, cell_of, open_block, pending, block_of, block_a, block_b)
+    n_blocks = _group(n_elements, queue, lane_a, lane_b, cell_of, open_block, pending, block_of, block_a, block_b)
     block_a, block_b = block_a[:n_blocks].copy(), block_b[:n_blocks].copy()
 
     element = queue[np.argsort(block_of[queue], kind="stable")]

@@ -13,7 +13,7 @@ from meshctl.errors import NoClosedForm
 from meshctl.mesh.graph import Net
 from meshctl.optics.elements import COUPLER, CROSSING, PHASE
 from meshctl.optics.feedforward import Circuit
-from meshctl.optics.kernels import filled, given, int32, kernel, void
+from meshctl.optics.kernels import filled, given, int32, sized_kernel, void
 
 MZI, GAP = 0, 1
 OUTER, SPLIT1, INNER, SPLIT2 = range(4)  # columns of `element` for MZI
@@ -32,7 +32,7 @@ class CellTable:
     event: np.ndarray  # i32[V], light order: c for cell c, -1 - e for loose element e
 
 
-@kernel(void(given(int32), given(int32), filled(int32), filled(int32)))
+@sized_kernel(void(given(int32), given(int32), filled(int32), filled(int32)))
 def _columns(lane_a, lane_b, depth, column):  # type: ignore[no-untyped-def]
     for i in range(len(lane_a)):
         a, b = lane_a[i], lane_b[i]
@@ -44,7 +44,7 @@ def _columns(lane_a, lane_b, depth, column):  # type: ignore[no-untyped-def]
 def columns_of(lane_a: np.ndarray, lane_b: np.ndarray, n_lanes: int) -> np.ndarray:
     """Earliest column of every two-lane step, given in light order."""
     column = np.empty(len(lane_a), np.int32)
-    _columns(lane_a.astype(np.int32), lane_b.astype(np.int32), np.zeros(n_lanes, np.int32), column)
+    _columns(len(lane_a), lane_a.astype(np.int32), lane_b.astype(np.int32), np.zeros(n_lanes, np.int32), column)
     return column
 
 
