@@ -13,7 +13,7 @@ from meshctl.errors import WrongUsage
 from meshctl.optics.features import Feature
 from meshctl.plan.spectrum import Spectrum
 from meshctl.session import require_suffix
-from meshctl.units import nm_from_thz
+from meshctl.units import db_array, nm_from_thz
 
 LINES_MOST = 12  # port pairs that one figure can show and still be read
 FLOOR_DB = -80.0
@@ -52,15 +52,14 @@ def spectrum_figure(
     FigureCanvasAgg(figure)
     above, below = figure.subplots(2, 1, sharex=True)
     waves = spectrum.wavelengths_nm
-    with np.errstate(divide="ignore"):
-        power_db = np.maximum(10.0 * np.log10(spectrum.power), FLOOR_DB)
+    power_db = np.maximum(db_array(spectrum.power), FLOOR_DB)
     marker = "o" if len(waves) < 40 else ""
     for k, (entry, leaving) in enumerate(spectrum.pairs):
         above.plot(waves, power_db[:, k], marker=marker, ms=3, label=f"{entry} to {leaving}")
         below.plot(waves, spectrum.group_delay_ps[:, k], marker=marker, ms=3)
     if feature is not None and pair is not None:
         places = nm_from_thz(np.array(feature.thz))
-        level = np.maximum(10.0 * np.log10(np.maximum(feature.power, 1e-300)), FLOOR_DB)
+        level = np.maximum(db_array(np.array(feature.power)), FLOOR_DB)
         above.plot(places, level, "v" if feature.kind == "peak" else "^", color="black", label=f"{feature.kind}s")
     above.set_ylabel("power (dB)")
     below.set_ylabel("group delay (ps)")

@@ -30,6 +30,7 @@ from meshctl.plan.placing import require_sound_crosstalk
 from meshctl.plan.plan import Plan, check_fresh, plan_text, read_plan
 from meshctl.plan.spectrum import Spectrum, features, spectrum
 from meshctl.solver.target import Target, read_target
+from meshctl.units import db_array
 
 DEMO_MESH = "plover8"
 SPECTRUM_HEAD = (
@@ -156,9 +157,7 @@ class Session:
         writer = csv.writer(out, lineterminator="\n")
         writer.writerow(SPECTRUM_HEAD)
         size, power, phase = np.abs(spectrum.field), spectrum.power, spectrum.phase_rad
-        with np.errstate(divide="ignore"):
-            power_db = 10.0 * np.log10(power)
-        delay = spectrum.group_delay_ps
+        power_db, delay = db_array(power), spectrum.group_delay_ps
         inputs, outputs = zip(*spectrum.pairs, strict=True)
         for w, (wave, thz) in enumerate(zip(spectrum.wavelengths_nm.tolist(), spectrum.thz.tolist(), strict=True)):
             delays = ["" if d != d else repr(d) for d in delay[w].tolist()]  # dark: no delay

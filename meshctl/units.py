@@ -1,6 +1,6 @@
 """Decibel, wavelength and frequency: the only place where a factor of 10 or the speed of light appears.
 
-Public: SPEED_OF_LIGHT_M_PER_S, amplitude_from_loss_db, power_from_loss_db, loss_db_from_power, db,
+Public: SPEED_OF_LIGHT_M_PER_S, amplitude_from_loss_db, power_from_loss_db, loss_db_from_power, db, db_array,
 thz_from_nm, nm_from_thz, ps_from_phase_slope, turns, radians.
 """
 
@@ -13,6 +13,7 @@ SPEED_OF_LIGHT_M_PER_S = 299_792_458.0  # exact, SI definition of the metre
 UM_PER_CM = 1e4
 NM_PER_UM = 1e3
 THZ_PER_GHZ = 1e-3
+HZ_PER_THZ = 1e12
 TWO_PI = 2.0 * math.pi
 _LN10 = math.log(10.0)
 
@@ -30,6 +31,14 @@ def power_from_loss_db(loss_db: Any) -> Any:
 def db(ratio: float) -> float:
     """A power ratio in dB; 0 gives -inf."""
     return 10.0 * math.log10(ratio) if ratio > 0.0 else -math.inf
+
+
+def db_array(ratios: Any) -> Any:
+    """Power ratios in dB, an array; 0 gives -inf."""
+    import numpy as np
+
+    with np.errstate(divide="ignore"):
+        return 10.0 * np.log10(ratios)
 
 
 def loss_db_from_power(ratio: float) -> float:

@@ -5,7 +5,7 @@ import pytest
 from dense_light import dense_matrix, rf_matrix
 
 from meshctl.errors import LoopInNet
-from meshctl.mesh.meshfile import MESH_TOML, lattice, load
+from meshctl.mesh.meshfile import MESH_TOML, lattice, load, write
 from meshctl.mesh.plane import hexagonal, square
 from meshctl.mesh.response import Response, circuit_of
 from meshctl.mesh.waves import Waves
@@ -312,3 +312,22 @@ def test_square_lattice_keeps_its_two_directions(chip):
     joined = load(chip(loop_toml("square", "rows = 2\ncolumns = 2", more=mirror), name="joined"))
     lit = np.abs(response(joined).matrix(some(joined))) > 0
     assert lit.sum(axis=1).max() > 8
+
+
+def test_curlew_is_written_back_equal(tmp_path):
+    mesh = load("meshes/curlew")
+    again = load(write(mesh, tmp_path / "curlew"))
+    assert again.hash == mesh.hash
+    assert again.net.setting_names == mesh.net.setting_names
+    assert again.net.reflections == mesh.net.reflections
+    for a, table in mesh.actuators.tables.items():
+        assert np.array_equal(again.actuators.tables[a], table)
+
+
+def test_curlew_reaches_bar_and_cross():
+    mesh = load("meshes/curlew")
+    tables = mesh.actuators.tables
+    assert len(tables) == 30
+    for table in tables.values():
+        assert table[0, 1] < np.pi < 1.5 * np.pi < table[-1, 1]
+        assert table[-1, 0] < 10.0

@@ -26,7 +26,7 @@ from meshctl.errors import (
 )
 from meshctl.mesh.quantities import Quantity
 from meshctl.mesh.tables import read_table
-from meshctl.units import nm_from_thz, thz_from_nm
+from meshctl.units import HZ_PER_THZ, nm_from_thz, thz_from_nm
 
 if TYPE_CHECKING:  # pragma: no cover
     from scipy.interpolate import PchipInterpolator
@@ -192,14 +192,14 @@ def _from_touchstone(path: Path, ports: tuple[str, ...]) -> tuple[np.ndarray, np
         raise UnsoundFile(
             f"not readable as Touchstone: {problem}", where=path.name, remedy="write it as .s2p or .s4p"
         ) from None
-    _check_points(hertz * 1e-12, path.name)
+    _check_points(hertz / HZ_PER_THZ, path.name)
     if s.shape[1] != len(ports):
         raise WrongSize(
             f"the file has {s.shape[1]} ports; {len(ports)} are named: {', '.join(ports)}",
             where=path.name,
             remedy="name the port of ours for each port of the file, in its order",
         )
-    return hertz * 1e-12, s
+    return hertz / HZ_PER_THZ, s
 
 
 def _from_csv(path: Path, ports: tuple[str, ...]) -> tuple[np.ndarray, np.ndarray]:

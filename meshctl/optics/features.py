@@ -13,7 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from meshctl.units import db
+from meshctl.units import THZ_PER_GHZ, db
 
 Light = Callable[[np.ndarray], tuple[np.ndarray, np.ndarray]]  # THz -> power and its derivative per THz
 PROMINENT = 0.5  # share of the deepest feature's height that a feature must have to count
@@ -77,11 +77,11 @@ def feature_of(light: Light, thz: np.ndarray, kind: str | None = None) -> Featur
     if not chosen.any():
         return None
     places, levels = places[chosen], levels[chosen]
-    spacing = 1e3 * float(np.diff(places).mean()) if len(places) > 1 else math.nan
+    spacing = float(np.diff(places).mean()) / THZ_PER_GHZ if len(places) > 1 else math.nan
     at = int(np.argmin(np.abs(places - 0.5 * (thz[0] + thz[-1]))))
     half = 0.5 * levels[at] if kind == "peak" else 0.5 * (levels[at] + highest)
-    width = 1e3 * _width(light, thz, power, float(places[at]), float(half))
-    step = 1e3 * float(np.diff(thz).max())
+    width = _width(light, thz, power, float(places[at]), float(half)) / THZ_PER_GHZ
+    step = float(np.diff(thz).max()) / THZ_PER_GHZ
     return Feature(
         kind,
         places.tolist(),

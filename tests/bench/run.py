@@ -153,7 +153,120 @@ def startup(small: bool) -> Iterator[Row]:
             )
 
 
-STUDIES: tuple[Callable[[bool], Iterator[Row]], ...] = (decompose, propagate, startup)
+def wave_system(rings: int) -> tuple:
+    """Light both ways through a hexagonal mesh: its solver, the values of its parts, and the same as a linear system.
+
+    Unknown are the waves a on linked ports: (I - P S) a = P S e, response S_E a + S_EE e for light e at the ends.
+    """
+    import scipy.sparse as sp
+
+    from meshctl.mesh.meshfile import lattice
+    from meshctl.mesh.response import Response
+
+    mesh = lattice("hexagonal", rings=rings, cell="gap", built=1)
+    response = Response(mesh.net, mesh.as_built)
+    value = response.values(np.random.default_rng(0).uniform(0, 2 * np.pi, mesh.net.n_settings))
+    waves, centre = response.waves, np.array([1550.0])
+    entries = waves.entries(value, centre)
+    pattern = waves.woven.pattern
+    n = len(pattern.mate)
+    s = sp.csc_matrix((entries[0], (pattern.s_out_port, pattern.s_in_port)), shape=(n, n))
+    linked, ends = np.flatnonzero(pattern.mate >= 0), pattern.external_ports
+    across = s[pattern.mate[linked]]
+    system = sp.csc_matrix(sp.identity(len(linked)) - across[:, linked])
+    right, out_inner, out_own = across[:, ends].toarray(), s[ends][:, linked], s[ends][:, ends].toarray()
+    return waves, value, entries, system, right, out_inner, out_own
+
+
+def scattering(small: bool) -> Iterator[Row]:
+    """Nets with loops, all ports, per wavelength: against sparse and dense solves and a network library."""
+    from scipy.sparse.linalg import splu
+
+    from meshctl.optics.scattering import scatter, vjp
+    from meshctl.optics.updater import Updater
+
+    centre = np.array([1550.0])
+    for rings, cells, bar, pairs in ((2, 30, None, 21), (6, 306, 1 / 3, 9), (18, 2862, 1 / 1.5, 5)):
+        if small and rings > 2:
+            continue
+        waves, value, entries, system, right, out_inner, out_own = wave_system(rings)
+
+        columns = np.ascontiguousarray(right.T)
+
+        def sparse(system=system, columns=columns, out_inner=out_inner, out_own=out_own) -> np.ndarray:
+            factors = splu(system)  # one column at a time: all at once takes several times as long
+            return out_inner @ np.column_stack([factors.solve(column) for column in columns]) + out_own
+
+        def ours(waves=waves, value=value) -> np.ndarray:
+            return waves.matrix(value, centre)[0]
+
+        assert np.abs(ours() - sparse()).max() < 1e-9
+        yield compare(f"scattering {cells} cells", "scipy splu, its own ordering", ours, sparse, pairs, bar)
+        if rings == 2:
+            dense, inner = system.toarray(), out_inner.toarray()
+            yield compare(
+                "scattering 30 cells", "numpy dense solve", ours,
+                lambda d=dense, r=right, i=inner, o=out_own: i @ np.linalg.solve(d, r) + o, pairs, None,
+            )  # fmt: skip
+            yield compare("scattering 30 cells", "scikit-rf, link by link", ours, network_join(waves, entries), 5, None)
+        if rings == 18:
+            continue
+        pattern, kept = waves.woven.pattern, [scatter(waves.woven.pattern, entries, keep=True)]
+        g = np.ones_like(kept[0].response)
+
+        def value_only(pattern=pattern, entries=entries, kept=kept) -> None:
+            kept[0] = scatter(pattern, entries, keep=True, reuse=kept[0])
+
+        def gradient(kept=kept, g=g, again=value_only) -> None:
+            again()
+            vjp(kept[0], g)
+
+        yield compare(f"value + gradient, {cells} cells", "value alone", gradient, value_only, pairs, 3.0)
+        update = Updater(scatter(pattern, entries, keep=True))
+        cell = cells // 2
+        changed = entries[:, update.entries(cell)] * np.exp(0.1j)
+        yield compare(
+            f"one changed cell, {cells} cells", "own fresh solve", lambda u=update, k=cell, c=changed: u.response(k, c),
+            lambda p=pattern, e=entries: scatter(p, e), pairs, 1 / 3 if rings == 6 else None,
+        )  # fmt: skip
+
+
+def network_join(waves, entries: np.ndarray) -> Callable[[], np.ndarray]:
+    import skrf
+
+    pattern = waves.woven.pattern
+    n = len(pattern.mate)
+    s = np.zeros((1, n, n), complex)
+    s[:, pattern.s_out_port, pattern.s_in_port] = entries
+
+    def join() -> np.ndarray:
+        joined, left = s, list(range(n))
+        for p, q in enumerate(pattern.mate.tolist()):
+            if q > p:
+                joined = skrf.network.innerconnect_s(joined, left.index(p), left.index(q))
+                left = [port for port in left if port not in (p, q)]
+        return joined
+
+    return join
+
+
+def spectrum(small: bool) -> Iterator[Row]:
+    """A thousand wavelengths of a shipped mesh with loops against starting the process at all."""
+    from meshctl.mesh.meshfile import load
+    from meshctl.mesh.response import Response
+
+    mesh = load(MESHES / "curlew")
+    response = Response(mesh.net, mesh.as_built)
+    settings = np.random.default_rng(0).uniform(0, 2 * np.pi, mesh.net.n_settings)
+    waves = np.linspace(1540, 1560, 1000)
+    start = [sys.executable, "-c", "import meshctl.session"]
+    yield compare(
+        "curlew, 1000 wavelengths", "start of the process", lambda: response.matrix(settings, waves),
+        lambda: subprocess.run(start, check=True, cwd=MESHES.parent), 3 if small else 9, 1.0,
+    )  # fmt: skip
+
+
+STUDIES: tuple[Callable[[bool], Iterator[Row]], ...] = (decompose, propagate, startup, scattering, spectrum)
 
 
 def main() -> None:
@@ -169,7 +282,7 @@ def main() -> None:
             continue
         for row in study(chosen.small):
             rows.append(row)
-            bar = "" if row.bar is None else f"{row.bar:g}"
+            bar = "" if row.bar is None else f"{row.bar:.3g}"
             print(
                 f"{row.what:<34}{row.against:<42}{row.ours_ms:>10.3f}{row.reference_ms:>10.3f}{row.ratio:>8.2f}{bar:>7}",
                 flush=True,
