@@ -8,6 +8,7 @@ from meshctl.errors import LoopInNet
 from meshctl.mesh.meshfile import MESH_TOML, lattice, load, write
 from meshctl.mesh.plane import hexagonal, square
 from meshctl.mesh.response import Response, circuit_of
+from meshctl.mesh.stepping import Stepping
 from meshctl.mesh.waves import Waves
 
 WAVES = np.array([1541.0, 1550.0, 1563.0])
@@ -285,6 +286,20 @@ def test_wavelength_slope_agrees_with_differences(chip):
     assert np.array_equal(matrix, used.matrix(settings, WAVES))
     # central differences: step^2 times the third power of some 10 rad per nm, and rounding / step
     assert np.abs(slope - numeric).max() < 1e-6 * np.abs(slope).max()
+
+
+@pytest.mark.parametrize("cell", ["gap", "mzi"])
+def test_stepped_cell_agrees_with_fresh_solve(chip, cell):
+    mesh = load(chip(loop_toml(cell=cell, more=REFLECTING)))
+    used, settings, other = response(mesh), some(mesh), some(mesh, 1)
+    steps = Stepping(used, settings, 1557.0)
+    for c in (0, 13, 29):
+        moved = settings.copy()
+        moved[2 * c : 2 * c + 2] = other[2 * c : 2 * c + 2]
+        fresh = used.matrix(moved, np.array([1557.0]))[0]
+        # the same net by a low-rank update; and a step that does something
+        assert np.abs(steps.matrix(c, other) - fresh).max() < 1e-12
+        assert np.abs(fresh - used.matrix(settings, np.array([1557.0]))[0]).max() > 1e-2
 
 
 # ---- what a net with loops cannot give

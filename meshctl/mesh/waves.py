@@ -109,7 +109,13 @@ def _weave(net: Net) -> _Woven:
         net.cell_xy_um[: int(cell_of.max(initial=-1)) + 1],
     )
     roles = np.array(what, np.int64)
-    folded = [(e, int(renumber[p])) for p, chain in between.items() for e in chain]
+    folded = []
+    for p, chain in between.items():
+        q, cells = int(partner[p]), net.cell_of
+        for e in chain:
+            # to the end in its own cell, so that what moves a cell changes entries of that cell alone
+            far = q >= 0 and cells[e] == cells[owner[q]] != cells[owner[p]]
+            folded.append((e, int(renumber[q if far else p])))
     at = np.array(folded, np.int64).reshape(-1, 2)
     return _Woven(
         pattern,
@@ -285,6 +291,10 @@ class Waves:
         self.residual = max(self.residual, float(found.residual.max(initial=0.0)))
         self.dark_loops = max(self.dark_loops, int(found.dark_loops.max(initial=0)))
         return found
+
+    def release(self) -> None:
+        """Leave what the last solve kept to whoever holds it; the next one takes memory of its own."""
+        self._kept = None
 
     def _chunks(self, waves: np.ndarray, numbers: int) -> Iterator[slice]:
         size = max(1, CHUNK_BYTES // (16 * max(1, numbers)))
