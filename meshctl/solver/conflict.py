@@ -21,6 +21,7 @@ from meshctl.solver.layers import Layers, has_exact
 from meshctl.solver.waves import RouteGraph
 
 SLACKS = (8, 24)  # cells more than each route's shortest that the bounded searches allow
+OPENING_SLACK = 8  # the same for routes that leave no closed loop
 MOST_VARIABLES = 400_000  # of the layers when they are to take in every way
 
 
@@ -96,19 +97,17 @@ def without_rings(
 
     Returns
     -------
-    ways or None, and whether None is proved (for routes up to the first of SLACKS longer than their shortest)
+    ways or None, and whether None is proved (for routes up to OPENING_SLACK longer than
+    their shortest)
 
     Solves layers, forbids the loops found, and solves again. Needs the extra [exact]; without it, None.
     """
     if not has_exact():
         return None, False
     stop = time.monotonic() + seconds
-    layers = Layers(graph, demands, SLACKS[0])
+    layers = Layers(graph, demands, OPENING_SLACK)
     try:
-        while True:
-            answer = layers.solve(range(len(demands)), _left(stop))
-            if not answer:
-                return None, answer is False
+        while layers.solve(range(len(demands)), _left(stop)):
             ways = _traced(graph, demands, layers.state())
             closed = rings(ways)
             if not closed:
@@ -117,6 +116,7 @@ def without_rings(
                 layers.forbid(ring)
     finally:
         layers.close()
+    return None, _left(stop) > 0.0
 
 
 def _traced(graph: RouteGraph, demands: Sequence[Demand], state: np.ndarray) -> tuple[tuple[Passes, ...], ...]:

@@ -1,8 +1,7 @@
 """Routes: light from these ports to those, any number at once, each cell in one state.
 
-Negotiated congestion (McMurchie & Ebeling 1995): every route takes its cheapest way, states wanted by several
-rise in price, and routes go again until none clash. Then each goes once more with the others held, as long as
-that saves anything. Where it fails, `meshctl.solver.conflict` finds the routes or proves that there are none.
+`meshctl.solver.negotiate` looks for them, `meshctl.solver.permute` knows all lanes at once, and where these fail
+`meshctl.solver.conflict` finds the routes or proves that there are none.
 Public: Route, Routing, STATUSES, find_routes.
 """
 
@@ -17,11 +16,11 @@ import numpy as np
 from meshctl.errors import NoClosedForm, WrongUsage
 from meshctl.solver.conflict import decide, without_rings
 from meshctl.solver.flows import Demand, Passes
-from meshctl.solver.lengths import Goal, goal_of
+from meshctl.solver.lengths import goal_of
+from meshctl.solver.negotiate import Negotiation, Taken, Task, loops_of, needs_of, state_of
 from meshctl.solver.permute import permuter
-from meshctl.solver.search import FAR, Search, Way
-from meshctl.solver.split import Tree, grow, shares_of
-from meshctl.solver.unused import closed_loops, unused_states
+from meshctl.solver.search import FAR, Search
+from meshctl.solver.split import shares_of
 from meshctl.solver.waves import RouteGraph
 from meshctl.solver.wish import Wish, parse_wish
 
@@ -33,10 +32,7 @@ STATUSES = {
     "impossible_within": "Proved within a bound only: no routes exist that are not much longer than their shortest.",
     "not_found": "None were found in the time given, and none were proved impossible.",
 }
-ROUNDS, RESTARTS = 60, 4
-FIRST_PRICE, PRICE_GROWTH, MEMORY, DEAREST = 0.5, 1.3, 0.4, 1e3
 MOST_OPENING_S = 1.0  # for ways that leave no closed loop, where the first found do
-SPLIT = 2  # third state of a lot: divided for one wave, of use to no other
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,180 +82,6 @@ class Routing:
         return {self.graph.switches.names[r]: float(self.share[r]) for r in np.flatnonzero(~np.isnan(self.share))}
 
 
-@dataclass(frozen=True, eq=False)
-class Task:
-    """A wish with its rows in the graph."""
-
-    wish: Wish
-    source: int  # external port
-    node: int
-    sinks: tuple[int, ...]
-    goal: Goal | None  # wished length
-
-
-@dataclass(frozen=True, eq=False)
-class Taken:
-    """Ways of one task, by sink, and what they need."""
-
-    ways: tuple[Passes, ...]
-    needs: dict[int, int]  # lot -> bar, cross or SPLIT
-
-
-def _needs(graph: RouteGraph, ways: Iterable[Passes]) -> dict[int, int]:
-    needs: dict[int, int] = {}
-    for way in ways:
-        for node, state in way:
-            lot = int(graph.lot[node >> 2])
-            needs[lot] = state if needs.setdefault(lot, state) == state else SPLIT
-    return needs
-
-
-class _Negotiation:
-    """Routes going again and again until none clash."""
-
-    def __init__(self, search: Search, tasks: Sequence[Task], pay: np.ndarray, seed: int, stop: float) -> None:
-        self.search, self.graph, self.tasks, self.pay, self.stop = search, search.graph, tasks, pay, stop
-        self.rng = np.random.default_rng(seed)
-        self.rounds = 0
-
-    def take(self, task: Task, price: np.ndarray, split_price: np.ndarray) -> Taken | None:
-        graph, search = self.graph, self.search
-        price = np.where(search.open_price < FAR, price, FAR)
-        if len(task.sinks) > 1:
-            tree: Tree | None = grow(search, task.node, task.sinks, price, split_price)
-            return None if tree is None else Taken(tree.ways, _needs(graph, tree.ways))
-        way: Way | None = None
-        if task.goal is None:
-            way = search.way(task.node, task.sinks[0], price)
-        else:
-            for length in task.goal.lengths:
-                way = search.way_of_length(task.node, task.sinks[0], task.goal.advance, length, price)
-                if way is not None:
-                    break
-        return None if way is None else Taken((way.passes,), _needs(graph, (way.passes,)))
-
-    def run(self, rounds: int = ROUNDS, restarts: int = RESTARTS) -> list[Taken] | None:
-        """All tasks taken without a clash, or None."""
-        for restart in range(restarts):
-            taken = self._once(rounds, restart)
-            if taken is not None:
-                return self.shortened(taken)
-            if time.monotonic() > self.stop:
-                break
-        return None
-
-    def _once(self, rounds: int, restart: int) -> list[Taken] | None:
-        n_lots = max(self.graph.n_lots, 1)
-        use, memory = np.zeros((n_lots, 3)), np.zeros((n_lots, 3))
-        taken: list[Taken | None] = [None] * len(self.tasks)
-        pressing, opened = FIRST_PRICE, 0
-        for turn in range(rounds):
-            self.rounds += 1
-            for k in self.rng.permutation(len(self.tasks)).tolist():
-                old = taken[k]
-                if old is not None:
-                    if turn and not _clashes(use, old.needs):
-                        continue
-                    _count(use, old.needs, -1.0)
-                price = self._prices(use, memory, pressing * self.pay[k], restart)
-                new = self.take(self.tasks[k], np.ascontiguousarray(price[:, :2]), price[:, SPLIT])
-                new = old if new is None else new
-                if new is None:
-                    return None  # not even on an empty chip, as prices are finite
-                taken[k] = new
-                _count(use, new.needs, 1.0)
-            clash = ((use > 0).sum(1) > 1) | (use[:, SPLIT] > 1)
-            if not clash.any():
-                done = [t for t in taken if t is not None]
-                rings = self._rings(done)
-                if not len(rings) or opened >= 8:
-                    return done
-                # routes that close a loop between them: make its states dearer and go on
-                opened += 1
-                memory[rings] += MEMORY
-                k = int(self.rng.integers(len(done)))
-                _count(use, done[k].needs, -1.0)
-                taken[k] = None
-            memory[clash] += MEMORY
-            pressing = min(pressing * PRICE_GROWTH, DEAREST)
-            if time.monotonic() > self.stop:
-                return None
-        return None
-
-    def _prices(self, use: np.ndarray, memory: np.ndarray, pressing: float, restart: int) -> np.ndarray:
-        against = use.sum(1, keepdims=True) - use
-        against[:, SPLIT] += use[:, SPLIT]  # two divided waves clash too
-        price = (1.0 + memory) * (1.0 + pressing * against)
-        if restart:
-            price *= 1.0 + 0.3 * self.rng.random(price.shape)
-        return price
-
-    def _rings(self, taken: Sequence[Taken]) -> np.ndarray:
-        """Lots on loops that the routes alone close."""
-        state = _state_of(self.graph, taken)
-        loops, label = closed_loops(self.graph, state)
-        if not loops:
-            return np.empty(0, np.int64)
-        out: np.ndarray = np.unique(self.graph.lot[np.flatnonzero(label >= 0) >> 2])
-        return out
-
-    def shortened(self, taken: list[Taken]) -> list[Taken]:
-        """Each route once more with the others held, while that saves anything."""
-        use = np.zeros((max(self.graph.n_lots, 1), 3))
-        for t in taken:
-            _count(use, t.needs, 1.0)
-        for _ in range(3):
-            saved = False
-            for k, task in enumerate(self.tasks):
-                if time.monotonic() > self.stop or task.goal is not None:
-                    continue
-                _count(use, taken[k].needs, -1.0)
-                against = use.sum(1, keepdims=True) - use
-                against[:, SPLIT] += use[:, SPLIT]
-                price = np.where(against > 0, FAR, 1.0)
-                new = self.take(task, np.ascontiguousarray(price[:, :2]), price[:, SPLIT])
-                if new is not None and self._cost(new) < self._cost(taken[k]) - 1e-9:
-                    before = taken[k]
-                    taken[k] = new
-                    if len(self._rings(taken)):
-                        taken[k] = before
-                    else:
-                        saved = True
-                _count(use, taken[k].needs, 1.0)
-            if not saved:
-                break
-        return taken
-
-    def _cost(self, taken: Taken) -> float:
-        passes = {p for way in taken.ways for p in way}
-        return sum(float(self.search.base[node, state]) for node, state in passes)
-
-
-def _count(use: np.ndarray, needs: dict[int, int], by: float) -> None:
-    lots, kinds = list(needs), list(needs.values())
-    use[lots, kinds] += by
-
-
-def _clashes(use: np.ndarray, needs: dict[int, int]) -> bool:
-    lots, kinds = np.array(list(needs), np.int64), np.array(list(needs.values()), np.int64)
-    total = use[lots].sum(1)
-    return bool(((total > use[lots, kinds]) | ((kinds == SPLIT) & (total > 1))).any())
-
-
-def _state_of(graph: RouteGraph, taken: Iterable[Taken]) -> np.ndarray:
-    """0, 1, or -1 for unused and split, i32[R]."""
-    state = np.full(len(graph.switches), -1, np.int32)
-    divided: set[int] = set()
-    for t in taken:
-        for way in t.ways:
-            for node, s in way:
-                state[node >> 2] = s
-        divided |= {lot for lot, kind in t.needs.items() if kind == SPLIT}
-    if divided:
-        state[np.isin(graph.lot, list(divided))] = -1
-    return state
-
-
 def find_routes(
     graph: RouteGraph,
     wishes: Sequence[Wish | str],
@@ -303,7 +125,7 @@ def find_routes(
     'found'
 
     Cost: some ms for 20 routes on 1056 cells; proofs some seconds.
-    Source: McMurchie & Ebeling, "PathFinder", 1995.
+    Source: McMurchie & Ebeling 1995, negotiated congestion.
     """
     stop = time.monotonic() + seconds
     asked = tuple(parse_wish(w) if isinstance(w, str) else w for w in wishes)
@@ -377,7 +199,7 @@ def _find(
     closed = _closed_form(graph, tasks, seed) if len(tasks) == len(graph.net.inputs) else None
     if closed is not None:
         return _settled(graph, wishes, tasks, closed, "found in closed form", {"cells": len(graph.switches)})
-    negotiation = _Negotiation(search, tasks, pay, seed, min(stop, time.monotonic() + _share_of(stop)))
+    negotiation = Negotiation(search, tasks, pay, seed, min(stop, time.monotonic() + _share_of(stop)))
     taken = negotiation.run() if tasks else []
     words, status = "found by negotiation", "found"
     conflict: tuple[Wish, ...] = ()
@@ -389,10 +211,11 @@ def _find(
     counts = {"searches": search.searches, "rounds": negotiation.rounds, "cells": len(graph.switches)}
     if taken is None:
         return _answer(graph, wishes, status, words, conflict, counts)
-    if len(_loops(graph, _state_of(graph, taken))):
+    if len(loops_of(graph, state_of(graph, taken))):
         opened, proved = _opened(graph, tasks, stop)
         if opened is not None:
-            taken, words = opened, "found by satisfiability in layers of length, no loop closed"
+            taken = negotiation.shortened(opened, careful=True)
+            words = "found by satisfiability in layers of length, no loop closed"
         elif proved:
             words += "; all routes that are not much longer leave a closed loop beside them"
         else:
@@ -422,30 +245,13 @@ def _refused_at_once(wishes: Sequence[Wish]) -> tuple[str, str, tuple[Wish, ...]
     return None
 
 
-def _loops(graph: RouteGraph, used: np.ndarray) -> list[list[tuple[int, int]]]:
-    """Loops that no states of the unused cells open, each as (lot, state): those of the routes alone, or others.
-
-    used : int (R,), 0, 1, -1: free or split
-    """
-    state = used
-    loops, label = closed_loops(graph, used)
-    if not loops:
-        complete = unused_states(graph, np.where(used >= 0, used, np.nan).astype(float), policy="cross")
-        if not complete.loops:
-            return []
-        state = np.where(np.isnan(complete.share), -1, complete.share).astype(np.int32)
-        loops, label = closed_loops(graph, state)
-    cells = [np.unique(np.flatnonzero(label == k) >> 2).tolist() for k in range(loops)]
-    return [[(int(graph.lot[r]), int(state[r])) for r in ring] for ring in cells]
-
-
 def _opened(graph: RouteGraph, tasks: Sequence[Task], stop: float) -> tuple[list[Taken] | None, bool]:
     """The same routes by ways that close no loop; whether there are proved to be none."""
     if any(len(t.sinks) > 1 or t.goal is not None for t in tasks):
         return None, False
 
     def rings(ways: tuple[tuple[Passes, ...], ...]) -> list[list[tuple[int, int]]]:
-        return _loops(graph, _state_of(graph, _taken(graph, ways)))
+        return loops_of(graph, state_of(graph, _taken(graph, ways)))
 
     demands = [Demand(task.node, task.sinks) for task in tasks]
     ways, proved = without_rings(graph, demands, rings, min(MOST_OPENING_S, stop - time.monotonic()))
@@ -484,7 +290,7 @@ def _decided(
 
     def tried(subset: Sequence[int]) -> bool:
         chosen = [tasks[d] for d in subset]
-        quick = _Negotiation(search, chosen, np.ones(len(chosen)), seed, stop)
+        quick = Negotiation(search, chosen, np.ones(len(chosen)), seed, stop)
         return quick.run(12, 1) is not None
 
     verdict = decide(graph, demands, max(stop - time.monotonic(), 0.0), tried=tried)
@@ -499,7 +305,7 @@ def _taken(graph: RouteGraph, ways: Sequence[tuple[Passes, ...]]) -> list[Taken]
     out = []
     for by_sink in ways:
         cut = tuple(_until_out(graph, way) for way in by_sink)
-        out.append(Taken(cut, _needs(graph, cut)))
+        out.append(Taken(cut, needs_of(graph, cut)))
     return out
 
 
@@ -531,7 +337,7 @@ def _settled(
     words: str,
     counts: dict[str, int],
 ) -> Routing:
-    state = _state_of(graph, taken)
+    state = state_of(graph, taken)
     share = np.where(state >= 0, state, np.nan).astype(float)
     entering = np.zeros(len(share), np.int32)
     routes: dict[tuple[str, str], Route] = {}
@@ -547,7 +353,7 @@ def _settled(
         for name in wish.sinks:
             known = routes.get((wish.source, name))
             everything.append(known or _route(graph, wish, name, graph.source(wish.source), ()))
-    counts = {**counts, "cells_used": int((~np.isnan(share)).sum()), "loops_left": len(_loops(graph, state))}
+    counts = {**counts, "cells_used": int((~np.isnan(share)).sum()), "loops_left": len(loops_of(graph, state))}
     return Routing(graph, tuple(wishes), "found", words, tuple(everything), share, entering, counts=counts)
 
 
