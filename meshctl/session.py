@@ -90,7 +90,14 @@ class Session:
 
     def predict(self, wavelengths_nm: np.ndarray | None = None) -> Prediction:
         """What the chip does with the codes of the plan in hand."""
-        return predict(self.mesh, self._in_hand(), wavelengths_nm)
+        plan = self._in_hand()
+        prediction = predict(self.mesh, plan, wavelengths_nm)
+        response = Chip(self.mesh).response_at(plan.codes)
+        if response.loops:
+            from meshctl.mesh.ringing import ringing
+
+            self.remarks += [str(loop) for loop in ringing(response, prediction.actual, wavelengths_nm)]
+        return prediction
 
     def port_pair(self, words: str, option: str) -> tuple[str, str]:
         """IN:OUT as two port names of the mesh."""
