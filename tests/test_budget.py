@@ -49,6 +49,11 @@ def test_budget_that_is_kept_says_nothing(run, chip):
     assert found["paths"][0]["loss_db"] == {"tether": pytest.approx(0.5, abs=1e-12)}
 
 
+def test_loss_elements_count_with_their_value(run, chip):
+    path = checked(run, chip(chain("loss", 3, "{loss_db = 0.25}")))["paths"][0]
+    assert path["loss_db"] == {"loss": pytest.approx(0.75, abs=1e-12)}
+
+
 def test_sum_of_kinds_exceeds_the_budget(run, chip, lattice_toml):
     more = "[coupler]\nloss_db = 0.1\n[guide]\nloss_db_per_cm = 2.0\n[budget]\nloss_db = 1.0\n"
     found = checked(run, chip(lattice_toml(modes=4, more=more)))
@@ -118,6 +123,18 @@ def test_loops_take_the_way_of_least_loss(run, chip):
         assert p["counts"]["coupler"] == 2 * p["guide_mm"]
         assert p["least_db"] == pytest.approx(0.4 * p["guide_mm"], abs=1e-9)
     assert all(pairs[b, a]["least_db"] == pytest.approx(p["least_db"]) for (a, b), p in pairs.items())
+
+
+def test_way_of_more_parts_may_lose_less(run, chip):
+    toml = (
+        f'{HEAD}elements = [["k", "coupler"], ["t1", "tether", {{loss_db = 0.02}}], ["t2", "tether", '
+        '{loss_db = 0.005}], ["t3", "tether", {loss_db = 0.006}], ["t4", "tether", {loss_db = 0.007}], '
+        '["j", "coupler"]]\n'
+        'links = ["p1 k.a1", "k.b1 t1.a", "t1.b j.a1", "k.b2 t2.a", "t2.b t3.a", "t3.b t4.a", "t4.b j.a2", "j.b1 p2"]\n'
+    )
+    found = {(p["input"], p["output"]): p for p in checked(run, chip(toml))["paths"]}
+    assert found["p1", "p2"]["counts"] == {"coupler": 2, "tether": 3}
+    assert found["p1", "p2"]["least_db"] == pytest.approx(0.018, abs=1e-9)
 
 
 def test_mirrors_may_turn_the_way_back(run, chip):

@@ -241,15 +241,15 @@ def test_loop_free_nets_agree_both_ways(cell):
 
 def test_lanes_without_couplers_are_followed(chip):
     toml = (
-        'format = 1\nname = "t"\nwavelength_nm = 1550.0\ninputs = ["i1", "i2"]\noutputs = ["o1", "o2"]\n'
+        'format = 1\nname = "t"\nwavelength_nm = 1550.0\ninputs = ["i1", "i2", "i3"]\noutputs = ["o1", "o2", "o3"]\n'
         'elements = [["g", "guide", {length_um = 100.0}], ["p", "phase", {phase_rad = 0.3}], ["l", "loss", '
-        '{loss_db = 2.0}], ["m", "mirror", {reflected_power = 0.0001}]]\n'
-        'links = ["i1 g.a", "g.b p.a", "p.b o1", "i2 l.a", "l.b m.a", "m.b o2"]\n'
+        '{loss_db = 2.0}], ["m", "mirror", {reflected_power = 0.0001}], ["n", "loss", {loss_db = 3.0}]]\n'
+        'links = ["i1 g.a", "g.b p.a", "p.b o1", "i2 l.a", "l.b m.a", "m.b o2", "i3 n.a", "n.b o3"]\n'
     )
     mesh = load(chip(toml))
     found = response(mesh).matrix(np.zeros(0))
-    # by hand: exp(0.3 i) at the centre; 2 dB and sqrt(1 - r^2); the lanes do not mix
-    expected = np.diag([np.exp(0.3j), 10 ** (-2 / 20) * np.sqrt(1 - 0.0001)])
+    # by hand: exp(0.3 i) at the centre; 2 dB and sqrt(1 - r^2); 3 dB; the lanes do not mix
+    expected = np.diag([np.exp(0.3j), 10 ** (-2 / 20) * np.sqrt(1 - 0.0001), 10 ** (-3 / 20)])
     assert np.abs(found - expected).max() < 1e-14
 
 

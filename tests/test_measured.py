@@ -1,5 +1,6 @@
 """Parts measured or computed by others: Touchstone and CSV files in a mesh, and what is refused of them."""
 
+import json
 import sys
 
 import numpy as np
@@ -194,7 +195,36 @@ def test_measured_part_may_be_inserted(chip):
     assert found.sum() == pytest.approx(1 - 0.4**2, abs=1e-12)
 
 
+def test_nearly_reciprocal_part_is_made_so(chip):
+    folder = two(chip, "k.s2p")
+    s = 0.9 * cavity(THZ, r=0.0, ours=False)
+    s[:, 0, 1] *= 1.0006
+    touchstone(folder / "k.s2p", s)
+    # the mean of both ways; 0.0005 apart is what a measurement may be
+    assert np.abs(np.abs(matrix(folder, nm_from_thz(THZ[5:8]))) - 0.9 * 1.0003).max() < 1e-9
+
+
+def test_measured_loss_counts_in_the_budget(run, chip):
+    folder = four(chip, "k.s4p")
+    touchstone(folder / "k.s4p", coupler(THZ, ours=False))
+    code, said, _ = run("check", folder, "--json")
+    path = json.loads(said)["paths"][0]
+    assert code == 0
+    # 0.99 of the field leaves by both ports together: 0.0873 dB, however it is split
+    assert path["loss_db"] == {"measured": pytest.approx(-20 * np.log10(0.99), abs=1e-9)}
+
+
 # ---- what is refused
+def test_part_active_between_points_is_refused(run, chip):
+    folder = two(chip, "k.s2p")
+    # passes and returns 0.6 each, 67 degrees apart one way and then the other: passive, but not on the way from one
+    # to the other, where both add up to 1.2
+    apart = np.where(np.arange(len(THZ)) % 2, 1.0, -1.0) * np.deg2rad(68)
+    s = 0.6 * np.array([[[np.exp(1j * a), 1], [1, np.exp(1j * a)]] for a in np.r_[apart[:2]]])
+    touchstone(folder / "k.s2p", s, THZ[:2])
+    refused(run, folder, "the part makes light: between points, at ", "measure at closer wavelengths")
+
+
 def refused(run, folder, *said):
     code, _, remarks = run("check", folder)
     assert code == 3, remarks

@@ -122,6 +122,15 @@ def test_two_gaps_make_an_airy_cavity(chip, kind):
     assert np.abs(np.abs(found) ** 2 - airy).max() < EXACT
 
 
+def test_mirror_returns_with_its_phase(chip):
+    toml = explicit(
+        ['["m", "mirror", {loss_db = 6.0, reflected_power = 0.2, reflection_rad = 1.0}]'], ["p1 m.a", "p2 m.b"]
+    )
+    found = light(chip(toml.replace('inputs = ["i1"]\noutputs = ["o1"]\n', "")))
+    r, t = np.sqrt(0.2) * np.exp(1j), 10 ** (-6 / 20)
+    assert np.abs(found - np.array([[r, t], [t, r]])).max() < 1e-15
+
+
 def test_terminator_returns_light_through_the_loop(chip):
     toml = explicit(
         ['["k", "coupler"]', '["e", "terminator", {reflection_db = 20.0, reflection_rad = 0.3}]'],

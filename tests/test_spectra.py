@@ -95,6 +95,19 @@ def test_dips_are_found_and_chosen():
     assert feature_of(upside, thz, "peak").free_spectral_range_ghz == pytest.approx(50, rel=1e-6)
 
 
+def test_ripple_is_no_feature():
+    light, _ = airy(0.9, 0.05)
+
+    def rippled(thz):
+        power, slope = light(thz)
+        turn = 2 * np.pi * thz / 0.007
+        return power + 0.02 * np.sin(turn), slope + 0.02 * np.cos(turn) * 2 * np.pi / 0.007
+
+    found = feature_of(rippled, np.linspace(193.0, 193.2, 4001))
+    # four peaks of the cavity, none of the 28 of the ripple
+    assert len(found.thz) == 4
+
+
 def test_narrow_features_are_said_to_be():
     light, _ = airy(0.99, 0.05)
     assert feature_of(light, np.linspace(193.0, 193.4, 4001)).narrow is False
@@ -243,6 +256,19 @@ def test_spectrum_rows_hold_all_columns(run, ring, tmp_path):
     assert [float(r["power_db"]) for r in rows] == pytest.approx(20 * np.log10(np.abs(field)), abs=1e-6)
     expected = delay_ps(Response(mesh.net, mesh.as_built), plan.actual, waves)[:, out, into]
     assert [float(r["group_delay_ps"]) for r in rows] == pytest.approx(expected, rel=1e-9)
+
+
+def test_one_pair_of_a_loop_free_mesh(run, chip, lattice_toml, tmp_path):
+    folder = chip(lattice_toml(modes=4, more="[guide]\nn_eff = 2.44\nn_group = 4.2\n"))
+    assert run("solve", folder, "haar:3", "-o", tmp_path / "p.json")[0] == 0
+    words = ("--wavelengths", "1549:1551:3", "-o", tmp_path / "s.csv")
+    found = []
+    for between in ((), ("--between", "in2:out3")):
+        assert run("predict", folder, tmp_path / "p.json", *words, *between)[0] == 0
+        with (tmp_path / "s.csv").open(newline="") as lines:
+            found.append([r for r in csv.DictReader(lines) if (r["input"], r["output"]) == ("in2", "out3")])
+    assert found[0] == found[1]
+    assert len(found[0]) == 3
 
 
 def test_figure_is_a_picture(run, ring, tmp_path):
