@@ -117,6 +117,8 @@ def test_narrow_features_are_said_to_be():
 def test_flat_and_single_features_are_honest():
     light, _ = airy(0.9, 0.05)
     assert feature_of(lambda f: (np.ones_like(f), np.zeros_like(f)), np.linspace(193.0, 193.4, 50)) is None
+    nearly = lambda f: (1 + 1e-3 * light(f)[0], 1e-3 * light(f)[1])  # noqa: E731, 0.004 dB
+    assert feature_of(nearly, np.linspace(193.0, 193.4, 501)) is None
     alone = feature_of(light, np.linspace(193.0, 193.03, 500))
     assert len(alone.thz) == 1
     assert np.isnan(alone.free_spectral_range_ghz)
