@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 __version__ = "0.1.0"
 
 if TYPE_CHECKING:  # pragma: no cover
-    from meshctl.api import predict, solve
+    from meshctl.api import predict, route, solve
     from meshctl.mesh.graph import Mesh
     from meshctl.mesh.meshfile import lattice, load, write
     from meshctl.plan.pipeline import Prediction
@@ -22,6 +22,7 @@ _HOMES = {
     "lattice": "meshctl.mesh.meshfile",
     "write": "meshctl.mesh.meshfile",
     "solve": "meshctl.api",
+    "route": "meshctl.api",
     "predict": "meshctl.api",
     "Mesh": "meshctl.mesh.graph",
     "Plan": "meshctl.plan.plan",
@@ -29,7 +30,7 @@ _HOMES = {
     "Target": "meshctl.solver.target",
 }
 
-__all__ = ["Mesh", "Plan", "Prediction", "Target", "lattice", "load", "predict", "solve", "write"]
+__all__ = ["Mesh", "Plan", "Prediction", "Target", "lattice", "load", "predict", "route", "solve", "write"]
 
 
 def __getattr__(name: str) -> Any:

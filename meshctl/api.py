@@ -1,10 +1,11 @@
 """The Python interface: the same calls as the commands, on objects in place of files.
 
-Public: solve, predict.
+Public: solve, route, predict.
 """
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Sequence
 from typing import Any
 
 import numpy as np
@@ -65,6 +66,55 @@ def solve(
     return pipeline.solve(mesh, target, best_effort=best_effort, least_power=least_power, effort=effort)
 
 
+def route(
+    mesh: Mesh,
+    wishes: Iterable[str],
+    *,
+    avoid: Iterable[str] = (),
+    priorities: Sequence[float] | None = None,
+    unused: str = "",
+    band: str = "",
+    best_effort: bool = False,
+    seconds: float = 10.0,
+    seed: int = 0,
+) -> Plan:
+    """Voltages for routes and splits.
+
+    Parameters
+    ----------
+    mesh : Mesh
+    wishes : such as "in1:out3", "in2:out1=0.7,out4=0.3", "p1:p9@12cells" or "p1:p9@85ps"
+    avoid : cells and fixed parts by name that no route may pass
+    priorities : a number for each wish; those of lowest priority are left out where not all go together
+    unused : state of cells that no route needs: cross, bar, cleanest, rest; "": what gives least ripple
+    band : wavelengths of the check, such as "1540:1560:201"; "": 10 nm to either side of the centre
+    best_effort : leave out what does not go together, and hold actuators at their limits, rather than raise
+    seconds, seed : of the search and the proof
+
+    Returns
+    -------
+    Plan; `plan.routes` lists what arrives at each output
+
+    Raises
+    ------
+    NoRoutes, WrongUsage, VoltageOutOfRange, ..
+
+    Example
+    -------
+    >>> import meshctl
+    >>> plan = meshctl.route(meshctl.lattice("rectangular", modes=4), ["in1:out3", "in2:out1"])
+    >>> [r["output"] for r in plan.routes]
+    ['out3', 'out1']
+    """
+    from meshctl.plan import switching
+
+    if isinstance(wishes, str):
+        wishes = [wishes]
+    rank = None if priorities is None else tuple(float(p) for p in priorities)
+    asked = switching.RouteTarget(tuple(wishes), tuple(avoid), rank, unused, seed, seconds, band, best_effort)
+    return switching.route(mesh, asked)
+
+
 def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *, stale_ok: bool = False) -> np.ndarray:
     """The matrix that a plan's codes give.
 
@@ -83,4 +133,8 @@ def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *,
     """
     check_fresh(mesh, plan, stale_ok=stale_ok)
     wavelengths = None if wavelengths_nm is None else np.atleast_1d(np.asarray(wavelengths_nm, float))
+    if plan.is_routes:
+        from meshctl.plan.switching import predict_routes
+
+        return predict_routes(mesh, plan, wavelengths)[0].matrix
     return pipeline.predict(mesh, plan, wavelengths).matrix

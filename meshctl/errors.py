@@ -108,6 +108,21 @@ class NoClosedForm(OutOfReach):
     """No direct construction exists for this net and this target."""
 
 
+class NoRoutes(OutOfReach):
+    """Routes that are impossible together, or that were not found.
+
+    Parameters
+    ----------
+    status : a key of solver.route.STATUSES
+    conflict : the fewest routes that cannot go together, by name
+    proof : "complete", "bounded" or "none"
+    """
+
+    def __init__(self, what: str, *, status: str, conflict: Sequence[str], proof: str, remedy: str = "") -> None:
+        self.status, self.conflict, self.proof = status, tuple(conflict), proof
+        super().__init__(what, remedy=remedy)
+
+
 class LoopInNet(OutOfReach):
     """A net with loops or reflections where a light order is needed."""
 

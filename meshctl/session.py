@@ -11,7 +11,7 @@ import sys
 import time
 from collections.abc import Iterator
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -29,8 +29,23 @@ from meshctl.plan.pipeline import Effort, Prediction, predict, solve
 from meshctl.plan.placing import require_sound_crosstalk
 from meshctl.plan.plan import Plan, check_fresh, plan_text, read_plan
 from meshctl.plan.spectrum import Spectrum, features, spectrum
+from meshctl.plan.states import (
+    Difference,
+    StateRow,
+    compare,
+    listed_states,
+    load_state,
+    renew_state,
+    save_state,
+    state_file,
+    state_names,
+)
 from meshctl.solver.target import Target, read_target
 from meshctl.units import db_array
+
+if TYPE_CHECKING:  # pragma: no cover
+    from meshctl.plan.signals import Signal
+    from meshctl.plan.switching import RouteTarget
 
 DEMO_MESH = "plover8"
 SPECTRUM_HEAD = (
@@ -57,6 +72,7 @@ class Session:
     def __init__(self, folder: str | Path) -> None:
         self.mesh: Mesh = load(folder)
         self.plan: Plan | None = None
+        self.signals: list[Signal] = []  # of the last prediction, for plans that ask for routes
         self.remarks: list[str] = []
         self.seconds = 0.0
 
@@ -67,11 +83,41 @@ class Session:
         return inventory(self.mesh)
 
     def open_plan(self, path: str | Path, *, stale_ok: bool = False) -> Plan:
-        """Take a plan file in hand; refuse one made for other physics."""
+        """Take a plan file, or a state of the mesh folder by name, in hand; refuse one made for other physics."""
+        if not Path(path).exists() and str(path) in state_names(self.mesh):
+            return self.open_state(str(path), stale_ok=stale_ok)
         plan = read_plan(path)
         self.remarks += check_fresh(self.mesh, plan, stale_ok=stale_ok, where=str(path))
         self.plan = plan
         return plan
+
+    # ---- states
+    def states(self) -> list[StateRow]:
+        """All named states of the mesh folder."""
+        return listed_states(self.mesh)
+
+    def open_state(self, name: str, *, stale_ok: bool = False) -> Plan:
+        """Take a named state in hand."""
+        self.plan, remarks = load_state(self.mesh, name, stale_ok=stale_ok)
+        self.remarks += remarks
+        return self.plan
+
+    def check_state_name(self, name: str) -> None:
+        """Refuse a name that no state can have, before any work is done."""
+        state_file(self.mesh, name)
+
+    def save_state(self, name: str) -> Path:
+        """Keep the plan in hand by name."""
+        return save_state(self.mesh, name, self._in_hand())
+
+    def renew_state(self, name: str) -> Plan:
+        """Solve a state's wish again on the mesh as it is now."""
+        self.plan = renew_state(self.mesh, name)
+        return self.plan
+
+    def difference(self, before: Plan, after: Plan) -> Difference:
+        """Which cells and channels change from one plan to another, and what switching costs."""
+        return compare(self.mesh, before, after)
 
     # ---- working
     def target(self, words: str, free: str = "nothing") -> Target:
@@ -88,10 +134,24 @@ class Session:
         self.seconds = time.perf_counter() - started
         return self.plan
 
+    def route(self, asked: RouteTarget) -> Plan:
+        """Volts and codes for routes and splits."""
+        from meshctl.plan.switching import route
+
+        started = time.perf_counter()
+        self.plan = route(self.mesh, asked)
+        self.seconds = time.perf_counter() - started
+        return self.plan
+
     def predict(self, wavelengths_nm: np.ndarray | None = None) -> Prediction:
-        """What the chip does with the codes of the plan in hand."""
+        """What the chip does with the codes of the plan in hand; for routes also the signals at their outputs."""
         plan = self._in_hand()
-        prediction = predict(self.mesh, plan, wavelengths_nm)
+        if plan.is_routes:
+            from meshctl.plan.switching import predict_routes
+
+            prediction, self.signals = predict_routes(self.mesh, plan, wavelengths_nm)
+        else:
+            prediction = predict(self.mesh, plan, wavelengths_nm)
         response = Chip(self.mesh).response_at(plan.codes)
         if response.loops:
             from meshctl.mesh.ringing import ringing

@@ -85,12 +85,16 @@ def show(words: Namespace) -> int:
 
 def solve(words: Namespace) -> int:
     session = Session(words.mesh)
+    if words.save:
+        session.check_state_name(words.save)
     target = session.target(words.target, words.free)
     with Watch("refining") as watch:
         effort = Effort(words.refine, words.starts, words.seconds, words.seed, watch.progress, watch.stopped)
         plan = session.solve(target, best_effort=words.best_effort, least_power=words.least_power, effort=effort)
     if words.out:
         session.write_plan(words.out)
+    if words.save:
+        session.save_state(words.save)
     if words.json:
         _json(printing.plan_entry(session.mesh, plan, session.seconds))
     else:
@@ -98,6 +102,18 @@ def solve(words: Namespace) -> int:
         print(printing.plan_summary(plan))
         _remark(plan.warnings)
     return INTERRUPTED if watch.interrupted else DONE
+
+
+def route(words: Namespace) -> int:
+    from meshctl.cli import switching
+
+    return switching.route(words)
+
+
+def states(words: Namespace) -> int:
+    from meshctl.cli import switching
+
+    return switching.states(words)
 
 
 def predict(words: Namespace) -> int:
@@ -128,8 +144,8 @@ def predict(words: Namespace) -> int:
         spectrum_figure(session.spectrum(wavelengths, drawn), words.figure, session.mesh.name, feature, pair)
     _remark(session.remarks)
     if words.json:
-        return _json(printing.prediction_entry(session.mesh, plan, prediction, feature))
-    print(printing.prediction_text(session.mesh, plan, prediction, feature))
+        return _json(printing.prediction_entry(session.mesh, plan, prediction, feature, session.signals))
+    print(printing.prediction_text(session.mesh, plan, prediction, feature, session.signals))
     return DONE
 
 

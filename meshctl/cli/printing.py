@@ -7,7 +7,8 @@ from __future__ import annotations
 
 import dataclasses
 import math
-from typing import Any, NoReturn
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import numpy as np
 
@@ -20,6 +21,9 @@ from meshctl.plan.energy import Energy
 from meshctl.plan.pipeline import Prediction
 from meshctl.plan.plan import Plan
 from meshctl.solver.solution import REASONS
+
+if TYPE_CHECKING:  # pragma: no cover
+    from meshctl.plan.signals import Signal
 
 
 def finite(entry: Any) -> Any:
@@ -65,14 +69,22 @@ def _actuator_rows(mesh: Mesh, plan: Plan) -> list[dict[str, Any]]:
 
 
 def plan_entry(mesh: Mesh, plan: Plan, seconds: float) -> dict[str, Any]:
-    """The JSON object of `solve`."""
+    """The JSON object of `solve` and of `route`."""
+    if plan.is_routes:
+        asked: dict[str, Any] = {
+            "power_error": plan.power_error,
+            "insertion_loss_db": {f"{r['input']}:{r['output']}": r["insertion_loss_db"] for r in plan.routes},
+            "routes": plan.routes,
+            "search": plan.search,
+        }
+    else:
+        asked = {"fidelity": plan.fidelity, "matrix_error": plan.matrix_error}
     return finite(
         {
             "mesh": mesh.name,
             "mesh_hash": plan.mesh_hash,
             "target": {k: v for k, v in plan.target.items() if k not in ("real", "imag")},
-            "fidelity": plan.fidelity,
-            "matrix_error": plan.matrix_error,
+            **asked,
             "continuous": plan.continuous,
             "throughput": plan.throughput,
             "throughput_per_input": plan.throughput_per_input,
@@ -109,6 +121,8 @@ def plan_table(mesh: Mesh, plan: Plan) -> str:
 
 def plan_summary(plan: Plan) -> str:
     """How near the chip comes and why not nearer."""
+    if plan.is_routes:
+        return _routes_summary(plan)
     worst = min(plan.throughput_per_input)
     power = float(plan.power_mw.sum())
     share = 100.0 * plan.saved_mw / (power + plan.saved_mw) if plan.saved_mw else 0.0
@@ -121,6 +135,29 @@ def plan_summary(plan: Plan) -> str:
         f"reason        {plan.reason}: {REASONS[plan.reason]}",
     ]
     return "\n".join(lines)
+
+
+def _routes_summary(plan: Plan) -> str:
+    """What arrives where, at the centre and at worst over the band."""
+    from meshctl.cli.switching import signal_table
+
+    found = plan.search
+    left = f", {found['loops']} closed loops left" if found.get("loops") else ""
+    lines = [
+        "",
+        *signal_table(plan.routes),
+        "",
+        f"power error   {plan.power_error:.3e}     (before limits and codes {plan.continuous['power_error']:.3e})",
+        f"power         {float(plan.power_mw.sum()):.1f} mW",
+        f"free cells    {found.get('unused')}: {found.get('turned')} turned to open loops{left}, "
+        f"{found.get('driven')} change state without drive",
+        f"reason        {plan.reason}: {REASONS[plan.reason]} {_sentence(found.get('words', ''))}",
+    ]
+    return "\n".join(lines)
+
+
+def _sentence(words: str) -> str:
+    return f"{words[:1].upper()}{words[1:]}." if words else ""
 
 
 # ---- predictions
@@ -145,17 +182,26 @@ def feature_text(feature: Feature) -> str:
     return "\n".join(f"{line[:14]}not in range" if "nan" in line else line for line in lines)
 
 
-def prediction_entry(mesh: Mesh, plan: Plan, prediction: Prediction, feature: Feature | None = None) -> dict[str, Any]:
+def prediction_entry(
+    mesh: Mesh,
+    plan: Plan,
+    prediction: Prediction,
+    feature: Feature | None = None,
+    signals: Sequence[Signal] = (),
+) -> dict[str, Any]:
     """The JSON object of `predict`."""
     waves = prediction.wavelengths_nm
+    if plan.is_routes:
+        near: dict[str, Any] = {"routes": [dict(vars(signal)) for signal in signals]}
+    else:
+        near = {"fidelity": prediction.fidelity, "matrix_error": prediction.matrix_error}
     return finite(
         {
             "mesh": mesh.name,
             "mesh_hash": mesh.hash,
             "target": {k: v for k, v in plan.target.items() if k not in ("real", "imag")},
             "wavelengths_nm": None if waves is None else waves.tolist(),
-            "fidelity": prediction.fidelity,
-            "matrix_error": prediction.matrix_error,
+            **near,
             "throughput": prediction.throughput,
             "throughput_per_input": prediction.throughput_per_input.tolist(),
             "power_mw": float(prediction.power_mw.sum()),
@@ -168,17 +214,28 @@ def prediction_entry(mesh: Mesh, plan: Plan, prediction: Prediction, feature: Fe
     )
 
 
-def prediction_text(mesh: Mesh, plan: Plan, prediction: Prediction, feature: Feature | None = None) -> str:
-    """Fidelity and throughput; for few ports also the power matrix in dB."""
+def prediction_text(
+    mesh: Mesh,
+    plan: Plan,
+    prediction: Prediction,
+    feature: Feature | None = None,
+    signals: Sequence[Signal] = (),
+) -> str:
+    """Fidelity and throughput, or what arrives by each route; for few ports also the power matrix in dB."""
     waves = prediction.wavelengths_nm
     at = f"{mesh.net.wavelength_nm:g} nm" if waves is None else f"{waves[0]:g} to {waves[-1]:g} nm, {len(waves)} points"
-    lines = [
-        f"mesh          {mesh.name} at {at}",
-        f"target        {plan.target.get('source', '')} (free phases: {plan.target.get('free', 'nothing')})",
-        f"fidelity      {prediction.fidelity:.9f}",
-        f"matrix error  {prediction.matrix_error:.3e}",
-        f"throughput    {prediction.throughput:.4f}",
-    ]
+    lines = [f"mesh          {mesh.name} at {at}"]
+    if plan.is_routes:
+        from meshctl.cli.switching import signal_table
+
+        lines += [f"target        {plan.target.get('source', '')}", "", *signal_table(signals), ""]
+    else:
+        lines += [
+            f"target        {plan.target.get('source', '')} (free phases: {plan.target.get('free', 'nothing')})",
+            f"fidelity      {prediction.fidelity:.9f}",
+            f"matrix error  {prediction.matrix_error:.3e}",
+        ]
+    lines.append(f"throughput    {prediction.throughput:.4f}")
     if waves is None and max(prediction.matrix.shape) <= 16:
         lines.append(_power_table(mesh, prediction.matrix))
     else:

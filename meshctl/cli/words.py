@@ -49,7 +49,7 @@ def parser() -> argparse.ArgumentParser:
     """The parser of all commands."""
     top = _Parser(
         prog="meshctl",
-        description="From a wished matrix to drive voltages on a programmable photonic chip.",
+        description="From a wished matrix, routes or a power split to drive voltages on a programmable photonic chip.",
         epilog=EPILOG,
         allow_abbrev=False,
     )
@@ -112,6 +112,44 @@ def parser() -> argparse.ArgumentParser:
     solve.add_argument("--seed", type=_whole(0), default=0, metavar="SEED", help="of the further starts")
     solve.add_argument("--least-power", action="store_true", help="use what the matrix does not see to save power")
     solve.add_argument("--best-effort", action="store_true", help="hold what is out of reach at its limit")
+
+    solve.add_argument("--save", metavar="NAME", help="keep the plan as a state of the mesh folder")
+
+    route = verb(
+        "route",
+        "voltages that send light from ports to ports, or divide it",
+        "meshctl route meshes/plover8 in1:out3 in2:out1=0.7,out5=0.3 -o plan.json",
+    )
+    route.add_argument("mesh", metavar="MESH")
+    route.add_argument(
+        "routes", metavar="IN:OUT", nargs="+", help="IN:OUT, IN:OUT=SHARE,OUT=SHARE, IN:OUT@12cells, IN:OUT@85ps"
+    )
+    route.add_argument("-o", "--out", metavar="PLAN", help="write the plan to this file")
+    route.add_argument("--save", metavar="NAME", help="keep the plan as a state of the mesh folder")
+    route.add_argument("--avoid", metavar="CELL,..", default="", help="cells and fixed parts that no route may pass")
+    route.add_argument(
+        "--priorities", metavar="P,..", help="a number for each route; the lowest are left out where not all go"
+    )
+    route.add_argument(
+        "--unused", choices=("cross", "bar", "cleanest", "rest"), default="", help="state of cells that no route needs"
+    )
+    route.add_argument(
+        "--band", metavar="FROM:TO:COUNT", default="", help="wavelengths of the check, default 10 nm either side"
+    )
+    route.add_argument("--seconds", type=_positive, default=10.0, metavar="S", help="of search and proof together")
+    route.add_argument("--seed", type=_whole(0), default=0, metavar="SEED", help="of the order in which routes go")
+    route.add_argument("--best-effort", action="store_true", help="leave out what does not go together")
+
+    states = verb(
+        "states",
+        "named states of a mesh folder: list, show, compare, solve again",
+        "meshctl states meshes/dunlin through 'in1>drop1'",
+    )
+    states.add_argument("mesh", metavar="MESH")
+    states.add_argument("name", metavar="NAME", nargs="?", help="show this state")
+    states.add_argument("other", metavar="OTHER", nargs="?", help="and what changes from it to this one")
+    states.add_argument("--renew", metavar="NAME", help="solve this state's wish again, or all of them: all")
+    _stale(states)
 
     predict = verb(
         "predict",

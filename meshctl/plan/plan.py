@@ -26,6 +26,9 @@ ARRAYS = {
     "power_mw": "n_actuators",
     "headroom_v": "n_channels",
 }
+ROUTES = "routes"  # kind of a target that asks for routes
+ROUTE_KEYS = {"input", "output", "share", "cells"}  # of every route
+OPTIONAL = ("power_error", "routes", "search")  # keys that only plans for routes have
 
 
 @dataclass(frozen=True, eq=False)
@@ -33,7 +36,8 @@ class Plan:
     """What `solve` and `route` return; all arrays are read-only.
 
     `fidelity`, `matrix_error` and the throughputs come from the codes through the forward path, all known
-    errors in; `continuous` holds fidelity and matrix_error before limits and codes.
+    errors in; `continuous` holds fidelity and matrix_error before limits and codes. Routes ask for no
+    matrix: there the two are NaN (null in the file), and `power_error` takes their place, in `continuous` too.
     """
 
     mesh_name: str
@@ -56,6 +60,14 @@ class Plan:
     saved_mw: float = 0.0  # heater power that free gauges saved
     seed: int = 0
     version: str = __version__
+    power_error: float | None = None  # largest difference of an output's power from the wished one
+    routes: list[dict[str, Any]] = field(default_factory=list)  # one for each output, see plan.signals
+    search: dict[str, Any] = field(default_factory=dict)  # how the routes were found, and what free cells do
+
+    @property
+    def is_routes(self) -> bool:
+        """True where light was sent from ports to ports, False where a matrix was asked for."""
+        return self.target.get("kind") == ROUTES
 
     def _repr_html_(self) -> str:
         from html import escape
@@ -63,8 +75,7 @@ class Plan:
         rows = (
             ("mesh", self.mesh_name),
             ("target", str(self.target.get("source", ""))),
-            ("fidelity", f"{self.fidelity:.9f}"),
-            ("matrix error", f"{self.matrix_error:.3g}"),
+            *self._nearness(),
             ("throughput", f"{self.throughput:.4f}"),
             ("power", f"{float(self.power_mw.sum()):.1f} mW"),
             ("reason", self.reason),
@@ -72,12 +83,20 @@ class Plan:
         body = "".join(f"<tr><th>{name}</th><td>{escape(value)}</td></tr>" for name, value in rows)
         return f"<table><caption>plan for {escape(self.mesh_name)}</caption>{body}</table>"
 
+    def _nearness(self) -> list[tuple[str, str]]:
+        if self.is_routes:
+            return [("power error", f"{self.power_error:.3g}")]
+        return [("fidelity", f"{self.fidelity:.9f}"), ("matrix error", f"{self.matrix_error:.3g}")]
+
 
 def plan_text(plan: Plan) -> str:
     """The plan as JSON, in columns; numbers are written so that they read back equal."""
     entry: dict[str, Any] = {"format": FORMAT}
     for name, value in vars(plan).items():
-        entry[name] = value.tolist() if isinstance(value, np.ndarray) else value
+        if name not in OPTIONAL or value:
+            entry[name] = value.tolist() if isinstance(value, np.ndarray) else value
+    if plan.is_routes:
+        entry |= {"fidelity": None, "matrix_error": None, "power_error": plan.power_error}
     return json.dumps(entry, allow_nan=False, indent=None, separators=(",", ":")) + "\n"
 
 
@@ -96,6 +115,24 @@ def _array(entry: dict[str, Any], name: str, where: str) -> np.ndarray:
     if not np.isfinite(array).all():
         raise NotFinite(f"'{name}' holds NaN or infinity", where=where, remedy="solve again")
     return frozen(array)
+
+
+def _check_routes(entry: dict[str, Any], where: str) -> None:
+    """Refuse a plan for routes that names none; NaN takes the place of what routes do not have."""
+    words = entry["target"].get("words")
+    if not isinstance(words, list) or not words or not all(isinstance(w, str) for w in words):
+        raise UnsoundFile(f"'target.words' is {words!r}, must list routes", where=where, remedy="route again")
+    for name in OPTIONAL:
+        if name not in entry:
+            raise MissingRow(f"key '{name}' is missing", where=where, remedy="route again")
+    listed = entry["routes"]
+    if not isinstance(listed, list) or not all(isinstance(r, dict) and r.keys() >= ROUTE_KEYS for r in listed):
+        raise UnsoundFile(
+            f"'routes' must list objects with {', '.join(sorted(ROUTE_KEYS))}", where=where, remedy="route again"
+        )
+    if not isinstance(entry["search"], dict):
+        raise UnsoundFile(f"'search' is {entry['search']!r}, must be an object", where=where, remedy="route again")
+    entry |= {"fidelity": math.nan, "matrix_error": math.nan}
 
 
 def read_plan(path: str | Path) -> Plan:
@@ -121,14 +158,17 @@ def read_plan(path: str | Path) -> Plan:
         if name not in known:
             raise UnknownKey(f"key '{name}' is not known", where=where, remedy="remove it, or solve again")
     for name in known:
-        if name not in entry:
+        if name not in entry and name not in OPTIONAL:
             raise MissingRow(f"key '{name}' is missing", where=where, remedy="solve again")
-    for name in ("fidelity", "matrix_error", "throughput"):
+    if not isinstance(entry["target"], dict):
+        raise UnsoundFile(f"'target' is {entry['target']!r}, must be an object", where=where, remedy="solve again")
+    routes = entry["target"].get("kind") == ROUTES
+    if routes:
+        _check_routes(entry, where)
+    for name in ("power_error", "throughput") if routes else ("fidelity", "matrix_error", "throughput"):
         value = entry[name]
         if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
             raise NotFinite(f"'{name}' is {value!r}, must be a number", where=where, remedy="solve again")
-    if not isinstance(entry["target"], dict):
-        raise UnsoundFile(f"'target' is {entry['target']!r}, must be an object", where=where, remedy="solve again")
     for name in ARRAYS:
         entry[name] = _array(entry, name, where)
     return Plan(**entry)

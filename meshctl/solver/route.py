@@ -20,18 +20,13 @@ from meshctl.solver.lengths import goal_of
 from meshctl.solver.negotiate import Negotiation, Taken, Task, loops_of, needs_of, state_of
 from meshctl.solver.permute import permuter
 from meshctl.solver.search import FAR, Search
+from meshctl.solver.solution import REASONS
 from meshctl.solver.split import shares_of
 from meshctl.solver.waves import RouteGraph
 from meshctl.solver.wish import Wish, parse_wish
 
-# the closed list: how the search ended, a sentence each
-STATUSES = {
-    "found": "All routes were found.",
-    "partly": "Routes of lower priority were left out, as they stand in the way of others.",
-    "impossible": "Proved: no states of this chip give these routes.",
-    "impossible_within": "Proved within a bound only: no routes exist that are not much longer than their shortest.",
-    "not_found": "None were found in the time given, and none were proved impossible.",
-}
+# how the search ended, a sentence each
+STATUSES = {name: REASONS[name] for name in ("found", "partly", "impossible", "impossible_within", "not_found")}
 MOST_OPENING_S = 1.0  # for ways that leave no closed loop, where the first found do
 
 

@@ -23,6 +23,11 @@ REASONS = {
     "steps": "The refinement took all the steps it may; the best so far is given.",
     "time": "The time allowed ran out; the best so far is given.",
     "stopped": "It was stopped on request; the best so far is given.",
+    "found": "All routes were found.",
+    "partly": "Routes of lower priority were left out, as they stand in the way of others.",
+    "impossible": "Proved: no states of this chip give these routes.",
+    "impossible_within": "Proved within a bound only: no routes exist that are not much longer than their shortest.",
+    "not_found": "None were found in the time given, and none were proved impossible.",
 }
 
 
