@@ -5,7 +5,6 @@ Public: load, lattice, write, MESH_TOML.
 
 from __future__ import annotations
 
-import json
 import math
 import shutil
 from pathlib import Path
@@ -14,23 +13,19 @@ from typing import Any
 import numpy as np
 
 from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, WrongUsage
-from meshctl.laws import LAWS
-from meshctl.mesh.actuation import CHANNEL_NUMBERS, DRIVES, PARAM_NAMES
+from meshctl.mesh.actuation import PARAM_NAMES
 from meshctl.mesh.building import Tables, build_mesh
 from meshctl.mesh.description import MESH_TOML, Description, parse_description
 from meshctl.mesh.files import new_folder, write_whole
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.lattices import LATTICES, PLANE_SIZES
 from meshctl.mesh.quantities import QUANTITIES, Quantity
+from meshctl.mesh.rows import ACTUATOR_WORDS, CHANNEL_HEAD, CROSSTALK_HEAD, ELEMENT_HEAD, TABLE_HEAD, mesh_tables
 from meshctl.mesh.spread import drawn
 from meshctl.mesh.tables import Table, read_table, table_text, unknown_name
+from meshctl.mesh.toml_text import lattice_text
 from meshctl.optics.elements import COUPLER
 
-ELEMENT_HEAD = ("element", "error_rad", "loss_db", "stuck_rad", "sigma_rad")
-ACTUATOR_WORDS = ("actuator", "element", "channel", "law", "dead")
-CHANNEL_HEAD = ("channel", *CHANNEL_NUMBERS, "ground", "drives")
-TABLE_HEAD = ("actuator", "volts_v", "value_rad", "sigma_rad")
-CROSSTALK_HEAD = ("from", "to", "coefficient")
 KNOWN = {MESH_TOML, "elements.csv", "actuators.csv", "channels.csv", "tables.csv", "crosstalk.csv", "states"}
 
 
@@ -110,85 +105,11 @@ def load(folder: str | Path) -> Mesh:
     return build_mesh(description, tables, text, folder)
 
 
-_HEATER = """\
-[actuator.phase]                # every phase shifter that actuators.csv does not list
-law = "heater"                  # phase = offset + 2 pi P / p2pi
-p2pi_mw = 24.0
-r_ohm = 600.0
-
-"""
-
-
-def _gap_actuator() -> str:
-    """[actuator.coupler] of a new mesh with tunable couplers."""
-    return (
-        "[actuator.coupler]              # electrostatic gaps: closing raises the angle, bar at pi\n"
-        'law = "gap"\n'
-        "gap_nm = 200.0\nstiffness_n_per_m = 2.0\narea_um2 = 20.0\ndecay_nm = 50.0\nrest_rad = 3.05\nmargin = 0.8\n\n"
-    )
-
-
 def measured_files(description: Description) -> list[str]:
     """Files of measured parts, by their paths within the mesh folder."""
     named = [part.file for part in description.insert]
     named += [row[2].get("file") for row in description.elements or [] if len(row) == 3 and isinstance(row[2], dict)]
     return list(dict.fromkeys(file for file in named if isinstance(file, str)))
-
-
-def lattice_text(
-    shape: str,
-    name: str,
-    *,
-    modes: int | None,
-    cell: str,
-    spare: int,
-    balanced: bool = False,
-    plane: dict[str, int] | None = None,
-) -> str:
-    """mesh.toml of a new lattice, with its defaults written out; `plane` is the size of one with loops."""
-    size = "" if modes is None else f"modes = {modes}\n"
-    size += "".join(f"{key} = {count}\n" for key, count in (plane or {}).items())
-    extra = f"spare = {spare}\n" if spare else ""
-    extra += "balanced = true\n" if balanced else ""
-    phases = _HEATER if cell == "mzi" or shape != "switch" else ""
-    gaps = _gap_actuator() if cell == "gap" else ""
-    place = "pitch_um = [400.0, 127.0]       # between columns, between lanes"
-    if shape in PLANE_SIZES:
-        place = "side_um = 250.0                 # length of every cell's guides"
-    return f"""\
-format = 1
-name = {json.dumps(name, ensure_ascii=False)}
-note = "as drawn; all numbers are placeholders until the chip is measured"
-wavelength_nm = 1550.0
-
-[lattice]
-shape = "{shape}"
-{size}cell = "{cell}"
-{extra}{place}
-
-[guide]
-n_eff = 2.44
-n_group = 4.2
-loss_db_per_cm = 0.0
-
-[coupler]
-loss_db = 0.0
-
-{phases}{gaps}[channel]                       # every output of the source that channels.csv does not list
-bits = 16
-min_v = 0.0
-max_v = 10.0
-
-[rest]
-state = "{"cross" if cell == "mzi" else "unknown"}"                 # what a cell falls to without drive
-
-[spread]                        # how far parts scatter from die to die (standard deviations)
-split_rad = 0.02
-phase_rad = 1.8
-loss_db = 0.0
-p2pi_share = 0.02
-r_share = 0.02
-"""
 
 
 def lattice(
@@ -300,131 +221,6 @@ def _tables_of_text(texts: dict[str, str]) -> Tables:
         for name, text in texts.items():
             (Path(work) / f"{name}.csv").write_text(text)
         return Tables(*(_read_one(Path(work), name) for name in _READERS))
-
-
-def mesh_tables(mesh: Mesh) -> dict[str, str]:
-    """All tables of a mesh as CSV text, rows only where they differ from mesh.toml's defaults."""
-    plain = build_mesh(parse_description(mesh.text), Tables(), mesh.text, mesh.folder) if _has_defaults(mesh) else None
-    return {
-        name: text
-        for name, text in (
-            ("elements", _elements_text(mesh, plain)),
-            ("actuators", _actuators_text(mesh, plain)),
-            ("channels", _channels_text(mesh, plain)),
-            ("tables", _measured_text(mesh)),
-            ("crosstalk", _crosstalk_text(mesh)),
-        )
-        if text
-    }
-
-
-def _has_defaults(mesh: Mesh) -> bool:
-    """True where mesh.toml alone makes a mesh, so that tables need hold only what differs."""
-    try:
-        build_mesh(parse_description(mesh.text), Tables(), mesh.text, mesh.folder)
-    except UnsoundFile:
-        return False
-    return True
-
-
-def _same(a: float, b: float) -> bool:
-    return a == b or (math.isnan(a) and math.isnan(b))
-
-
-def _elements_text(mesh: Mesh, plain: Mesh | None) -> str:
-    built, net = mesh.as_built, mesh.net
-    base = (plain or mesh).as_built.loss_db
-    stuck = np.full(net.n_elements, math.nan)
-    stuck[net.first_element] = built.stuck_rad
-    loss_differs = built.loss_db != base if plain else np.ones(net.n_elements, bool)
-    rows = np.flatnonzero((built.error_rad != 0) | loss_differs | ~np.isnan(stuck) | (built.sigma_rad != 0))
-    names = net.names.elements
-    lines = [
-        (
-            names[e],
-            built.error_rad[e] if built.error_rad[e] else None,
-            built.loss_db[e] if loss_differs[e] else None,
-            stuck[e],
-            built.sigma_rad[e] if built.sigma_rad[e] else None,
-        )
-        for e in rows.tolist()
-    ]
-    return table_text(ELEMENT_HEAD, lines) if lines else ""
-
-
-def _actuators_text(mesh: Mesh, plain: Mesh | None) -> str:
-    actuators, net = mesh.actuators, mesh.net
-    names, channels, settings = mesh.actuator_names, mesh.channel_names, net.setting_names
-    heads = [h for h in PARAM_NAMES if h in actuators.params]
-    same_rows = plain is not None and np.array_equal(plain.actuators.setting, actuators.setting)
-    lines: list[tuple[Any, ...]] = []
-    needed = 0  # rows come first when read back: all up to the last that differs keep their order
-    for a, name in enumerate(names):
-        values = [float(actuators.params[h][a]) for h in heads]
-        channel = channels[actuators.channel[a]]
-        line = (
-            name,
-            settings[actuators.setting[a]] if settings[actuators.setting[a]] != name else None,
-            channel if channel != name else None,
-            LAWS[actuators.law[a]].name,
-            1 if actuators.dead[a] else None,
-            *(None if math.isinf(v) else v for v in values),
-        )
-        lines.append(line)
-        if same_rows:
-            assert plain is not None
-            was = plain.actuators
-            default = [float(was.params[h][a]) if h in was.params else math.nan for h in heads]
-            unchanged = (
-                line[1] is None
-                and line[2] is None
-                and line[4] is None
-                and was.law[a] == actuators.law[a]
-                and all(_same(v, d) for v, d in zip(values, default, strict=True))
-            )
-            if unchanged:
-                continue
-        needed = len(lines)
-    return table_text((*ACTUATOR_WORDS, *heads), lines[:needed]) if needed else ""
-
-
-def _channels_text(mesh: Mesh, plain: Mesh | None) -> str:
-    channels, names = mesh.channels, mesh.channel_names
-    heads = CHANNEL_NUMBERS
-    lines: list[tuple[Any, ...]] = []
-    default = parse_description(mesh.text).channel
-    # channels without a row are read back as the actuators come to them
-    _, met = np.unique(mesh.actuators.channel, return_index=True)
-    needed = int(np.flatnonzero(np.diff(met) < 0).max(initial=-1)) + 1
-    for k, name in enumerate(names):
-        values = [float(getattr(channels, h)[k]) for h in heads]
-        usual = [math.inf if getattr(default, h) is None else float(getattr(default, h)) for h in heads]
-        ground = channels.ground_names[channels.ground[k]] if channels.ground[k] >= 0 else None
-        shown: list[Any] = [None if math.isinf(v) else v for v in values]
-        shown[0] = int(values[0])
-        drives = DRIVES[int(channels.by_current[k])]
-        lines.append((name, *shown, ground, drives))
-        if values != usual or ground != default.ground or drives != default.drives or plain is None:
-            needed = max(needed, len(lines))
-    return table_text(CHANNEL_HEAD, lines[:needed]) if needed else ""
-
-
-def _measured_text(mesh: Mesh) -> str:
-    names = mesh.actuator_names
-    lines = [(names[a], *row) for a, table in mesh.actuators.tables.items() for row in table.tolist()]
-    return table_text(TABLE_HEAD, lines) if lines else ""
-
-
-def _crosstalk_text(mesh: Mesh) -> str:
-    matrix = mesh.actuators.crosstalk
-    if matrix is None or parse_description(mesh.text).crosstalk is not None:
-        return ""  # none, or made from places again when it is read
-    coo, names, settings = matrix.tocoo(), mesh.actuator_names, mesh.net.setting_names
-    lines = [
-        (names[a], settings[s], value)
-        for s, a, value in zip(coo.row.tolist(), coo.col.tolist(), coo.data.tolist(), strict=True)
-    ]
-    return table_text(CROSSTALK_HEAD, lines)
 
 
 def write(mesh: Mesh, folder: str | Path) -> Path:
