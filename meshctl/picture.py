@@ -1,12 +1,13 @@
 """A mesh drawn as text: the choice of form, panels and port names, and the legend.
 
-Public: draw, and from its neighbours describe (words) and light (where an input's light goes).
+Public: draw, and from its neighbours describe (words), light and light_together (where inputs' light goes).
 """
 
 from __future__ import annotations
 
 import textwrap
 from collections import Counter
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -26,12 +27,12 @@ from meshctl.picture_lanes import (
     panels_of,
     sheet,
 )
-from meshctl.picture_light import lane_ends, light, output_powers
+from meshctl.picture_light import lane_ends, light, light_together, output_powers
 from meshctl.picture_states import BAR, BAR_BELOW, CROSS, CROSS_ABOVE, SPLIT, UNKNOWN, Sites, sites_of, state_of
 from meshctl.picture_table import summary, table
 from meshctl.picture_words import describe, fault_words, power_text
 
-__all__ = ["describe", "draw", "light"]
+__all__ = ["describe", "draw", "light", "light_together"]
 
 LEAST_WIDTH = 32
 MOST_LANES = 64  # drawn lane by lane; above, one character for each cell
@@ -46,6 +47,7 @@ def draw(
     settings: np.ndarray | None = None,
     *,
     lit: np.ndarray | None = None,
+    routes: Sequence[tuple[str, Sequence[str]]] = (),
     width: int = 80,
     ascii: bool = False,
 ) -> str:
@@ -56,6 +58,8 @@ def draw(
     mesh : Mesh
     settings : float (S,), rad, in force at the centre wavelength; None: cells are drawn without state
     lit : what `light` returned for one input; None: no light is shown
+    routes : name of each route and of the cells that it passes; they are listed, and marked in the table of a
+        net with loops
     width : longest line, 32 or more; wider meshes are cut into panels
     ascii : only characters that every terminal has
 
@@ -87,7 +91,7 @@ def draw(
     circuit = circuit_of(mesh.net)
     if circuit is None:
         head = f"net with loops, one line for each of {len(sites)} cells"
-        body = [*textwrap.wrap(head, width), "", *table(mesh, sites, marks, width)]
+        body = [*textwrap.wrap(head, width), "", *table(mesh, sites, marks, width, _passing(routes))]
     elif circuit.n_lanes > MOST_LANES:
         layout = layout_of(mesh.net, sites, marks)
         named = ", cell cK_R in column K, row R" if _told_by_place(mesh.net, sites, layout) else ""
@@ -95,8 +99,22 @@ def draw(
         body += shown.listed(width) if shown else []
     else:
         body = _Lanes(mesh.net, sites, shown, marks, width).lines()
-    lines = [*body, "", *_legend(mesh, sites, shown, marks, width)]
+    lines = [*body, "", *_route_lines(routes, width), *_legend(mesh, sites, shown, marks, width)]
     return "\n".join(_within(line, width, ascii) for line in lines)
+
+
+def _passing(routes: Sequence[tuple[str, Sequence[str]]]) -> dict[str, list[int]]:
+    """Numbers, from 1, of the routes through each cell."""
+    passing: dict[str, list[int]] = {}
+    for number, (_, cells) in enumerate(routes, 1):
+        for cell in dict.fromkeys(cells):
+            passing.setdefault(cell, []).append(number)
+    return passing
+
+
+def _route_lines(routes: Sequence[tuple[str, Sequence[str]]], width: int) -> list[str]:
+    named = [f"route {k} {name}, {len(cells)} cells" for k, (name, cells) in enumerate(routes, 1)]
+    return _packed(named, "   ", width)
 
 
 def _within(line: str, width: int, ascii: bool) -> str:

@@ -1,9 +1,11 @@
 """Where the light of one input goes inside a loop-free mesh: the power on both lanes of every block.
 
-Public: light, lane_ends, output_powers.
+Public: light, light_together, lane_ends, output_powers.
 """
 
 from __future__ import annotations
+
+from collections.abc import Sequence
 
 import numpy as np
 
@@ -58,6 +60,14 @@ def light(mesh: Mesh, settings: np.ndarray, input_port: str) -> np.ndarray:
             v = 0j
         fields.append((x, y, u, v))
     return np.abs(np.array(fields, complex).reshape(-1, 4)) ** 2
+
+
+def light_together(mesh: Mesh, settings: np.ndarray, inputs: Sequence[str]) -> np.ndarray | None:
+    """Light of several inputs at once, powers added: float (B, 4), or None for a net with loops."""
+    if circuit_of(mesh.net) is None or not inputs:
+        return None
+    total: np.ndarray = sum(light(mesh, settings, name) for name in inputs)  # type: ignore[assignment]
+    return total
 
 
 def _loop_free(net: Net) -> Circuit:

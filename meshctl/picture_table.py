@@ -6,6 +6,7 @@ Public: summary, table.
 from __future__ import annotations
 
 import textwrap
+from collections.abc import Mapping, Sequence
 
 from meshctl.mesh.graph import Mesh, Net
 from meshctl.picture_lanes import Layout, Marks, glyphs, panels_of
@@ -28,19 +29,25 @@ def summary(layout: Layout, head: str, width: int) -> list[str]:
     return lines
 
 
-def table(mesh: Mesh, sites: Sites, marks: Marks, width: int) -> list[str]:
-    """A line for each cell of any net: name, state, cross power, and what its ports are joined to."""
+def table(
+    mesh: Mesh, sites: Sites, marks: Marks, width: int, on_routes: Mapping[str, Sequence[int]] | None = None
+) -> list[str]:
+    """A line for each cell of any net: name, state, cross power, and what its ports are joined to.
+
+    `on_routes` has the numbers of the routes that pass each cell; with it a column shows them.
+    """
     net = mesh.net
     neighbour = _Neighbours(net)
-    rows = [("cell", "", "cross", "joined to (a1 a2 b1 b2)")]
+    rows = [("cell", "", "cross", "joined to (a1 a2 b1 b2)", "route")]
     for site, glyph in enumerate(glyphs(net, sites, marks)):
         power = f"{sites.cross_power[site]:.2f}".replace("nan", "")
         cell, element = int(sites.cell[site]), int(sites.element[site])
-        rows.append((neighbour.name(element), glyph, power, "  ".join(neighbour.of(cell, element))))
-    name, mark, cross = (max(len(row[k]) for row in rows) for k in range(3))
+        numbers = " ".join(map(str, (on_routes or {}).get(neighbour.name(element), ())))
+        rows.append((neighbour.name(element), glyph, power, "  ".join(neighbour.of(cell, element)), numbers))
+    name, mark, cross, _, route = (max(len(row[k]) for row in rows) for k in range(5))
     lines = []
-    for a, b, c, d in rows:
-        start = f"{a:<{name}}  {b:^{mark}}  {c:>{cross}}  "
+    for a, b, c, d, e in rows:
+        start = f"{a:<{name}}  {b:^{mark}}  {c:>{cross}}  " + (f"{e:<{route}}  " if on_routes else "")
         lines += textwrap.wrap(start + d, width, subsequent_indent=" " * len(start), drop_whitespace=False) or [start]
     return lines
 

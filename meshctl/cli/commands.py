@@ -60,23 +60,27 @@ def check(words: Namespace) -> int:
 
 
 def show(words: Namespace) -> int:
-    from meshctl.picture import describe, draw, light
+    from meshctl.picture import describe, draw, light, light_together
 
     session = Session(words.mesh)
-    settings = None
+    mesh, settings, lit = session.mesh, None, None
+    routes: list[tuple[str, list[str]]] = []
     if words.plan:
         plan = session.open_plan(words.plan, stale_ok=words.stale_ok)
         settings = plan.actual
+        routes = [(f"{r['input']}:{r['output']}", r["cells"]) for r in plan.routes]
+        lit = light_together(mesh, settings, list(dict.fromkeys(r["input"] for r in plan.routes)))
     _remark(session.remarks)
-    mesh = session.mesh
-    lit = None
     if words.input is not None:
         printing.require_port(words.input, mesh.net.inputs)
         if settings is None:
             printing.needs_plan("--input")
         lit = light(mesh, settings, words.input)
     width = words.width or shutil.get_terminal_size((80, 24)).columns
-    text = describe(mesh, settings) if words.words else draw(mesh, settings, lit=lit, width=width, ascii=words.ascii)
+    if words.words:
+        text = describe(mesh, settings)
+    else:
+        text = draw(mesh, settings, lit=lit, routes=routes, width=width, ascii=words.ascii)
     if words.json:
         return _json({"mesh": words.mesh, "plan": words.plan, "text": text})
     print(text)

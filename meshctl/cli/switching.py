@@ -1,6 +1,6 @@
 """The commands `route` and `states`, and routes and states as text and JSON.
 
-Public: route, states, signal_table, route_lines.
+Public: route, states, signal_table.
 """
 
 from __future__ import annotations
@@ -16,7 +16,6 @@ from typing import Any
 from meshctl.cli import printing
 from meshctl.errors import DONE, OUT_OF_REACH, Finding, NoRoutes, WrongUsage
 from meshctl.mesh.graph import Mesh
-from meshctl.plan.plan import Plan
 from meshctl.plan.signals import Signal
 from meshctl.plan.states import Difference, StateRow
 from meshctl.plan.switching import RouteTarget
@@ -133,15 +132,6 @@ def signal_table(rows: Sequence[Signal | dict[str, Any]]) -> list[str]:
 
 def _level(value: float | None, digits: int) -> str:
     return "-" if value is None else f"{value:.{digits}f}"
-
-
-def route_lines(plan: Plan) -> list[str]:
-    """Every route with the cells that it passes, numbered as in the drawing of nets with loops."""
-    lines = []
-    for k, r in enumerate(plan.routes, 1):
-        loss = _level(r["insertion_loss_db"], 2)
-        lines.append(f"route {k}  {r['input']}:{r['output']}  {loss} dB lost, {len(r['cells'])} cells")
-    return lines
 
 
 # ---- states
