@@ -14,6 +14,8 @@ import numpy as np
 from meshctl.laws.gap import GAP_LAW
 from meshctl.mesh.meshfile import lattice, load
 from meshctl.mesh.tables import table_text
+from meshctl.plan.states import save_state
+from meshctl.plan.switching import RouteTarget, route
 
 SEED = 20
 NOTE = "invented data: no such chip exists"
@@ -250,6 +252,18 @@ loss_db = 0.6
 """
 
 
+# states of dunlin by row and column; the other lanes go straight on
+DUNLIN_STATES = {
+    "through": "in1:out1 in2:out2 add1:drop1 add2:drop2",
+    "in1>drop1": "in1:drop1 in2:out2 add1:out1 add2:drop2",
+    "in1>drop2": "in1:drop2 in2:out2 add1:drop1 add2:out1",
+    "in2>drop1": "in1:out1 in2:drop1 add1:out2 add2:drop2",
+    "in2>drop2": "in1:out1 in2:drop2 add1:drop1 add2:out2",
+    "in1>drop1_in2>drop2": "in1:drop1 in2:drop2 add1:out1 add2:out2",
+    "in1>drop2_in2>drop1": "in1:drop2 in2:drop1 add1:out2 add2:out1",
+}
+
+
 def _heaters(folder: Path, rng: np.random.Generator, dead: str = "") -> str:
     """actuators.csv: measured offset, power for 2 pi and resistance of every heater."""
     mesh = load(folder)
@@ -310,6 +324,9 @@ def make(into: Path) -> None:
     actuators, points = _gaps(np.random.default_rng(SEED + 1))
     (folder / "actuators.csv").write_text(actuators)
     (folder / "tables.csv").write_text(points)
+    mesh = load(folder)
+    for name, words in DUNLIN_STATES.items():
+        save_state(mesh, name, route(mesh, RouteTarget(tuple(words.split()))))
     _make_curlew(into / "curlew")
 
 
