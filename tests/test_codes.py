@@ -143,6 +143,7 @@ def test_aware_rounding_spares_large_meshes():
     assert rms_aware / rms_plain <= 2.0
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 @pytest.mark.parametrize(("modes", "gain", "targets"), [(8, 2.5, 40), (32, 4.0, 5)])
 @pytest.mark.parametrize("bits", [8, 10, 12])

@@ -64,6 +64,7 @@ def test_uncorrected_and_corrected_errors_follow_papers():
     assert np.mean(out) == pytest.approx(n**3 * s**2 / 3, rel=0.15)
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 @pytest.mark.parametrize("s", [0.01, 0.03])
 def test_error_formulas_hold_at_other_scatters(s):

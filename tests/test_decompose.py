@@ -125,6 +125,7 @@ def test_matrix_given_is_left_alone(name):
     assert np.array_equal(matrix, before)
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 @pytest.mark.parametrize("name", DECOMPOSITIONS)
 def test_large_matrix_loses_no_digits(name):

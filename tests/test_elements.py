@@ -134,6 +134,7 @@ def test_unknown_kinds_have_no_row():
     assert all(KINDS[kind_row(kind.name)].name == kind.name for kind in KINDS)
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 def test_jax_arrays_give_numpy_blocks():
     import jax

@@ -49,6 +49,7 @@ def test_six_rings_agree_with_scikit_rf(chip):
     assert used.waves.residual <= 1e-12
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 def test_eighteen_rings_leave_no_residual():
     mesh = lattice("hexagonal", rings=18, cell="gap")

@@ -69,6 +69,7 @@ def test_cotangent_matches_central_differences(objective):
         assert np.vdot(cotangent, along).real == pytest.approx(numeric, rel=1e-5, abs=1e-7)
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 @pytest.mark.parametrize("free", ["nothing", "outputs", "inputs"])
 def test_jax_alone_gives_same_cotangent(free):

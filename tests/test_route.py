@@ -99,6 +99,7 @@ def test_traced_sets_are_found_elsewhere(lattice):
     assert chip.arriving(routing, wishes) == pytest.approx(1.0, abs=LOSSLESS)
 
 
+@pytest.mark.sample
 @pytest.mark.slow
 @pytest.mark.parametrize("rings", [6, 11])
 @pytest.mark.parametrize("count", [2, 5, 10, 20])
