@@ -288,10 +288,10 @@ def wraps(small: bool) -> Iterator[Row]:
         matrix = from_positions(upper, lower, 0.4, 100.0, "exponential", keep_above=1e-6)
         n = len(upper)
         wanted = np.random.default_rng(8).uniform(-0.5, 0.5, n)
-        crosstalk = Crosstalk(matrix)
+        crosstalk, every = Crosstalk(matrix), np.ones(n)
         yield compare(
             f"whole turns of {n}, {'signed' if signed else 'positive'}", "one sparse factorisation",
-            lambda c=crosstalk, w=wanted, one=np.ones(n): least_power_wraps(w, one > 0, c, 0 * one, 1.3 * one, one),
+            lambda c=crosstalk, w=wanted, one=every: least_power_wraps(w, one > 0, c, 0 * one, 1.3 * one, one),
             lambda m=matrix: Crosstalk(m), 5 if small else 15, 1.0,
         )  # fmt: skip
 
