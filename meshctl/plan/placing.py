@@ -125,6 +125,10 @@ class _Placement:
         except DriveFinding as finding:
             raise finding.named(self.names()) from None
 
+    def given(self, own: np.ndarray) -> Wraps:
+        turned = self.sign * turns(own[self.actuator])
+        return Wraps(turned, np.zeros(len(turned), np.int64), 0.0, "found", 0)
+
     def names(self) -> list[str]:
         names = self.chip.mesh.actuator_names
         return [names[a] for a in self.actuator.tolist()]
@@ -188,7 +192,14 @@ def require_sound_crosstalk(chip: Chip) -> None:
         _Placement(chip, chip.reference_rad, chip.primary)
 
 
-def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False, moved_by: np.ndarray | None = None) -> Placed:
+def place(
+    chip: Chip,
+    settings: np.ndarray,
+    *,
+    best_effort: bool = False,
+    moved_by: np.ndarray | None = None,
+    own: np.ndarray | None = None,
+) -> Placed:
     """Volts and codes for settings, whole turns chosen for least power within limits.
 
     Parameters
@@ -196,6 +207,7 @@ def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False, moved_
     settings : float (S,), rad, wanted values in force before `error_rad`
     best_effort : hold actuators at their limits rather than raise
     moved_by : int (S,), the actuator that moves each setting; by default its primary one
+    own : float (A,), own changes within limits, rad, that give the settings; None: whole turns are searched for
 
     Raises
     ------
@@ -207,7 +219,7 @@ def place(chip: Chip, settings: np.ndarray, *, best_effort: bool = False, moved_
     held: tuple[int, ...] = ()
     lowest, highest = chip.level_range
     for attempt in range(_GROUND_ROUNDS):
-        found = placement.search()
+        found = placement.search() if own is None else placement.given(own)
         if found.verdict in ("unreachable", "not_found"):
             if not best_effort:
                 _refuse(chip, placement, found)

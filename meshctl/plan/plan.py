@@ -28,7 +28,8 @@ ARRAYS = {
 }
 ROUTES = "routes"  # kind of a target that asks for routes
 ROUTE_KEYS = {"input", "output", "share", "cells"}  # of every route
-OPTIONAL = ("power_error", "routes", "search")  # keys that only plans for routes have
+ONLY_ROUTES = ("power_error", "routes", "search")  # keys that only plans for routes have
+OPTIONAL = (*ONLY_ROUTES, "measures", "account")  # left out where empty
 
 
 @dataclass(frozen=True, eq=False)
@@ -38,6 +39,7 @@ class Plan:
     `fidelity`, `matrix_error` and the throughputs come from the codes through the forward path, all known
     errors in; `continuous` holds fidelity and matrix_error before limits and codes. Routes ask for no
     matrix: there the two are NaN (null in the file), and `power_error` takes their place, in `continuous` too.
+    Wishes other than one matrix have `measures`, and NaN where no matrix is among what they ask.
     """
 
     mesh_name: str
@@ -63,11 +65,18 @@ class Plan:
     power_error: float | None = None  # largest difference of an output's power from the wished one
     routes: list[dict[str, Any]] = field(default_factory=list)  # one for each output, see plan.signals
     search: dict[str, Any] = field(default_factory=dict)  # how the routes were found, and what free cells do
+    measures: dict[str, float] = field(default_factory=dict)  # how near a wish is, see plan.wanted.MEASURES
+    account: dict[str, Any] = field(default_factory=dict)  # what keeps it from being nearer, see plan.account
 
     @property
     def is_routes(self) -> bool:
         """True where light was sent from ports to ports, False where a matrix was asked for."""
         return self.target.get("kind") == ROUTES
+
+    @property
+    def has_matrix(self) -> bool:
+        """True where a matrix is among what is asked."""
+        return not (self.is_routes or _without_matrix(self.target))
 
     def _repr_html_(self) -> str:
         from html import escape
@@ -86,7 +95,13 @@ class Plan:
     def _nearness(self) -> list[tuple[str, str]]:
         if self.is_routes:
             return [("power error", f"{self.power_error:.3g}")]
+        if not self.has_matrix:
+            return [(name.replace("_", " "), f"{value:.3g}") for name, value in self.measures.items()]
         return [("fidelity", f"{self.fidelity:.9f}"), ("matrix error", f"{self.matrix_error:.3g}")]
+
+
+def _without_matrix(target: dict[str, Any]) -> bool:
+    return bool(target.get("own") or (target.get("wish") and "real" not in target))
 
 
 def plan_text(plan: Plan) -> str:
@@ -97,6 +112,8 @@ def plan_text(plan: Plan) -> str:
             entry[name] = value.tolist() if isinstance(value, np.ndarray) else value
     if plan.is_routes:
         entry |= {"fidelity": None, "matrix_error": None, "power_error": plan.power_error}
+    elif not plan.has_matrix:
+        entry |= {"fidelity": None, "matrix_error": None}
     return json.dumps(entry, allow_nan=False, indent=None, separators=(",", ":")) + "\n"
 
 
@@ -122,7 +139,7 @@ def _check_routes(entry: dict[str, Any], where: str) -> None:
     words = entry["target"].get("words")
     if not isinstance(words, list) or not words or not all(isinstance(w, str) for w in words):
         raise UnsoundFile(f"'target.words' is {words!r}, must list routes", where=where, remedy="route again")
-    for name in OPTIONAL:
+    for name in ONLY_ROUTES:
         if name not in entry:
             raise MissingRow(f"key '{name}' is missing", where=where, remedy="route again")
     listed = entry["routes"]
@@ -133,6 +150,22 @@ def _check_routes(entry: dict[str, Any], where: str) -> None:
     if not isinstance(entry["search"], dict):
         raise UnsoundFile(f"'search' is {entry['search']!r}, must be an object", where=where, remedy="route again")
     entry |= {"fidelity": math.nan, "matrix_error": math.nan}
+
+
+def _check_measures(entry: dict[str, Any], where: str) -> None:
+    """Refuse measures and accounts of another form; NaN takes the place of what wishes without a matrix lack."""
+    for name in ("measures", "account"):
+        if not isinstance(entry.get(name, {}), dict):
+            raise UnsoundFile(f"'{name}' is {entry[name]!r}, must be an object", where=where, remedy="solve again")
+    measures = entry.get("measures", {})
+    for name, value in measures.items():
+        if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+            raise NotFinite(f"'measures.{name}' is {value!r}, must be a number", where=where, remedy="solve again")
+    if _without_matrix(entry["target"]):
+        if not measures:
+            raise MissingRow("key 'measures' is missing", where=where, remedy="solve again")
+        entry |= {"fidelity": math.nan, "matrix_error": math.nan}
+    entry.setdefault("power_error", measures.get("power_error"))
 
 
 def read_plan(path: str | Path) -> Plan:
@@ -165,7 +198,11 @@ def read_plan(path: str | Path) -> Plan:
     routes = entry["target"].get("kind") == ROUTES
     if routes:
         _check_routes(entry, where)
-    for name in ("power_error", "throughput") if routes else ("fidelity", "matrix_error", "throughput"):
+    else:
+        _check_measures(entry, where)
+    bare = routes or _without_matrix(entry["target"])
+    numbers = ("power_error",) if routes else () if bare else ("fidelity", "matrix_error")
+    for name in (*numbers, "throughput"):
         value = entry[name]
         if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
             raise NotFinite(f"'{name}' is {value!r}, must be a number", where=where, remedy="solve again")

@@ -1,6 +1,6 @@
 """Codes rounded against the matrix: errors are let fall where the light cares least.
 
-Public: rounded, AWARE_TO.
+Public: rounded, code_range, AWARE_TO.
 """
 
 from __future__ import annotations
@@ -10,30 +10,37 @@ import numpy as np
 from meshctl.mesh.sensitivity import gram, jacobian
 from meshctl.plan.chip import Chip
 from meshctl.plan.placing import Placed
+from meshctl.plan.wanted import Wanted
 
+CURVED_TO = 400  # settings up to which wishes other than one matrix are followed: two gradients for each
+STEP_RAD = 1e-4  # of the differences of gradients: half of the digits are left
 AWARE_TO = 1100  # settings up to which the Gram matrix is formed: a full mesh of 32 modes, about a second
 
 
-def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.ndarray:
+def rounded(chip: Chip, placed: Placed, settings: np.ndarray, wanted: Wanted) -> np.ndarray:
     """Codes near the placed ones whose errors do the matrix least harm.
 
     Parameters
     ----------
     settings : float (S,), the settings placed
-    free : port phases that do not count
+    wanted : one matrix, or any wish: then errors are weighed by the wish's own curvature
 
     Returns
     -------
-    int64 (K,); the placed codes themselves where a law is stepwise, a channel drives current, an actuator is
-    held at a limit, or the mesh has more than AWARE_TO settings.
+    int64 (K,); the placed codes themselves where a law is stepwise, a channel drives current, or the mesh has
+    more than AWARE_TO settings (CURVED_TO for wishes other than one matrix, and for nets with loops).
     """
     stepwise = any(group.law.stepwise for group in chip.groups)
-    if stepwise or placed.held or chip.by_current.any() or chip.net.n_settings > AWARE_TO:
+    by_matrix = wanted.plain and not chip.response.loops
+    most = AWARE_TO if by_matrix else CURVED_TO
+    if stepwise or chip.by_current.any() or chip.net.n_settings > most:
         return placed.codes
     from meshctl.drive.codes import round_against
 
-    rows = jacobian(chip.response, settings)
-    costs = gram(rows, chip.response.matrix(settings), free)
+    if by_matrix:
+        costs = gram(jacobian(chip.response, settings), chip.response.matrix(settings), wanted.free)
+    else:
+        costs = _curvature(chip, settings, wanted)
     if not costs.any():
         return placed.codes
     # the shared ground's rise and the heat felt are held where they are: one code moves them by little
@@ -55,23 +62,40 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, free: str) -> np.n
         own[chip.actuators.dead] = 0.0
         return own
 
-    source, (lowest, highest) = chip.source, chip.level_range
-    bottom, top = lowest.copy(), highest.copy()
-    np.maximum.at(bottom, chip.actuators.channel, chip.bounds.low_v)
-    np.minimum.at(top, chip.actuators.channel, chip.bounds.high_v)
-    low = np.ceil((bottom - source.first_v) / source.step_v - 1e-9).astype(np.int64)
-    high = np.floor((top - source.first_v) / source.step_v + 1e-9).astype(np.int64)
+    lowest, highest = code_range(chip)
     answer = round_against(
         costs,
         own_of,
         placed.change,
         placed.codes,
-        np.minimum(high, source.highest),
-        lowest=np.maximum(low, 0),
+        highest,
+        lowest=lowest,
         channel=chip.actuators.channel,
         spread=_spread(chip),
     )
     return answer.codes
+
+
+def code_range(chip: Chip) -> tuple[np.ndarray, np.ndarray]:
+    """Lowest and highest code of every channel within all limits, int64 (K,) both."""
+    source, (bottom, top) = chip.source, (ends.copy() for ends in chip.level_range)
+    volts = ~chip.by_current
+    np.maximum.at(bottom, chip.actuators.channel[volts], chip.bounds.low_v[volts])
+    np.minimum.at(top, chip.actuators.channel[volts], chip.bounds.high_v[volts])
+    low = np.ceil((bottom - source.first_v) / source.step_v - 1e-9).astype(np.int64)
+    high = np.floor((top - source.first_v) / source.step_v + 1e-9).astype(np.int64)
+    return np.maximum(low, 0), np.minimum(high, source.highest)
+
+
+def _curvature(chip: Chip, settings: np.ndarray, wanted: Wanted) -> np.ndarray:
+    """G of e^T G e, what small errors e of the settings add to what is to be made small: half its second derivative."""
+    step = STEP_RAD * np.eye(len(settings))
+    second = np.array(
+        [wanted.pull(chip.response, settings + d) - wanted.pull(chip.response, settings - d) for d in step]
+    ) / (2.0 * STEP_RAD)
+    sizes, directions = np.linalg.eigh(0.25 * (second + second.T))
+    costs: np.ndarray = (directions * np.maximum(sizes, 0.0)) @ directions.T
+    return costs
 
 
 def _across(chip: Chip, placed: Placed) -> np.ndarray:
