@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from meshctl.errors import WrongSize
 from meshctl.mesh.graph import Mesh
 from meshctl.plan import pipeline
 from meshctl.plan.plan import Plan, check_fresh
@@ -27,18 +28,22 @@ def solve(
     starts: int = 1,
     seconds: float | None = None,
     seed: int = 0,
+    explain: bool = False,
 ) -> Plan:
     """Voltages for a target.
 
     Parameters
     ----------
     mesh : Mesh
-    target : complex array (out, in), Target, or words such as "haar:7"
+    target : complex array (out, in), Target, words such as "haar:7", an Objective, or a function
+        A function takes the matrix as a complex jax array (1, out, in) and returns, by jax.numpy, a real number
+        that is to be small; for more wavelengths than the centre wrap it in `solver.objective.OwnWish`.
     free : port phases that do not count: nothing, outputs, inputs, both (a Target brings its own)
     best_effort : hold what is out of reach at its limit rather than raise
     least_power : use what the matrix does not see to save power
     refine : descend on the whole chip model; None: where the closed form is not exact
     starts, seconds, seed : of the descent; `seconds` makes the answer depend on the machine
+    explain : also say what keeps the answer from being better, in `plan.account`
 
     Returns
     -------
@@ -55,15 +60,40 @@ def solve(
     >>> plan.fidelity > 0.999999
     True
     """
-    shape = (len(mesh.net.outputs), len(mesh.net.inputs))
-    if isinstance(target, str):
-        target = read_target(target, shape, free)
-    elif isinstance(target, Target):
-        target = make_target(target.matrix, shape, target.free, target.source)
-    else:
-        target = make_target(target, shape, free)
     effort = pipeline.Effort(refine, starts, seconds, seed)
-    return pipeline.solve(mesh, target, best_effort=best_effort, least_power=least_power, effort=effort)
+    return pipeline.solve(
+        mesh,
+        _wish(mesh, target, free),
+        best_effort=best_effort,
+        least_power=least_power,
+        effort=effort,
+        explain=explain,
+    )
+
+
+def _wish(mesh: Mesh, target: Any, free: str) -> Any:
+    """A Target or an Objective from what a user may give."""
+    net = mesh.net
+    shape = (len(net.outputs), len(net.inputs))
+    if isinstance(target, str):
+        return read_target(target, shape, free, net.inputs, net.outputs)
+    if isinstance(target, Target):
+        if not target.plain:
+            if target.size != shape:
+                raise WrongSize(
+                    f"the target has {target.size[0]} outputs and {target.size[1]} inputs; the mesh has {shape[0]} and "
+                    f"{shape[1]}",
+                    remedy="make it for this mesh",
+                )
+            return target
+        return make_target(target.matrix, shape, target.free, target.source)
+    if hasattr(target, "evaluate"):
+        return target
+    if callable(target):
+        from meshctl.solver.objective import OwnWish
+
+        return OwnWish(target)
+    return make_target(target, shape, free)
 
 
 def route(

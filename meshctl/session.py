@@ -123,14 +123,22 @@ class Session:
     def target(self, words: str, free: str = "nothing") -> Target:
         """The target that the words name, checked against the mesh."""
         net = self.mesh.net
-        return read_target(words, (len(net.outputs), len(net.inputs)), free)
+        return read_target(words, (len(net.outputs), len(net.inputs)), free, net.inputs, net.outputs)
 
     def solve(
-        self, target: Target, *, best_effort: bool = False, least_power: bool = False, effort: Effort | None = None
+        self,
+        target: Target,
+        *,
+        best_effort: bool = False,
+        least_power: bool = False,
+        effort: Effort | None = None,
+        explain: bool = False,
     ) -> Plan:
-        """Volts and codes for a target."""
+        """Volts and codes for a target; `explain` adds the account of what keeps it from being closer."""
         started = time.perf_counter()
-        self.plan = solve(self.mesh, target, best_effort=best_effort, least_power=least_power, effort=effort)
+        self.plan = solve(
+            self.mesh, target, best_effort=best_effort, least_power=least_power, effort=effort, explain=explain
+        )
         self.seconds = time.perf_counter() - started
         return self.plan
 

@@ -12,7 +12,7 @@ import sys
 from argparse import Namespace
 from typing import Any
 
-from meshctl.cli import printing
+from meshctl.cli import printing, wishing
 from meshctl.cli.watch import Watch
 from meshctl.errors import DONE, INTERRUPTED, WrongUsage
 from meshctl.optics.grid import wavelengths_of
@@ -53,7 +53,7 @@ def new(words: Namespace) -> int:
 def check(words: Namespace) -> int:
     found = Session(words.mesh).check()
     if words.json:
-        return _json(printing.finite(dataclasses.asdict(found)))
+        return _json(printing.finite({"mesh": found.name, **dataclasses.asdict(found)}))
     print(printing.inventory_text(found))
     _remark(found.warnings)
     return DONE
@@ -94,7 +94,13 @@ def solve(words: Namespace) -> int:
     target = session.target(words.target, words.free)
     with Watch("refining") as watch:
         effort = Effort(words.refine, words.starts, words.seconds, words.seed, watch.progress, watch.stopped)
-        plan = session.solve(target, best_effort=words.best_effort, least_power=words.least_power, effort=effort)
+        plan = session.solve(
+            target,
+            best_effort=words.best_effort,
+            least_power=words.least_power,
+            effort=effort,
+            explain=words.explain,
+        )
     if words.out:
         session.write_plan(words.out)
     if words.save:
@@ -104,6 +110,8 @@ def solve(words: Namespace) -> int:
     else:
         print(printing.plan_table(session.mesh, plan))
         print(printing.plan_summary(plan))
+        if plan.account:
+            print(wishing.account_text(plan))
         _remark(plan.warnings)
     return INTERRUPTED if watch.interrupted else DONE
 

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any, NoReturn
 
 import numpy as np
 
+from meshctl.cli import wishing
 from meshctl.errors import WrongUsage
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.inventory import Inventory
@@ -78,12 +79,14 @@ def plan_entry(mesh: Mesh, plan: Plan, seconds: float) -> dict[str, Any]:
             "search": plan.search,
         }
     else:
-        asked = {"fidelity": plan.fidelity, "matrix_error": plan.matrix_error}
+        asked = wishing.near_entry(plan.fidelity, plan.matrix_error, plan.measures, plan.has_matrix)
+        if plan.account:
+            asked["account"] = plan.account
     return finite(
         {
             "mesh": mesh.name,
             "mesh_hash": plan.mesh_hash,
-            "target": {k: v for k, v in plan.target.items() if k not in ("real", "imag")},
+            "target": wishing.shown_target(plan.target),
             **asked,
             "continuous": plan.continuous,
             "throughput": plan.throughput,
@@ -127,9 +130,15 @@ def plan_summary(plan: Plan) -> str:
     power = float(plan.power_mw.sum())
     share = 100.0 * plan.saved_mw / (power + plan.saved_mw) if plan.saved_mw else 0.0
     saved = f"     (free gauges saved {plan.saved_mw:.1f} mW, {share:.0f} %)" if plan.saved_mw else ""
-    lines = [
-        f"fidelity      {plan.fidelity:.9f}   (before limits and codes {plan.continuous['fidelity']:.9f})",
-        f"matrix error  {plan.matrix_error:.3e}     (before limits and codes {plan.continuous['matrix_error']:.3e})",
+    before = plan.continuous
+    lines = []
+    if plan.has_matrix:
+        lines = [
+            f"fidelity      {plan.fidelity:.9f}   (before limits and codes {before['fidelity']:.9f})",
+            f"matrix error  {plan.matrix_error:.3e}     (before limits and codes {before['matrix_error']:.3e})",
+        ]
+    lines += [
+        *wishing.near_lines(plan.measures, before),
         f"throughput    {plan.throughput:.4f}        (least of any input {worst:.4f})",
         f"power         {float(plan.power_mw.sum()):.1f} mW{saved}",
         f"reason        {plan.reason}: {REASONS[plan.reason]}",
@@ -194,12 +203,12 @@ def prediction_entry(
     if plan.is_routes:
         near: dict[str, Any] = {"routes": [dict(vars(signal)) for signal in signals]}
     else:
-        near = {"fidelity": prediction.fidelity, "matrix_error": prediction.matrix_error}
+        near = wishing.near_entry(prediction.fidelity, prediction.matrix_error, prediction.measures, plan.has_matrix)
     return finite(
         {
             "mesh": mesh.name,
             "mesh_hash": mesh.hash,
-            "target": {k: v for k, v in plan.target.items() if k not in ("real", "imag")},
+            "target": wishing.shown_target(plan.target),
             "wavelengths_nm": None if waves is None else waves.tolist(),
             **near,
             "throughput": prediction.throughput,
@@ -232,9 +241,11 @@ def prediction_text(
     else:
         lines += [
             f"target        {plan.target.get('source', '')} (free phases: {plan.target.get('free', 'nothing')})",
-            f"fidelity      {prediction.fidelity:.9f}",
-            f"matrix error  {prediction.matrix_error:.3e}",
         ]
+        if plan.has_matrix:
+            lines.append(f"fidelity      {prediction.fidelity:.9f}")
+            lines.append(f"matrix error  {prediction.matrix_error:.3e}")
+        lines += wishing.near_lines(prediction.measures)
     lines.append(f"throughput    {prediction.throughput:.4f}")
     if waves is None and max(prediction.matrix.shape) <= 16:
         lines.append(_power_table(mesh, prediction.matrix))

@@ -12,7 +12,7 @@ from meshctl import __version__
 
 EPILOG = "Exit codes: 0 done, 1 a bug, 2 wrong words, 3 unsound file, 4 out of reach, 5 bench, 130 interrupted."
 FREE = ("nothing", "outputs", "inputs", "both")
-TARGET = "FILE.npy, FILE.csv, identity, dft, hadamard, haar:SEED, permutation:3,1,2,4"
+TARGET = "FILE.npy, FILE.csv, FILE.toml, identity, dft, hadamard, haar:SEED, permutation:3,1,2,4"
 
 
 class _Parser(argparse.ArgumentParser):
@@ -112,6 +112,7 @@ def parser() -> argparse.ArgumentParser:
     solve.add_argument("--seed", type=_whole(0), default=0, metavar="SEED", help="of the further starts")
     solve.add_argument("--least-power", action="store_true", help="use what the matrix does not see to save power")
     solve.add_argument("--best-effort", action="store_true", help="hold what is out of reach at its limit")
+    solve.add_argument("--explain", action="store_true", help="what keeps it from being closer: causes and elements")
 
     solve.add_argument("--save", metavar="NAME", help="keep the plan as a state of the mesh folder")
 
