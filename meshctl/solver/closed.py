@@ -81,7 +81,7 @@ class ClosedForm:
         if self.response.loops:
             raise NoClosedForm(
                 "no closed form: this net has a loop, a link against the light or a part that reflects",
-                remedy="set its cells by routes, or take a mesh whose light runs one way for a whole matrix",
+                remedy="let solve refine without one (no --no-refine), or set its cells by routes",
             )
         self.table = cell_table(net, self.response.circuit)
         self.places: list[tuple[Steps, np.ndarray]] = []
