@@ -51,6 +51,7 @@ def spectrum_figure(
     figure = Figure(figsize=(8.0, 6.0), layout="constrained")
     FigureCanvasAgg(figure)
     above, below = figure.subplots(2, 1, sharex=True)
+    below.ticklabel_format(axis="y", useOffset=False)
     waves = spectrum.wavelengths_nm
     power_db = np.maximum(db_array(spectrum.power), FLOOR_DB)
     marker = "o" if len(waves) < 40 else ""

@@ -138,12 +138,14 @@ def _as_built(description: Description, net: Net, table: Table | None) -> AsBuil
     return AsBuilt(frozen(error), frozen(loss), frozen(stuck), frozen(sigma))
 
 
-def _digest(net: Net, as_built: AsBuilt, actuators: Actuators, channels: Channels, rest: str) -> str:
-    """sha256 of everything that the forward path reads; names, notes, states and spread do not count."""
+def _digest(net: Net, as_built: AsBuilt, actuators: Actuators, channels: Channels) -> str:
+    """sha256 of everything that the forward path reads; names, notes, states, rest and spread do not count."""
     digest = hashlib.sha256(b"meshctl 1")
 
     def add(label: str, value: Any) -> None:
         array = np.ascontiguousarray(value)
+        if array.dtype.kind == "f":
+            array = array + 0.0  # -0.0 and 0.0 are one number
         digest.update(f"{label}:{array.dtype.str}:{array.shape};".encode())
         digest.update(array.tobytes())
 
@@ -174,7 +176,6 @@ def _digest(net: Net, as_built: AsBuilt, actuators: Actuators, channels: Channel
         add("crosstalk", np.column_stack([coo.row[order], coo.col[order], coo.data[order]]))
     for label in ("by_current", *CHANNEL_NUMBERS, "ground", "ground_ohm"):
         add(label, getattr(channels, label))
-    digest.update(rest.encode())
     return digest.hexdigest()
 
 
@@ -202,7 +203,7 @@ def build_mesh(description: Description, tables: Tables, text: str, folder: Path
         actuators,
         channels,
         spread,
-        _digest(net, as_built, actuators, channels, rest),
+        _digest(net, as_built, actuators, channels),
         description.lattice.shape if description.lattice else "",
         rest,
         description.budget.loss_db if description.budget else math.nan,

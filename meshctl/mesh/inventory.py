@@ -10,6 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from meshctl.laws import LAWS
+from meshctl.mesh.actuation import law_groups
 from meshctl.mesh.budget import PathLoss, islands, path_losses, path_warnings
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.response import circuit_of
@@ -42,8 +43,33 @@ class Inventory:
     warnings: list[str]
 
 
+_MISFIT = 1.3  # chi^2 a point above which law and measurement disagree; common practice
+
+
+def _misfits(mesh: Mesh) -> list[str]:
+    """Actuators whose measured points their law does not follow."""
+    said = []
+    for group in law_groups(mesh.actuators):
+        if group.law.has_tables:
+            continue
+        for row, a in enumerate(group.rows.tolist()):
+            table = mesh.actuators.tables.get(a)
+            if table is None:
+                continue
+            p = {name: np.repeat(values[row : row + 1], len(table)) for name, values in group.p.items()}
+            off = group.law.reference_rad(p) + group.law.change_rad(table[:, 0], p) - table[:, 1]
+            sigma = np.maximum(table[:, 2], 1e-4)
+            chi2 = float(np.mean((off / sigma) ** 2))
+            if chi2 > _MISFIT:
+                said.append(
+                    f"'{mesh.actuator_names[a]}': its {len(table)} measured points lie up to "
+                    f"{np.abs(off).max():.3g} rad from law '{group.law.name}' (chi^2 {chi2:.3g} a point, {_MISFIT:g} is common practice)"
+                )
+    return said
+
+
 def _warnings(mesh: Mesh, paths: list[PathLoss]) -> list[str]:
-    net, said = mesh.net, path_warnings(mesh, paths)
+    net, said = mesh.net, path_warnings(mesh, paths) + _misfits(mesh)
     if not mesh.shape:  # lattices hang together
         names = net.names.elements
         for group in islands(net):
