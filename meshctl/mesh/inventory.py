@@ -62,8 +62,8 @@ def _misfits(mesh: Mesh) -> list[str]:
             chi2 = float(np.mean((off / sigma) ** 2))
             if chi2 > _MISFIT:
                 said.append(
-                    f"'{mesh.actuator_names[a]}': its {len(table)} measured points lie up to "
-                    f"{np.abs(off).max():.3g} rad from law '{group.law.name}' (chi^2 {chi2:.3g} a point, {_MISFIT:g} is common practice)"
+                    f"'{mesh.actuator_names[a]}': its {len(table)} measured points lie up to {np.abs(off).max():.3g} "
+                    f"rad from law '{group.law.name}' (chi^2 {chi2:.3g} a point, {_MISFIT:g} is common practice)"
                 )
     return said
 
