@@ -9,11 +9,12 @@ from __future__ import annotations
 
 import math
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
 
+from meshctl.errors import DriveFinding
 from meshctl.mesh.response import Response
 from meshctl.plan.chip import Chip
 from meshctl.plan.placing import fixed_settings, place
@@ -23,7 +24,7 @@ from meshctl.plan.wanted import Wanted
 from meshctl.solver.cells import MZI
 from meshctl.solver.reach import Reach
 
-TRIES = 24  # other signs of inner phases tried for coarse codes
+TRIES = 40  # other signs of inner phases tried for coarse codes
 REFINED_TRIES = 6  # where each is a refinement
 STEPPED_TO = 300  # channels up to which codes are stepped one by one
 _GROUND_ROUNDS = 3  # the shared ground's rise takes room from what was refined
@@ -122,16 +123,12 @@ def finer_codes(
 
     Cost: TRIES solves and roundings; then a matrix for each step of a code.
     """
-    best, chosen = work, codes
     least = _value(chip, codes, wanted)
-    tries = _other_signs(chip, work, wanted, effort, best_effort) if not keep_signs else iter(())
-    for other in tries:
-        theirs = rounded(chip, other.placed, other.solution.settings, wanted)
-        value = _value(chip, theirs, wanted)
-        if value < least:
-            best, chosen, least = other, theirs, value
+    best, chosen = work, codes
+    if not keep_signs and not (work.refined and not wanted.plain):  # else they do not follow from the closed form
+        best, chosen, least = _other_signs(chip, work, codes, least, wanted, effort, best_effort)
     if len(chip.channels) <= STEPPED_TO:
-        chosen = _stepped(chip, chosen, least, wanted)
+        chosen = _stepped(chip, chosen, least, wanted, effort)
     return best, chosen
 
 
@@ -139,34 +136,43 @@ def _value(chip: Chip, codes: np.ndarray, wanted: Wanted) -> float:
     return wanted.value(chip.matrix(codes, wanted.wavelengths_nm))
 
 
-def _other_signs(chip: Chip, work: Work, wanted: Wanted, effort: Effort, best_effort: bool) -> Iterator[Work]:
-    """The same solved with signs of inner phases drawn anew, as far as these come as close before codes."""
-    if work.refined and not wanted.plain:
-        return  # its settings do not follow from the closed form's
+def _other_signs(
+    chip: Chip, work: Work, codes: np.ndarray, least: float, wanted: Wanted, effort: Effort, best_effort: bool
+) -> tuple[Work, np.ndarray, float]:
+    """Climbing over signs of inner phases, one or two drawn at a time; what comes less close before codes is left."""
     until = math.inf if effort.seconds is None else time.monotonic() + effort.seconds
     effort = replace(effort, starts=1, progress=None)
-    plain = Settling(chip, wanted, best_effort, False, effort)
-    if plain.form is None:
-        return
-    cells = np.flatnonzero(plain.form.table.form == MZI)
+    form = Settling(chip, wanted, best_effort, False, effort).form
+    cells = np.empty(0, np.int64) if form is None else np.flatnonzero(form.table.form == MZI)
+    best, flip = work, np.zeros(0 if form is None else form.n_cells, np.uint8)
     for k in range((REFINED_TRIES if work.refined else TRIES) if len(cells) else 0):
         if (effort.cancel is not None and effort.cancel()) or time.monotonic() > until:
-            return
+            break
         rng = np.random.Generator(np.random.PCG64([effort.seed, k]))
-        flip = np.zeros(plain.form.n_cells, np.uint8)
-        flip[cells] = rng.integers(0, 2, len(cells))
-        other = Settling(chip, wanted, best_effort, False, effort, flip).run()
-        if not other.placed.held and len(other.solution.shortfalls) <= len(work.solution.shortfalls):
-            yield other
+        other = flip.copy()
+        other[rng.choice(cells, min(1 + k % 2, len(cells)), replace=False)] ^= 1
+        try:
+            there = Settling(chip, wanted, best_effort, False, effort, other).run()
+        except DriveFinding:
+            continue  # these signs need more than the drive gives
+        if there.placed.held or len(there.solution.shortfalls) > len(work.solution.shortfalls):
+            continue
+        theirs = rounded(chip, there.placed, there.solution.settings, wanted)
+        value = _value(chip, theirs, wanted)
+        if value < least:
+            best, codes, least, flip = there, theirs, value, other
+    return best, codes, least
 
 
-def _stepped(chip: Chip, codes: np.ndarray, least: float, wanted: Wanted) -> np.ndarray:
+def _stepped(chip: Chip, codes: np.ndarray, least: float, wanted: Wanted, effort: Effort) -> np.ndarray:
     """Codes moved by one, each in turn, while what is wanted comes closer."""
     best = codes.copy()
     lowest, highest = code_range(chip)
     for _ in range(_SWEEPS):
         before = least
         for k in range(len(best)):
+            if effort.cancel is not None and effort.cancel():
+                return best
             for step in (1, -1):
                 trial = best.copy()
                 trial[k] += step

@@ -77,13 +77,13 @@ class _Placement:
     Settings of heaters on the other arm are counted backwards, so that own turns are heat throughout.
     """
 
-    def __init__(self, chip: Chip, settings: np.ndarray, moved_by: np.ndarray) -> None:
+    def __init__(self, chip: Chip, settings: np.ndarray, moved_by: np.ndarray, turning: bool = True) -> None:
         self.chip = chip
         self.live = np.flatnonzero(~fixed_settings(chip))
         self.actuator = moved_by[self.live]
         self.sign = chip.arm[self.actuator]
         self.wanted = self.sign * turns((settings - chip.reference_rad)[self.live])
-        self.wraps = chip.period_rad[self.live] > 0.0
+        self.wraps = (chip.period_rad[self.live] > 0.0) & turning
         ends = [self.sign * turns(np.nan_to_num(end[self.actuator])) for end in chip.own_reach]
         self.low, self.high = np.minimum(*ends), np.maximum(*ends)
         p2pi = chip.actuators.params.get("p2pi_mw")
@@ -199,6 +199,7 @@ def place(
     best_effort: bool = False,
     moved_by: np.ndarray | None = None,
     own: np.ndarray | None = None,
+    turning: bool = True,
 ) -> Placed:
     """Volts and codes for settings, whole turns chosen for least power within limits.
 
@@ -208,6 +209,7 @@ def place(
     best_effort : hold actuators at their limits rather than raise
     moved_by : int (S,), the actuator that moves each setting; by default its primary one
     own : float (A,), own changes within limits, rad, that give the settings; None: whole turns are searched for
+    turning : whole turns may be added or taken off; they change light away from the centre wavelength
 
     Raises
     ------
@@ -215,7 +217,7 @@ def place(
 
     Cost: linear without crosstalk; with it see `least_power_wraps`.
     """
-    placement = _Placement(chip, settings, chip.primary if moved_by is None else moved_by)
+    placement = _Placement(chip, settings, chip.primary if moved_by is None else moved_by, turning)
     held: tuple[int, ...] = ()
     lowest, highest = chip.level_range
     for attempt in range(_GROUND_ROUNDS):

@@ -267,7 +267,14 @@ class Settling:
                 self.flip, self.refined = least_power_flips(chip, self.form, reach, background), None
             solution = self.solution(reach)
             moved_by = _moved_by(chip, solution.settings, background, least_power and round_ > 0)
-            placed = place(chip, solution.settings, best_effort=self.best_effort, moved_by=moved_by)
+            # what a wish other than one matrix is held back by is refined for, not refused
+            placed = place(
+                chip,
+                solution.settings,
+                best_effort=self.best_effort or not self.wanted.plain,
+                moved_by=moved_by,
+                turning=self.wanted.at_centre(chip.net.wavelength_nm),
+            )
             warmth = _warmth(chip, placed.change)
             if round_ == 0:
                 plain_mw = float(chip.power_mw(placed.levels).sum())

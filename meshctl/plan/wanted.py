@@ -13,8 +13,8 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from meshctl.optics.measures import matrix_error
-from meshctl.solver.target import Target, described, from_description, make_target
+from meshctl.optics.measures import matrix_error, unitarity_defect
+from meshctl.solver.target import UNITARY_WITHIN, Target, described, from_description, make_target
 
 if TYPE_CHECKING:  # pragma: no cover
     from meshctl.mesh.response import Response
@@ -64,10 +64,10 @@ class Wanted:
             return {"source": "own wish", "free": "nothing", "size": list(self.size), "own": True}
         return described(self.target)
 
-    @property
+    @cached_property
     def plain(self) -> bool:
-        """True where one matrix at the centre wavelength is all that is wanted."""
-        return self.target is not None and self.target.plain
+        """True where one unitary matrix at the centre wavelength is all that is wanted."""
+        return self.target is not None and self.target.plain and unitarity_defect(self.target.matrix) <= UNITARY_WITHIN
 
     @property
     def free(self) -> str:
@@ -96,6 +96,11 @@ class Wanted:
         if self.own is not None:
             return self.own.wavelengths_nm
         return None if self.target is None else self.target.wavelengths_nm
+
+    def at_centre(self, centre_nm: float) -> bool:
+        """True where whole turns of phases change nothing."""
+        waves = self.wavelengths_nm
+        return waves is None or bool((np.asarray(waves) == centre_nm).all())
 
     @cached_property
     def first(self) -> Target | None:

@@ -348,7 +348,8 @@ def from_description(entry: dict[str, Any]) -> Target:
 def _from_description(entry: dict[str, Any]) -> Target:
     shape = (int(entry["size"][0]), int(entry["size"][1]))
     matrix = np.array(entry["real"]) + 1j * np.array(entry["imag"]) if "real" in entry else None
-    if entry.get("wish"):
+    nearest = matrix is not None and unitarity_defect(matrix) > UNITARY_WITHIN
+    if entry.get("wish") or nearest:
         from meshctl.solver.wishes import make_wish
 
         arrays = {name: np.array(entry[name], float) for name in _ARRAYS if name in entry}
@@ -356,9 +357,9 @@ def _from_description(entry: dict[str, Any]) -> Target:
             shape,
             matrix=matrix,
             free=entry["free"],
-            over=entry["over"],
-            dark=entry["dark"],
-            scale=entry["scale"],
+            over=entry.get("over", "mean"),
+            dark=entry.get("dark", ()),
+            scale=entry.get("scale", 1.0),
             source=entry["source"],
             **arrays,
         )
