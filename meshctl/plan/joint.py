@@ -10,25 +10,27 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Callable
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from meshctl.errors import DriveFinding
 from meshctl.mesh.response import Response
 from meshctl.plan.chip import Chip
-from meshctl.plan.placing import fixed_settings, place
+from meshctl.plan.placing import fixed_settings, place, reach_of
 from meshctl.plan.rounding import code_range, rounded
 from meshctl.plan.settling import Effort, Settling, Work
 from meshctl.plan.wanted import Wanted
 from meshctl.solver.cells import MZI
 from meshctl.solver.reach import Reach
 
-TRIES = 40  # other signs of inner phases tried for coarse codes
-REFINED_TRIES = 6  # where each is a refinement
+TRIES = (20, 80, 1000)  # other signs of inner phases tried for coarse codes: least, most, times cells
+REFINED = 4  # of those that come closer, refined where the settings were
 STEPPED_TO = 300  # channels up to which codes are stepped one by one
 _GROUND_ROUNDS = 3  # the shared ground's rise takes room from what was refined
+_GROUND_SHARE = 0.97  # of its reach that is left to an actuator each time
 _SWEEPS = 4
+AT_LIMIT_RAD = 1e-9  # from its limit, at which an actuator counts as held there
 
 
 class Driven:
@@ -64,12 +66,10 @@ class Driven:
             total = by_setting + (self.chip.actuators.crosstalk.T @ by_setting)[self.moved_by]
         return np.where(self.live, total, 0.0)
 
-    def reach(self, high: np.ndarray) -> Reach:
-        """Own changes within limits."""
-        low_own, high_own = self.chip.own_reach
-        low = np.where(self.live, np.nan_to_num(low_own)[self.moved_by], 0.0)
-        top = np.where(self.live, np.minimum(np.nan_to_num(high_own), high)[self.moved_by], 0.0)
-        return Reach(low, np.maximum(low, top), np.zeros(len(low)), np.zeros(len(low)))
+    def reach(self, share: np.ndarray) -> Reach:
+        """Own changes within a share [A] of what limits allow."""
+        low, high = (np.where(self.live, (share * end)[self.moved_by], 0.0) for end in self.chip.own_reach)
+        return Reach(low, high, np.zeros(len(low)), np.zeros(len(low)))
 
 
 def within_limits(chip: Chip, work: Work, wanted: Wanted, effort: Effort) -> Work:
@@ -83,14 +83,15 @@ def within_limits(chip: Chip, work: Work, wanted: Wanted, effort: Effort) -> Wor
 
     response = Response(chip.net, chip.as_built(work.placed.levels))
     driven = Driven(chip, response, work.moved_by)
-    own = work.placed.change[work.moved_by]
+    own = np.where(driven.live, work.placed.change[work.moved_by], 0.0)
     waves = wanted.wavelengths_nm
     before = wanted.value(driven.matrix(own, waves))
-    high = np.full(len(chip.actuators), np.inf)
+    share = np.ones(len(chip.actuators))
+    fixed = fixed_settings(chip)
     best, least = work, before
     for _ in range(_GROUND_ROUNDS):
         found = refine(
-            chip.net, response.as_built, wanted.objective, driven.reach(high), own,
+            chip.net, response.as_built, wanted.objective, driven.reach(share), own,
             starts=effort.starts, seconds=effort.seconds, seed=effort.seed, progress=effort.progress,
             cancel=effort.cancel, model=driven,
         )  # fmt: skip
@@ -99,12 +100,18 @@ def within_limits(chip: Chip, work: Work, wanted: Wanted, effort: Effort) -> Wor
         placed = place(chip, settings, best_effort=True, moved_by=work.moved_by, own=change)
         reached = wanted.value(driven.matrix(placed.change[work.moved_by], waves))
         if reached < least:
-            solution = replace(found, settings=settings, reason=found.reason, shortfalls=work.solution.shortfalls)
-            best, least = replace(work, solution=solution, placed=placed, refined=True, limited=True), reached
+            ends = driven.reach(share)
+            at_end = driven.live & (
+                (found.settings - ends.low < AT_LIMIT_RAD) | (ends.high - found.settings < AT_LIMIT_RAD)
+            )
+            standing = {int(a) for a in work.moved_by[at_end]} | set(placed.held)
+            clamped = tuple(s for s in work.solution.shortfalls if fixed[s.setting])
+            solution = replace(found, settings=settings, shortfalls=clamped)
+            told = replace(placed, held=tuple(sorted(standing)))
+            best, least = replace(work, solution=solution, placed=told, refined=True, limited=True), reached
         if not placed.held:
             break
-        held = np.array(placed.held)
-        high[held] = 0.98 * change[held]
+        share[np.array(placed.held)] *= _GROUND_SHARE
     return best
 
 
@@ -121,7 +128,7 @@ def finer_codes(
     -------
     (Work, int64 (K,)), those given where nothing comes closer
 
-    Cost: TRIES solves and roundings; then a matrix for each step of a code.
+    Cost: 20 to 80 solves and roundings; then a matrix for each step of a code.
     """
     least = _value(chip, codes, wanted)
     best, chosen = work, codes
@@ -136,32 +143,70 @@ def _value(chip: Chip, codes: np.ndarray, wanted: Wanted) -> float:
     return wanted.value(chip.matrix(codes, wanted.wavelengths_nm))
 
 
+@dataclass
+class _Climb:
+    """Climbing over signs of inner phases for codes that come closer."""
+
+    chip: Chip
+    wanted: Wanted
+    effort: Effort
+    best_effort: bool
+    allowed: int  # shortfalls of the settings that there are
+    until: float
+
+    def over(self) -> bool:
+        stopped = self.effort.cancel is not None and self.effort.cancel()
+        return stopped or time.monotonic() > self.until
+
+    def rounded(self, flip: np.ndarray, refine: bool | None) -> tuple[Work, np.ndarray, float] | None:
+        """Solved with some signs negative, codes, and their value; None where these need more than the drive gives."""
+        effort = replace(self.effort, refine=refine)
+        try:
+            work = Settling(self.chip, self.wanted, self.best_effort, False, effort, flip).run()
+        except DriveFinding:
+            return None
+        if work.placed.held:
+            return None
+        codes = rounded(self.chip, work.placed, work.solution.settings, self.wanted)
+        return work, codes, _value(self.chip, codes, self.wanted)
+
+    def flips(self, cells: np.ndarray, n_cells: int) -> list[np.ndarray]:
+        """Signs by which codes of the closed form come closer, the best first."""
+        flip, better = np.zeros(n_cells, np.uint8), []
+        first = self.rounded(flip, False)
+        least = math.inf if first is None else first[2]
+        least_tries, most_tries, work = TRIES
+        for k in range(max(least_tries, min(most_tries, work // len(cells)))):
+            if self.over():
+                break
+            rng = np.random.Generator(np.random.PCG64([self.effort.seed, k]))
+            other = flip.copy()
+            other[rng.choice(cells, min(1 + k % 2, len(cells)), replace=False)] ^= 1
+            there = self.rounded(other, False)
+            if there is not None and there[2] < least and len(there[0].solution.shortfalls) <= self.allowed:
+                flip, least = other, there[2]
+                better.append(other)
+        return better[::-1]
+
+
 def _other_signs(
     chip: Chip, work: Work, codes: np.ndarray, least: float, wanted: Wanted, effort: Effort, best_effort: bool
 ) -> tuple[Work, np.ndarray, float]:
-    """Climbing over signs of inner phases, one or two drawn at a time; what comes less close before codes is left."""
+    """The best of other signs of inner phases: found for the closed form, refined where the settings were."""
     until = math.inf if effort.seconds is None else time.monotonic() + effort.seconds
     effort = replace(effort, starts=1, progress=None)
     form = Settling(chip, wanted, best_effort, False, effort).form
     cells = np.empty(0, np.int64) if form is None else np.flatnonzero(form.table.form == MZI)
-    best, flip = work, np.zeros(0 if form is None else form.n_cells, np.uint8)
-    for k in range((REFINED_TRIES if work.refined else TRIES) if len(cells) else 0):
-        if (effort.cancel is not None and effort.cancel()) or time.monotonic() > until:
-            break
-        rng = np.random.Generator(np.random.PCG64([effort.seed, k]))
-        other = flip.copy()
-        other[rng.choice(cells, min(1 + k % 2, len(cells)), replace=False)] ^= 1
-        try:
-            there = Settling(chip, wanted, best_effort, False, effort, other).run()
-        except DriveFinding:
-            continue  # these signs need more than the drive gives
-        if there.placed.held or len(there.solution.shortfalls) > len(work.solution.shortfalls):
-            continue
-        theirs = rounded(chip, there.placed, there.solution.settings, wanted)
-        value = _value(chip, theirs, wanted)
-        if value < least:
-            best, codes, least, flip = there, theirs, value, other
-    return best, codes, least
+    if form is None or not len(cells):
+        return work, codes, least
+    allowed = len(form.fit(reach_of(chip), form.best_place(reach_of(chip))).shortfalls)
+    climb = _Climb(chip, wanted, effort, best_effort, allowed, until)
+    found = work, codes, least
+    for flip in climb.flips(cells, form.n_cells)[: REFINED if work.refined else 1]:
+        there = climb.rounded(flip, work.refined)
+        if there is not None and there[2] < found[2]:
+            found = there
+    return found
 
 
 def _stepped(chip: Chip, codes: np.ndarray, least: float, wanted: Wanted, effort: Effort) -> np.ndarray:
