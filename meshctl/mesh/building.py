@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 
 from meshctl.errors import DuplicateName, OutOfRange, UnsoundFile
-from meshctl.mesh.actuation import CHANNEL_NUMBERS, join_actuation
+from meshctl.mesh.actuation import join_actuation
 from meshctl.mesh.description import MESH_TOML, Description
 from meshctl.mesh.drag import with_drag
 from meshctl.mesh.explicit import explicit_net
@@ -23,7 +23,8 @@ from meshctl.mesh.inserts import with_inserts
 from meshctl.mesh.lattices import CELL_FORMS, LATTICES, PLANE_SIZES, Assembly, Layout, assemble
 from meshctl.mesh.plane import PlaneLattice
 from meshctl.mesh.plane_net import assemble_plane
-from meshctl.mesh.spread import Spread
+from meshctl.mesh.samples import read_spread
+from meshctl.mesh.source import CHANNEL_NUMBERS
 from meshctl.mesh.tables import Table, unknown_name
 from meshctl.optics.elements import COUPLER, CROSSING, HAS_PHASE, KINDS
 
@@ -194,7 +195,7 @@ def build_mesh(description: Description, tables: Tables, text: str, folder: Path
     actuators, channels = join_actuation(
         description, net, tables.actuators, tables.channels, tables.tables, tables.crosstalk
     )
-    spread = Spread(**description.spread.model_dump())
+    spread = read_spread(description.spread.model_dump(), folder)
     rest = description.rest.state
     return Mesh(
         description.name,

@@ -22,6 +22,7 @@ from pydantic import (
 from meshctl.errors import Finding, MissingRow, NotFinite, OutOfRange, UnknownKey, UnsoundFile
 from meshctl.mesh.lattices import LATTICES, PLANE_SIZES
 from meshctl.mesh.quantities import QUANTITIES
+from meshctl.mesh.spread import CAUSES
 from meshctl.mesh.tables import unknown_name
 
 MESH_TOML = "mesh.toml"
@@ -158,12 +159,55 @@ class BudgetPart(_Strict):
     loss_db: _number("loss_db")  # type: ignore[valid-type]
 
 
+class ShapePart(_Strict):
+    """How one cause of [spread] is distributed, and what its parts share."""
+
+    distribution: Literal["normal", "uniform", "samples"] = "normal"
+    wafer: _number("variance_share") = 0.0  # type: ignore[valid-type]
+    gradient: _number("variance_share") = 0.0  # type: ignore[valid-type]
+    correlated: _number("variance_share") = 0.0  # type: ignore[valid-type]
+    correlation_um: _number("correlation_um") | None = None  # type: ignore[valid-type]
+    file: str | None = None
+
+
 class SpreadPart(_Strict):
     split_rad: _number("split_rad") = 0.0  # type: ignore[valid-type]
     phase_rad: _number("sigma_rad") = 0.0  # type: ignore[valid-type]
     loss_db: _number("loss_db") = 0.0  # type: ignore[valid-type]
     p2pi_share: _number("p2pi_share") = 0.0  # type: ignore[valid-type]
     r_share: _number("r_share") = 0.0  # type: ignore[valid-type]
+    crosstalk_share: _number("crosstalk_share") = 0.0  # type: ignore[valid-type]
+    noise_v: _number("noise_v") = 0.0  # type: ignore[valid-type]
+    temperature_k: _number("temperature_k") = 0.0  # type: ignore[valid-type]
+    phase_rad_per_k: _number("phase_rad_per_k") = 0.0  # type: ignore[valid-type]
+    laser_nm: _number("laser_nm") = 0.0  # type: ignore[valid-type]
+    stuck_share: _number("stuck_share") = 0.0  # type: ignore[valid-type]
+    shape: dict[str, ShapePart] = {}
+    between: list[tuple[str, str, _number("correlation")]] = []  # type: ignore[valid-type]
+
+    @model_validator(mode="after")
+    def _known_causes(self) -> SpreadPart:
+        for name in (*self.shape, *(cause for pair in self.between for cause in pair[:2])):
+            if name not in CAUSES:
+                raise _Refused(unknown_name("cause", name, CAUSES, ""))
+        for first, second, value in self.between:
+            if first == second or CAUSES[first].parts != CAUSES[second].parts:
+                raise _Refused(
+                    UnsoundFile(
+                        f"{first} and {second} are drawn for {CAUSES[first].parts} and {CAUSES[second].parts}; "
+                        f"a correlation of {value:g} is for two causes of the same parts",
+                        remedy="remove that line of 'between'",
+                    )
+                )
+        for name, shape in self.shape.items():
+            if (shape.distribution == "samples") != (shape.file is not None):
+                raise _Refused(
+                    UnsoundFile(
+                        f"the shape of {name} is {shape.distribution} and its file {shape.file!r}",
+                        remedy='give distribution = "samples" together with file, or neither',
+                    )
+                )
+        return self
 
 
 class InsertPart(_Strict):

@@ -106,8 +106,9 @@ def load(folder: str | Path) -> Mesh:
 
 
 def measured_files(description: Description) -> list[str]:
-    """Files of measured parts, by their paths within the mesh folder."""
+    """Files of measured parts and of measured scatter, by their paths within the mesh folder."""
     named = [part.file for part in description.insert]
+    named += [shape.file for shape in description.spread.shape.values()]
     named += [row[2].get("file") for row in description.elements or [] if len(row) == 3 and isinstance(row[2], dict)]
     return list(dict.fromkeys(file for file in named if isinstance(file, str)))
 

@@ -99,5 +99,14 @@ QUANTITIES: dict[str, Quantity] = {
         _q("split_rad", "rad", 0.0, 1.0, 0.0, "scatter of coupler angles"),
         _q("p2pi_share", "", 0.0, 1.0, 0.0, "scatter of the power for 2 pi, as a share of it"),
         _q("r_share", "", 0.0, 1.0, 0.0, "scatter of resistances, as a share of them"),
+        _q("crosstalk_share", "", 0.0, 10.0, 0.0, "scatter of crosstalk coefficients, as a share of them"),
+        _q("noise_v", "V", 0.0, 1e3, 0.0, "noise of the source's levels, mA where it drives current"),
+        _q("temperature_k", "K", 0.0, 1e3, 0.0, "drift of the temperature since calibration"),
+        _q("phase_rad_per_k", "rad/K", -1e3, 1e3, 0.0, "change of a settable phase with temperature"),
+        _q("laser_nm", "nm", 0.0, 100.0, 0.0, "drift of the laser's wavelength"),
+        _q("stuck_share", "", 0.0, 1.0, 0.0, "probability that an actuator does nothing"),
+        _q("variance_share", "", 0.0, 1.0, 0.0, "share of a cause's variance"),
+        _q("correlation_um", "um", 0.0, 1e6, math.nan, "distance over which parts resemble one another", True),
+        _q("correlation", "", -1.0, 1.0, 0.0, "correlation of two causes in the same part"),
     )
 }

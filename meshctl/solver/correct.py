@@ -110,8 +110,8 @@ def _step_block(half, outer):  # type: ignore[no-untyped-def]
     return g * e * s, g * c, g * e * c, -g * s
 
 
-# the same rules outside kernels, where compiling them would take longer than they do
-nearest, wrapped = _nearest.py_func, _wrapped.py_func  # type: ignore[attr-defined]
+# the same rule outside kernels, where compiling it would take longer than it does
+nearest = _nearest.py_func  # type: ignore[attr-defined]
 _IN = given(float64)
 
 
@@ -205,9 +205,10 @@ def _walk(  # type: ignore[no-untyped-def]
         else:
             aligned[t] = 1
         joined = group[m + 1]
-        for q in range(len(group)):
-            if group[q] == joined:
-                group[q] = group[m]
+        if joined != group[m]:
+            for q in range(len(group)):
+                if group[q] == joined:
+                    group[q] = group[m]
         ep = _turn(settings[t] + base[p])
         # the phases behind the cell, each from the overlap of its row
         q0 = z00 * ep * w00.conjugate() + z01 * w01.conjugate()
@@ -248,14 +249,13 @@ def _output_phases(
     above = np.mod(value[None, :] + common[:, None] - reach.low[s][None, :] + SLACK, 2 * np.pi)
     over = np.maximum(reach.low[s] + above - reach.high[s] - 2 * SLACK, 0.0)
     best = int(np.argmin(1e6 * over.sum(1) + above.sum(1)))
-    shortfalls = []
-    for setting, v in zip(s.tolist(), (value + common[best]).tolist(), strict=True):
-        x = nearest(v, reach.low[setting], reach.high[setting], reach.period[setting])
-        settings[setting] = x
-        off = float(wrapped(x - v, 2 * math.pi))
-        if abs(off) > 2 * SLACK:
-            shortfalls.append(Shortfall(int(setting), x - off, x, 0.0))
-    return shortfalls
+    low, high, period = reach.low[s].tolist(), reach.high[s].tolist(), reach.period[s].tolist()
+    want = value + common[best]
+    found = np.array([nearest(*row) for row in zip(want.tolist(), low, high, period, strict=True)])
+    settings[s] = found
+    off = found - want - 2 * math.pi * np.floor((found - want) / (2 * math.pi) + 0.5)
+    missed = np.flatnonzero(np.abs(off) > 2 * SLACK)
+    return [Shortfall(int(s[k]), float(found[k] - off[k]), float(found[k]), 0.0) for k in missed]
 
 
 def fit_cells(
@@ -282,7 +282,7 @@ def fit_cells(
     output = np.full(circuit.n_lanes, -1, np.int32)
     _walk(
         table.event, table.form, table.lane, table.element, step_of, steps.half_angle_rad, steps.outer_rad,
-        net.setting_of, base, circuit.element_lane_a, np.isin(net.kind, (PHASE, GUIDE)).astype(np.uint8),
+        net.setting_of, base, circuit.element_lane_a, ((net.kind == PHASE) | (net.kind == GUIDE)).astype(np.uint8),
         reach.low, reach.high, reach.period, reach.idle,
         np.zeros(len(table.cell), np.uint8) if flip is None else flip, np.uint8(free in ("inputs", "both")),
         settings, wanted, off, carried, aligned, output,

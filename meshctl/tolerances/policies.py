@@ -1,0 +1,198 @@
+"""What is done with a die before its light is measured: codes as they are, local correction, or a full solve.
+
+`as-set` puts the plan's codes on the die. `corrected` knows the die's parts and corrects cell by cell, before
+codes are rounded. `refined` solves for the die anew, codes included. What drifts comes after all of them.
+Public: Policy, POLICIES, AsSet, Corrected, Refined.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from meshctl.mesh.response import Response
+from meshctl.optics.feedforward import fuse, propagate
+from meshctl.optics.turning import turn
+from meshctl.plan.chip import Chip
+from meshctl.plan.pipeline import Effort, solve
+from meshctl.plan.placing import place, reach_of
+from meshctl.plan.plan import Plan
+from meshctl.solver.closed import ClosedForm
+from meshctl.solver.correct import fit_cells
+from meshctl.solver.target import from_description
+from meshctl.tolerances.dies import ELECTRIC, Drawing, Errors, die_as_built, mesh_of
+
+COUPLED = (*ELECTRIC, "noise_v")  # causes that change what codes give
+
+
+class Light:
+    """Light of dies that stand at given settings, on arrays made once.
+
+    Parameters
+    ----------
+    drawing : Drawing
+    settings : float (S,), rad, where most dies stand
+    """
+
+    def __init__(self, drawing: Drawing, settings: np.ndarray) -> None:
+        mesh = drawing.mesh
+        self.drawing, self.settings = drawing, settings
+        response = self.response = Response(mesh.net, mesh.as_built)
+        if response.loops:
+            return
+        circuit, net = response.circuit, mesh.net
+        self.parts = response.parts(settings)
+        self.blocks = np.empty((circuit.n_blocks, 8))
+        self.real, self.imag = np.zeros((2, circuit.n_lanes, circuit.n_inputs))
+        self.unit = np.eye(circuit.n_lanes, circuit.n_inputs)
+        self.out = circuit.output_lane
+        value = response.values(settings)
+        amplitude = np.hypot(np.hypot(self.parts[0], self.parts[1]), np.hypot(self.parts[2], self.parts[3]))
+        self.groups = []
+        for rows, slot in ((drawing.couplers, 3), (drawing.phases, 1)):
+            moved = np.flatnonzero(net.setting_of[rows] >= 0)
+            self.groups.append(
+                [
+                    rows, slot, np.cos(value[rows]), np.sin(value[rows]), amplitude[rows],
+                    moved, net.setting_of[rows[moved]], np.zeros(len(rows)),
+                ]
+            )  # fmt: skip
+
+    def matrix(self, errors: Errors, settings: np.ndarray) -> np.ndarray:
+        """Field matrix [out, in] of a die with these settings in force, at the centre wavelength; no loops."""
+        drawing, still = self.drawing, settings is self.settings
+        for group, causes in zip(self.groups, (("split_rad",), ("phase_rad", "temperature_k")), strict=True):
+            rows, slot, cosine, sine, amplitude, moved, setting, zero = group
+            off = zero
+            for cause in causes:
+                if cause in errors:
+                    factor = drawing.spread.phase_rad_per_k if cause == "temperature_k" else 1.0
+                    off = off + factor * errors[cause] if off is not zero or factor != 1.0 else errors[cause]
+            if not still:
+                off = off.copy()
+                off[moved] += (settings - self.settings)[setting]
+            if slot == 3 and "loss_db" in errors:
+                loss = drawing.mesh.as_built.loss_db[rows]
+                amplitude = amplitude * np.exp(_NEPER * (np.abs(loss + errors["loss_db"]) - loss))
+            turn(rows, cosine, sine, off, amplitude, slot, self.parts)
+        circuit = self.response.circuit
+        fuse(circuit.first, circuit.element, circuit.side, self.parts, self.blocks)
+        self.real[:] = self.unit
+        self.imag[:] = 0.0
+        propagate(circuit.lane_a, circuit.lane_b, self.blocks, self.real, self.imag)
+        matrix: np.ndarray = self.real[self.out] + 1j * self.imag[self.out]
+        return matrix
+
+
+_NEPER = -np.log(10.0) / 20.0  # of an amplitude, by dB of loss
+
+
+class Policy:
+    """One way of treating dies.
+
+    Parameters
+    ----------
+    drawing : Drawing
+    plan : Plan
+    """
+
+    chunk = 250  # trials at a time: what one file of a run holds
+
+    def __init__(self, drawing: Drawing, plan: Plan) -> None:
+        self.drawing, self.plan = drawing, plan
+        self.mesh = drawing.mesh
+        self.chip = Chip(self.mesh)
+        self.levels = self.chip.levels(plan.codes)
+        self.light = Light(drawing, self.chip.actual(plan.codes))
+        # what light alone does not answer for: loops, couplers that drag phases, other wavelengths
+        self.slow = self.light.response.loops or self.chip.drag is not None
+        self.power_mw = float(self.chip.power_mw(self.levels).sum())
+
+    def run(self, errors: Errors) -> tuple[np.ndarray, float]:
+        """(field matrix, power in mW) of one die."""
+        raise NotImplementedError
+
+    def _measured(
+        self, chip: Chip, errors: Errors, levels: np.ndarray, settings: np.ndarray | None = None
+    ) -> np.ndarray:
+        """Light of a die at levels, or at settings in force; `errors` with what drifts."""
+        if settings is None:
+            settings = chip.mesh.as_built.in_force(chip.reference_rad + chip.total_changes(chip.own_changes(levels)))
+        if not self.slow and "laser_nm" not in errors:
+            return self.light.matrix(errors, settings)
+        extra = die_as_built(self.drawing, errors, drift=True).error_rad - chip.mesh.as_built.error_rad
+        built = chip.as_built(levels)
+        response = Response(chip.net, replace(built, error_rad=built.error_rad + extra))
+        if "laser_nm" not in errors:
+            return response.matrix(settings)
+        return response.matrix(settings, self.mesh.net.wavelength_nm + errors["laser_nm"])[0]
+
+
+class AsSet(Policy):
+    """The plan's codes on every die."""
+
+    def run(self, errors: Errors) -> tuple[np.ndarray, float]:
+        if not any(cause in errors for cause in COUPLED):
+            if not self.slow and "laser_nm" not in errors:
+                return self.light.matrix(errors, self.light.settings), self.power_mw
+            chip = Chip(mesh_of(self.drawing, errors))
+            return self._measured(chip, errors, self.levels, self.light.settings), self.power_mw
+        chip = Chip(mesh_of(self.drawing, errors)) if any(c in errors for c in ELECTRIC) else self.chip
+        levels = self.levels + errors["noise_v"] if "noise_v" in errors else self.levels
+        if chip is self.chip and (self.slow or "laser_nm" in errors):
+            chip = Chip(mesh_of(self.drawing, errors))
+        return self._measured(chip, errors, levels), float(chip.power_mw(levels).sum())
+
+
+class Corrected(Policy):
+    """Every die with its parts known, corrected cell by cell within its limits; codes are not rounded."""
+
+    chunk = 100
+
+    def __init__(self, drawing: Drawing, plan: Plan) -> None:
+        super().__init__(drawing, plan)
+        target = from_description(plan.target)
+        closed = ClosedForm(self.mesh.net, self.mesh.as_built, target)
+        self.reach = reach_of(self.chip)
+        self.closed, self.free = closed, target.free
+        self.steps, self.step_of = closed.places[closed.best_place(self.reach)]
+
+    def run(self, errors: Errors) -> tuple[np.ndarray, float]:
+        electric = any(cause in errors for cause in ELECTRIC)
+        as_built = die_as_built(self.drawing, errors, drift=False)
+        chip = Chip(mesh_of(self.drawing, errors)) if electric else self.chip
+        reach = reach_of(chip) if electric else self.reach
+        closed = self.closed
+        fitted = fit_cells(
+            self.mesh.net, as_built, closed.response.circuit, closed.table, self.steps, self.step_of, reach, self.free
+        )
+        settings = as_built.in_force(fitted.settings)
+        if not electric and "noise_v" not in errors and not self.slow and "laser_nm" not in errors:
+            return self.light.matrix(errors, settings), float("nan")
+        chip = Chip(mesh_of(self.drawing, errors))
+        levels = place(chip, fitted.settings, best_effort=True).levels
+        power = float(chip.power_mw(levels).sum())
+        if "noise_v" in errors:
+            levels = levels + errors["noise_v"]
+        return self._measured(chip, errors, levels), power
+
+
+class Refined(Policy):
+    """Every die solved for anew, refined, codes rounded."""
+
+    chunk = 10
+
+    def run(self, errors: Errors) -> tuple[np.ndarray, float]:
+        mesh = mesh_of(self.drawing, errors)
+        chip = Chip(mesh)
+        plan = solve(mesh, from_description(self.plan.target), best_effort=True, effort=Effort(refine=True))
+        levels = chip.levels(plan.codes)
+        if "noise_v" in errors:
+            levels = levels + errors["noise_v"]
+        return self._measured(chip, errors, levels), float(chip.power_mw(levels).sum())
+
+
+POLICIES: dict[str, Callable[[Drawing, Plan], Any]] = {"as-set": AsSet, "corrected": Corrected, "refined": Refined}
