@@ -3,7 +3,7 @@
 Each cause is switched off alone in the model of the chip, and the whole is solved again with the same effort.
 Parts of causes that act together do not add up: what one alone cannot mend is in `rest`, and the other end of
 the order, each cause with all others off, is told beside.
-Public: account, without, CAUSES, ELEMENTS.
+Public: account, without, most_helpful, error_of, CAUSES, ELEMENTS.
 """
 
 from __future__ import annotations
