@@ -12,10 +12,11 @@ import numpy as np
 
 from meshctl.errors import UnsoundFile
 from meshctl.laws import LAWS
-from meshctl.mesh.actuation import CHANNEL_NUMBERS, DRIVES, PARAM_NAMES
+from meshctl.mesh.actuation import PARAM_NAMES
 from meshctl.mesh.building import Tables, build_mesh
 from meshctl.mesh.description import parse_description
 from meshctl.mesh.graph import Mesh
+from meshctl.mesh.source import CHANNEL_NUMBERS, DRIVES
 from meshctl.mesh.tables import table_text
 
 ELEMENT_HEAD = ("element", "error_rad", "loss_db", "stuck_rad", "sigma_rad")
