@@ -34,6 +34,7 @@ FINE_BITS = 30  # of codes that count as none
 WIDER_BITS = 3  # a source without limits goes this many doublings further, in the same steps
 LOSSES_TO = 2000  # elements of odd loss tried one by one
 STEP_RAD = 1e-4
+LEAST_SHARE = 1e-6  # below, it is rounding
 
 
 def _split(mesh: Mesh) -> Mesh:
@@ -206,10 +207,10 @@ def most_helpful(mesh: Mesh, wish: Target | Objective, plan: Plan) -> list[dict[
     Returns
     -------
     list of dict, at most ELEMENTS
-        `element`, `cause`, `off` (rad, or dB for a loss), `share` of what is to be made small. For a splitting
-        error e it is e times the derivative by it over two, as the whole grows with the square of the errors; for a
-        setting that nothing moves what a parabola through its derivatives promises; for a loss that stands out from
-        its kind what equal loss would change. Other settings stay where they are.
+        `element`, `cause`, `off` (rad, or dB for a loss), and `share` of what is left of what is to be made small,
+        codes in. For a splitting error e it is e times the derivative by it over two, as the whole grows with the
+        square of the errors; for a setting that nothing moves what a parabola through its derivatives promises; for
+        a loss that stands out from its kind what equal loss would change. Other settings stay where they are.
     """
     wanted = Wanted.of(wish, (len(mesh.net.outputs), len(mesh.net.inputs)))
     chip = Chip(mesh)
@@ -218,17 +219,18 @@ def most_helpful(mesh: Mesh, wish: Target | Objective, plan: Plan) -> list[dict[
     settings = np.where(fixed, plan.actual, settings)
     as_built = chip.as_built(chip.levels(plan.codes))
     here = wanted.value(Response(mesh.net, as_built).matrix(settings, wanted.wavelengths_nm))
-    if here <= 0.0:
+    total = max(here, wanted.value(chip.matrix(plan.codes, wanted.wavelengths_nm)))
+    if total <= 0.0:
         return []
-    found = [*_splits(mesh, as_built.error_rad, settings, wanted, here)]
-    found += _clamped(mesh, as_built, settings, np.flatnonzero(fixed), wanted, here)
-    found += _odd_losses(mesh, as_built, settings, wanted, here)
-    found = [entry for entry in found if entry["share"] > 0.0]
+    found = [*_splits(mesh, as_built.error_rad, settings, wanted, total)]
+    found += _clamped(mesh, as_built, settings, np.flatnonzero(fixed), wanted, total)
+    found += _odd_losses(mesh, as_built, settings, wanted, here, total)
+    found = [entry for entry in found if entry["share"] > LEAST_SHARE]
     return sorted(found, key=lambda entry: -entry["share"])[:ELEMENTS]
 
 
 def _splits(
-    mesh: Mesh, error_rad: np.ndarray, settings: np.ndarray, wanted: Wanted, here: float
+    mesh: Mesh, error_rad: np.ndarray, settings: np.ndarray, wanted: Wanted, total: float
 ) -> Iterable[dict[str, Any]]:
     net = mesh.net
     rows = np.flatnonzero((net.kind == COUPLER) & (error_rad != 0.0))
@@ -241,14 +243,14 @@ def _splits(
     loose = replace(net, setting_of=setting_of, nominal=np.where(net.kind == LOSS, net.nominal, value))
     plain = replace(mesh.as_built, error_rad=np.zeros(net.n_elements), stuck_rad=np.full(len(rows), np.nan))
     pull = wanted.pull(Response(loose, plain), value[rows])
-    shares = 0.5 * pull * error_rad[rows] / here
+    shares = 0.5 * pull * error_rad[rows] / total
     names = net.names.elements
     for row, share in zip(rows.tolist(), shares.tolist(), strict=True):
         yield {"element": names[row], "cause": "splitting", "off": float(error_rad[row]), "share": share}
 
 
 def _clamped(
-    mesh: Mesh, as_built: Any, settings: np.ndarray, rows: np.ndarray, wanted: Wanted, here: float
+    mesh: Mesh, as_built: Any, settings: np.ndarray, rows: np.ndarray, wanted: Wanted, total: float
 ) -> Iterable[dict[str, Any]]:
     free = Response(mesh.net, replace(as_built, stuck_rad=np.full(mesh.net.n_settings, np.nan)))
     for row in rows.tolist():
@@ -256,7 +258,7 @@ def _clamped(
         step[row] = STEP_RAD
         above, below = wanted.pull(free, settings + step)[row], wanted.pull(free, settings - step)[row]
         slope, bend = 0.5 * (above + below), (above - below) / (2.0 * STEP_RAD)
-        share = min(0.5 * slope**2 / bend / here, 1.0) if bend > 0.0 else 0.0
+        share = min(0.5 * slope**2 / bend / total, 1.0) if bend > 0.0 else 0.0
         off = slope / bend if bend > 0.0 else 0.0
         stuck = not np.isnan(mesh.as_built.stuck_rad[row])
         name = mesh.net.setting_names[row]
@@ -264,7 +266,7 @@ def _clamped(
 
 
 def _odd_losses(
-    mesh: Mesh, as_built: Any, settings: np.ndarray, wanted: Wanted, here: float
+    mesh: Mesh, as_built: Any, settings: np.ndarray, wanted: Wanted, here: float, total: float
 ) -> Iterable[dict[str, Any]]:
     net, loss = mesh.net, as_built.loss_db
     usual = np.zeros(net.n_elements)
@@ -276,7 +278,7 @@ def _odd_losses(
         even = loss.copy()
         even[row] = usual[row]
         matrix = Response(net, replace(as_built, loss_db=even)).matrix(settings, wanted.wavelengths_nm)
-        share = (here - wanted.value(matrix)) / here
+        share = (here - wanted.value(matrix)) / total
         yield {
             "element": net.names.elements[row],
             "cause": "losses",
