@@ -1,22 +1,53 @@
 """Figures, drawn with matplotlib and written to files.
 
-Public: spectrum_figure.
+Public: plan_figure, spectrum_figure.
 """
 
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from meshctl.errors import WrongUsage
 from meshctl.optics.features import Feature
+from meshctl.plan.plan import Plan
 from meshctl.plan.spectrum import Spectrum
 from meshctl.session import require_suffix
 from meshctl.units import db_array, nm_from_thz
 
+if TYPE_CHECKING:  # pragma: no cover
+    from matplotlib.figure import Figure
+
 LINES_MOST = 12  # port pairs that one figure can show and still be read
 FLOOR_DB = -80.0
+
+
+def plan_figure(plan: Plan) -> Figure:
+    """Volts of every channel with the room left up to its limit, and power of every actuator.
+
+    Returns
+    -------
+    matplotlib Figure, which draws itself in a notebook
+    """
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    figure = Figure(figsize=(8.0, 5.0), layout="constrained")
+    FigureCanvasAgg(figure)
+    above, below = figure.subplots(2, 1)
+    channels, actuators = np.arange(1, len(plan.volts) + 1), np.arange(1, len(plan.power_mw) + 1)
+    above.bar(channels, plan.volts, width=0.8, color="#3d6b7d", label="applied")
+    room = np.where(np.isfinite(plan.headroom_v), plan.headroom_v, 0.0)
+    above.bar(
+        channels, room, width=0.8, bottom=plan.volts, color="none", edgecolor="#b9b9b9", label="room to the limit"
+    )
+    above.set(xlabel="channel, in the order of the plan", ylabel="volts (V)", title=plan.mesh_name)
+    above.legend(loc="upper right", fontsize="small")
+    below.bar(actuators, plan.power_mw, width=0.8, color="#a4593f")
+    below.set(xlabel="actuator, in the order of the plan", ylabel="power (mW)")
+    return figure
 
 
 def spectrum_figure(

@@ -103,3 +103,13 @@ def test_names_in_notebooks_are_escaped():
     mesh = meshctl.lattice("rectangular", modes=2, name="<b>&")
     for drawn in (mesh, meshctl.solve(mesh, "dft")):
         assert "<b>&" in "".join(ElementTree.fromstring(drawn._repr_html_()).itertext())
+
+
+def test_plan_draws_its_volts_and_power():
+    mesh = meshctl.lattice("rectangular", modes=4)
+    plan = meshctl.solve(mesh, "dft")
+    above, below = plan.plot().axes
+    applied, room = above.containers
+    assert [bar.get_height() for bar in applied] == pytest.approx(plan.volts.tolist())
+    assert [bar.get_height() + bar.get_y() for bar in room] == pytest.approx([10.0] * 16)  # the source's range
+    assert sum(bar.get_height() for bar in below.containers[0]) == pytest.approx(plan.power_mw.sum())

@@ -92,6 +92,12 @@ class Plan:
         body = "".join(f"<tr><th>{name}</th><td>{escape(value)}</td></tr>" for name, value in rows)
         return f"<table><caption>plan for {escape(self.mesh_name)}</caption>{body}</table>"
 
+    def plot(self) -> Any:
+        """Volts and room of every channel, power of every actuator: a matplotlib figure, loaded on demand."""
+        from meshctl.plots import plan_figure  # the one import upward: a plan draws itself in a notebook
+
+        return plan_figure(self)
+
     def _nearness(self) -> list[tuple[str, str]]:
         if self.is_routes:
             return [("power error", f"{self.power_error:.3g}")]
