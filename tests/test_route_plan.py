@@ -288,11 +288,20 @@ def test_file_of_routes_reads_back_equal(curlew, tmp_path):
     ("spoil", "error", "says"),
     [
         (lambda e: e.pop("routes"), MissingRow, "'routes' is missing"),
-        (lambda e: e["routes"][0].pop("cells"), UnsoundFile, "'routes' must list objects with cells"),
-        (lambda e: e.update(search=[]), UnsoundFile, "'search' is"),
+        (lambda e: e.update(routes=[]), UnsoundFile, "'routes' must list one route or more"),
+        (lambda e: e["routes"][0].pop("cells"), MissingRow, r"'routes\[0\].cells' is missing"),
+        (lambda e: e["routes"][0].update(input=3), UnsoundFile, r"'routes\[0\].input' is 3, must be a text"),
+        (lambda e: e["routes"][0].update(ripple_db="x"), UnsoundFile, "must be a number or null"),
+        (lambda e: e.update(search=[]), UnsoundFile, r"'search' is \[\], must be an object"),
         (lambda e: e.update(power_error=None), NotFinite, "'power_error' is None"),
-        (lambda e: e["target"].update(words=[]), UnsoundFile, "must list routes"),
-        (lambda e: e["target"].update(words="in1:out2"), UnsoundFile, "must list routes"),
+        (lambda e: e.update(continuous={}), MissingRow, "'continuous.power_error' is missing"),
+        (lambda e: e["target"].update(words=[]), UnsoundFile, "must be a list of routes"),
+        (lambda e: e["target"].update(words="in1:out2"), UnsoundFile, "must be a list of routes"),
+        (lambda e: e["target"].update(seed=-1), UnsoundFile, "'target.seed' is -1, must be a whole number"),
+        (lambda e: e["target"].update(seconds=0), UnsoundFile, "must be a number above 0"),
+        (lambda e: e["target"].pop("avoid"), MissingRow, "'target.avoid' is missing"),
+        (lambda e: e.update(reason="luck"), UnsoundFile, "'reason' is 'luck', must be one of exact"),
+        (lambda e: e.update(mesh_hash=None), UnsoundFile, "'mesh_hash' is None, must be a text"),
     ],
 )
 def test_spoilt_file_of_routes_is_refused(dunlin, tmp_path, spoil, error, says):
@@ -303,11 +312,20 @@ def test_spoilt_file_of_routes_is_refused(dunlin, tmp_path, spoil, error, says):
         read_plan(tmp_path / "p.json")
 
 
-def test_unreadable_wish_is_no_crash(dunlin, tmp_path):
+@pytest.mark.parametrize(
+    ("spoil", "says"),
+    [
+        (lambda e: e["target"].update(words=["x"]), "wish cannot be read: route 'x' is not complete"),
+        (lambda e: e["target"].update(band="1540"), "wish cannot be read: --band 1540 is no range"),
+        (lambda e: e["routes"][0].update(output="out9"), "route in1:out9 is not on mesh 'dunlin'"),
+        (lambda e: e["target"].update(words=["in1:drop2"]), "route in1:drop1 that its wish lacks"),
+    ],
+)
+def test_unreadable_wish_is_no_crash(dunlin, tmp_path, spoil, says):
     entry = json.loads(plan_text(meshctl.route(dunlin, ["in1:drop1"])))
-    del entry["target"]["avoid"]
+    spoil(entry)
     (tmp_path / "p.json").write_text(json.dumps(entry))
-    with pytest.raises(UnsoundFile, match=r"not readable: KeyError 'avoid'; route again"):
+    with pytest.raises(UnsoundFile, match=says):
         meshctl.predict(dunlin, read_plan(tmp_path / "p.json"))
 
 

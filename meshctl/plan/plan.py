@@ -16,6 +16,7 @@ import numpy as np
 from meshctl import __version__
 from meshctl.errors import MissingFile, MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
 from meshctl.mesh.graph import Mesh, frozen
+from meshctl.plan.structure import NUMBER, PLAN, ROUTE, ROUTES_ASKED, SEARCH, require
 
 FORMAT = 1
 ARRAYS = {
@@ -27,7 +28,6 @@ ARRAYS = {
     "headroom_v": "n_channels",
 }
 ROUTES = "routes"  # kind of a target that asks for routes
-ROUTE_KEYS = {"input", "output", "share", "cells"}  # of every route
 ONLY_ROUTES = ("power_error", "routes", "search")  # keys that only plans for routes have
 OPTIONAL = (*ONLY_ROUTES, "measures", "account")  # left out where empty
 
@@ -141,20 +141,18 @@ def _array(entry: dict[str, Any], name: str, where: str) -> np.ndarray:
 
 
 def _check_routes(entry: dict[str, Any], where: str) -> None:
-    """Refuse a plan for routes that names none; NaN takes the place of what routes do not have."""
-    words = entry["target"].get("words")
-    if not isinstance(words, list) or not words or not all(isinstance(w, str) for w in words):
-        raise UnsoundFile(f"'target.words' is {words!r}, must list routes", where=where, remedy="route again")
+    """Refuse a plan for routes of another form; NaN takes the place of what routes do not have."""
     for name in ONLY_ROUTES:
         if name not in entry:
             raise MissingRow(f"key '{name}' is missing", where=where, remedy="route again")
+    require(entry["target"], ROUTES_ASKED, where, "target")
+    require(entry["search"], SEARCH, where, "search")
+    require(entry["continuous"], {"power_error": NUMBER}, where, "continuous")
     listed = entry["routes"]
-    if not isinstance(listed, list) or not all(isinstance(r, dict) and r.keys() >= ROUTE_KEYS for r in listed):
-        raise UnsoundFile(
-            f"'routes' must list objects with {', '.join(sorted(ROUTE_KEYS))}", where=where, remedy="route again"
-        )
-    if not isinstance(entry["search"], dict):
-        raise UnsoundFile(f"'search' is {entry['search']!r}, must be an object", where=where, remedy="route again")
+    if not isinstance(listed, list) or not listed:
+        raise UnsoundFile("'routes' must list one route or more", where=where, remedy="route again")
+    for k, route in enumerate(listed):
+        require(route, ROUTE, where, f"routes[{k}]")
     entry |= {"fidelity": math.nan, "matrix_error": math.nan}
 
 
@@ -201,6 +199,7 @@ def read_plan(path: str | Path) -> Plan:
             raise MissingRow(f"key '{name}' is missing", where=where, remedy="solve again")
     if not isinstance(entry["target"], dict):
         raise UnsoundFile(f"'target' is {entry['target']!r}, must be an object", where=where, remedy="solve again")
+    require(entry, PLAN, where)
     routes = entry["target"].get("kind") == ROUTES
     if routes:
         _check_routes(entry, where)

@@ -11,7 +11,7 @@ from pathlib import Path
 
 import numpy as np
 
-from meshctl.errors import Finding, MissingFile, WrongUsage
+from meshctl.errors import Finding, MissingFile, UnsoundFile, WrongUsage
 from meshctl.mesh.files import write_whole
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.tables import unknown_name
@@ -130,7 +130,10 @@ def renew_state(mesh: Mesh, name: str) -> Plan:
     if old.is_routes:
         from meshctl.plan.switching import asked_of, route
 
-        plan = route(mesh, asked_of(old))
+        try:
+            plan = route(mesh, asked_of(old))
+        except WrongUsage as finding:  # what the file asks, not what the user wrote
+            raise UnsoundFile(finding.what, where=f"state '{name}'", remedy="route again and save it anew") from None
     else:
         from meshctl.plan.pipeline import Effort, solve
         from meshctl.solver.target import from_description

@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import NoRoutes, UnsoundFile
+from meshctl.errors import NoRoutes, UnsoundFile, WrongUsage
 from meshctl.mesh.graph import Mesh, frozen
 from meshctl.optics.grid import wavelengths_of
 from meshctl.optics.measures import throughput, throughput_per_input
@@ -73,14 +73,15 @@ def asked_of(plan: Plan) -> RouteTarget:
     ------
     UnsoundFile
     """
-    entry = {k: v for k, v in plan.target.items() if k not in ("kind", "source")}
+    entry = {k: v for k, v in plan.target.items() if k in RouteTarget.__dataclass_fields__}
+    rank = entry["priorities"]
+    lists = {"words": tuple(entry["words"]), "avoid": tuple(entry["avoid"])}
+    asked = RouteTarget(**{**entry, **lists, "priorities": None if rank is None else tuple(rank)})
     try:
-        rank = entry["priorities"]
-        lists = {"words": tuple(entry["words"]), "avoid": tuple(entry["avoid"])}
-        return RouteTarget(**{**entry, **lists, "priorities": None if rank is None else tuple(rank)})
-    except (KeyError, TypeError) as problem:
-        what = f"the routes of the plan are not readable: {type(problem).__name__} {problem}"
-        raise UnsoundFile(what, remedy="route again") from None
+        _ = asked.wishes, asked.wavelengths_nm(1.0)
+    except WrongUsage as finding:
+        raise UnsoundFile(f"the plan's wish cannot be read: {finding.what}", remedy="route again") from None
+    return asked
 
 
 def route(mesh: Mesh, asked: RouteTarget) -> Plan:
@@ -159,6 +160,13 @@ def predict_routes(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = N
     given = asked.wavelengths_nm(mesh.net.wavelength_nm) if wavelengths_nm is None else wavelengths_nm
     ends = {(r["input"], r["output"]) for r in plan.routes}
     kept = [w for w in asked.wishes if {(w.source, sink) for sink in w.sinks} <= ends]
+    asked_for = {(w.source, sink) for w in kept for sink in w.sinks}
+    for source, sink in sorted(ends):
+        if source not in mesh.net.inputs or sink not in mesh.net.outputs:
+            said = f"the plan's route {source}:{sink} is not on mesh '{mesh.name}'"
+            raise UnsoundFile(said, remedy="route again")
+        if (source, sink) not in asked_for:
+            raise UnsoundFile(f"the plan has a route {source}:{sink} that its wish lacks", remedy="route again")
     band = Band.of(chip.response_at(plan.codes), chip.actual(plan.codes), [w.source for w in kept], given)
     return _prediction(chip, plan.codes, wavelengths_nm), signals(mesh.net.outputs, kept, band)
 
