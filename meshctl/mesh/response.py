@@ -171,6 +171,10 @@ class Response:
         out: np.ndarray = real[circuit.output_lane] + 1j * imag[circuit.output_lane]
         return out
 
+    def through(self, blocks: np.ndarray) -> np.ndarray:
+        """Field matrix (out, in) of fused blocks [B, 8] of any making."""
+        return self._run(blocks, np.eye(self.circuit.n_inputs))
+
     def matrix(self, settings: np.ndarray, wavelengths_nm: np.ndarray | None = None) -> np.ndarray:
         """Field matrix of the chip.
 

@@ -1,6 +1,6 @@
 """How the matrix answers to small errors of the settings: Jacobian and Gram matrix.
 
-Public: jacobian, gram.
+Public: jacobian, part_jacobian, gram, unseen, NEPER_PER_DB.
 """
 
 from __future__ import annotations
@@ -9,6 +9,8 @@ import numpy as np
 
 from meshctl.mesh.response import Response
 from meshctl.optics.jacobian import jacobian_kernel
+
+NEPER_PER_DB = float(np.log(10.0)) / 20.0
 
 
 def jacobian(response: Response, settings: np.ndarray) -> np.ndarray:
@@ -24,8 +26,37 @@ def jacobian(response: Response, settings: np.ndarray) -> np.ndarray:
 
     Cost: S out in numbers of 16 bytes: 16 MB for a full mesh of 32 modes, 270 MB for 64.
     """
-    circuit, net = response.circuit, response.net
-    out = np.zeros((net.n_settings, len(circuit.output_lane), circuit.n_inputs), complex)
+    net = response.net
+    out = _rows(response, settings, net.setting_of, np.zeros(net.n_elements, np.uint8), net.n_settings)
+    out[~np.isnan(response.as_built.stuck_rad)] = 0.0
+    return out
+
+
+def part_jacobian(response: Response, settings: np.ndarray, elements: np.ndarray, *, by_loss: bool) -> np.ndarray:
+    """d matrix / d error of single parts at the centre wavelength.
+
+    Parameters
+    ----------
+    settings : float (S,), rad
+    elements : int (n,), rows of the parts, each once
+    by_loss : by the loss in dB in place of the angle or phase in rad
+
+    Returns
+    -------
+    complex (n, out, in)
+
+    Cost: n out in numbers of 16 bytes; call it for some hundred parts at a time.
+    """
+    n = response.net.n_elements
+    row_of = np.full(n, -1, np.int32)
+    row_of[elements] = np.arange(len(elements))
+    out = _rows(response, settings, row_of, np.full(n, by_loss, np.uint8), len(elements))
+    return out * NEPER_PER_DB if by_loss else out
+
+
+def _rows(response: Response, settings: np.ndarray, row_of: np.ndarray, fades: np.ndarray, count: int) -> np.ndarray:
+    circuit = response.circuit
+    out = np.zeros((count, len(circuit.output_lane), circuit.n_inputs), complex)
     jacobian_kernel(
         circuit.lane_a,
         circuit.lane_b,
@@ -33,13 +64,13 @@ def jacobian(response: Response, settings: np.ndarray) -> np.ndarray:
         circuit.element,
         circuit.side,
         response.parts(settings),
-        net.setting_of,
+        row_of,
+        fades,
         circuit.output_lane,
         circuit.n_inputs,
         circuit.n_lanes,
         out,
     )
-    out[~np.isnan(response.as_built.stuck_rad)] = 0.0
     return out
 
 
@@ -77,6 +108,24 @@ def gram(rows: np.ndarray, matrix: np.ndarray, free: str = "nothing") -> np.ndar
             basis = _phase_basis(matrix)
             seen -= (parts @ basis) @ (parts @ basis).T
     return np.asarray(seen / light)
+
+
+def unseen(matrix: np.ndarray, free: str = "nothing") -> np.ndarray:
+    """Orthonormal directions, as real numbers (2 out in, k), in which a matrix changes by nothing that counts.
+
+    The scale of the whole and its phase, and the port phases that are free.
+    """
+    along = matrix / np.linalg.norm(matrix)
+    directions = [along]
+    if free == "nothing":
+        directions.append(1j * along)
+    if free in ("outputs", "both"):
+        directions += [np.where(np.arange(len(matrix))[:, None] == o, 1j * matrix, 0.0) for o in range(len(matrix))]
+    if free in ("inputs", "both"):
+        directions += [np.where(np.arange(matrix.shape[1]) == i, 1j * matrix, 0.0) for i in range(matrix.shape[1])]
+    flat = np.array([d.ravel() for d in directions])
+    u, sizes, _ = np.linalg.svd(np.concatenate([flat.real, flat.imag], axis=1).T, full_matrices=False)
+    return np.asarray(u[:, sizes > 1e-12 * sizes[0]])
 
 
 def _phase_basis(matrix: np.ndarray) -> np.ndarray:

@@ -1,4 +1,4 @@
-"""Derivative of a loop-free net's matrix by every setting at once, for errors too small to be worth re-solving.
+"""Derivative of a loop-free net's matrix by every setting or part at once, for errors too small to re-solve for.
 
 Public: jacobian_kernel.
 """
@@ -18,7 +18,8 @@ from meshctl.optics.kernels import complex128, filled, float64, given, int32, in
         given(int32),  # element [E]
         given(uint8),  # side [E]
         given(float64, 2),  # parts [4, E]
-        given(int32),  # setting_of [E]
+        given(int32),  # setting_of [E]: the row of the jacobian that a part adds to, -1: none
+        given(uint8),  # fades [E]: 1 where the derivative is by a loss in nepers, 0 by angle or phase
         given(int32),  # output_lane [out]
         int64,  # inputs
         int64,  # lanes
@@ -26,12 +27,12 @@ from meshctl.optics.kernels import complex128, filled, float64, given, int32, in
     )
 )
 def jacobian_kernel(  # type: ignore[no-untyped-def]
-    lane_a, lane_b, first, element, side, parts, setting_of, output_lane, n_inputs, n_lanes, jacobian
+    lane_a, lane_b, first, element, side, parts, setting_of, fades, output_lane, n_inputs, n_lanes, jacobian
 ):
     """Fill jacobian[s] = d matrix / d setting s, settings in rad at the centre wavelength.
 
     A part whose amplitudes turn as exp(i value), or as cos and i sin of it, has the derivative i times
-    itself, through and cross exchanged for a coupler.
+    itself, through and cross exchanged for a coupler. By a loss it is minus itself.
     Cost: B (out + in) for the fields and out * in for every setting.
     """
     n_blocks, n_out = len(lane_a), len(output_lane)
@@ -92,17 +93,24 @@ def jacobian_kernel(  # type: ignore[no-untyped-def]
                         else:
                             right[1, q] = tj * v
                 row = jacobian[s]
+                turned = 1j
+                if fades[e] == 1:
+                    turned = complex(-1.0, 0.0)
+                    if side[i] == 0:
+                        t, x = x, t
                 for o in range(n_out):
                     if side[i] == 0:
-                        a = 1j * (left[0, o] * x + left[1, o] * t)
-                        c = 1j * (left[0, o] * t + left[1, o] * x)
+                        a = turned * (left[0, o] * x + left[1, o] * t)
+                        c = turned * (left[0, o] * t + left[1, o] * x)
                         for q in range(n_inputs):
                             row[o, q] += a * right[0, q] + c * right[1, q]
                     else:
                         lane = side[i] - 1
-                        a = 1j * left[lane, o] * t
+                        a = turned * left[lane, o] * t
                         for q in range(n_inputs):
                             row[o, q] += a * right[lane, q]
+                if fades[e] == 1 and side[i] == 0:
+                    t, x = x, t
             for o in range(n_out):
                 u, v = left[0, o], left[1, o]
                 if side[i] == 0:

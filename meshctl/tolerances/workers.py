@@ -35,7 +35,7 @@ def _start(task: Task, stop: Any) -> None:
 
 def _work(number: int, trials: int) -> np.ndarray | None:
     assert _task is not None, "a worker starts with its task"
-    return run_chunk(_task, number, trials, _stop.is_set)
+    return run_chunk(_task, number, trials, lambda: bool(_stop.value))
 
 
 @contextmanager
@@ -97,7 +97,7 @@ def _by_processes(task: Task, pieces: list[Piece], kept: Kept, processes: int, s
     from multiprocessing import get_context
 
     context = get_context("spawn")  # a fork would copy locks that threads of this process may hold
-    stop = context.Event()
+    stop = context.RawValue("b", 0)  # without a lock, that a killed worker could take along
     left, done = deque(pieces), deque[tuple[Piece, "np.ndarray | Future[np.ndarray | None]"]]()
 
     def pool() -> ProcessPoolExecutor:
@@ -145,5 +145,5 @@ def _by_processes(task: Task, pieces: list[Piece], kept: Kept, processes: int, s
                 if stopped():
                     return
         finally:
-            stop.set()
+            stop.value = 1
             executor.shutdown(wait=True, cancel_futures=True)
