@@ -6,6 +6,7 @@ Public: ClosedForm, closed_form, placements.
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 from functools import cached_property
 
 import numpy as np
@@ -13,6 +14,7 @@ import numpy as np
 from meshctl.errors import NoClosedForm
 from meshctl.mesh.graph import AsBuilt, Net
 from meshctl.mesh.response import Response
+from meshctl.optics.elements import LOSS
 from meshctl.optics.measures import matrix_error
 from meshctl.solver.cells import CellTable, cell_table, columns_of
 from meshctl.solver.correct import Fitted, fit_cells
@@ -81,7 +83,7 @@ class ClosedForm:
         if self.response.loops:
             raise NoClosedForm(
                 "no closed form: this net has a loop, a link against the light or a part that reflects",
-                remedy="let solve refine without one (no --no-refine), or set its cells by routes",
+                remedy="ask for a refinement with --refine, or set its cells by routes",
             )
         self.table = cell_table(net, self.response.circuit)
         self.places: list[tuple[Steps, np.ndarray]] = []
@@ -112,6 +114,23 @@ class ClosedForm:
         """Matrix error of fitted settings on the chip as it is known."""
         return matrix_error(self.response.matrix(fitted.settings), self.target.matrix, self.target.free)
 
+    def _left_over(self, fitted: Fitted) -> str:
+        """Why settings that are all where they are wanted are not exact: what is left with losses off tells."""
+        net, as_built = self.net, self.as_built
+        nominal = np.where(net.kind == LOSS, 0.0, net.nominal)
+        quiet = Response(
+            replace(net, nominal=nominal, guide_loss_db_per_cm=0.0),
+            replace(as_built, loss_db=np.zeros(net.n_elements)),
+        ).matrix(fitted.settings)
+        target, free = self.target.matrix, self.target.free
+        if matrix_error(quiet, target, free) <= EXACT:
+            return "losses"
+        if len(fitted.bare_lanes) and free in ("nothing", "inputs"):
+            turned = "outputs" if free == "nothing" else "both"
+            if matrix_error(quiet, target, turned) <= EXACT:
+                return "no_output_phases"
+        return "fixed_parts"
+
     def best_place(self, reach: Reach) -> int:
         """The first place without shortfalls, else that of least error."""
         errors = []
@@ -129,7 +148,7 @@ class ClosedForm:
         if fitted.shortfalls:
             reason = "out_of_range"
         elif error > EXACT:
-            reason = "no_output_phases" if len(fitted.bare_lanes) else "losses"
+            reason = self._left_over(fitted)
         else:
             reason = "exact"
         counts = {"cells": self.n_cells, "out_of_range": len(fitted.shortfalls)}

@@ -104,6 +104,26 @@ def propagate(small: bool) -> Iterator[Row]:
         )  # fmt: skip
 
 
+def gradient(small: bool) -> Iterator[Row]:
+    """Matrix error and its derivative by every setting, against one complex matrix product of the same size."""
+    from meshctl.mesh.meshfile import lattice
+    from meshctl.mesh.response import Response
+    from meshctl.solver.objective import MatrixError
+
+    for n, bar in ((64, 25.0), (128, 50.0)):
+        mesh = lattice("rectangular", modes=n, built=1)
+        response, objective = Response(mesh.net, mesh.as_built), MatrixError(haar(n))
+        settings = np.random.default_rng(0).uniform(0, 2 * np.pi, mesh.net.n_settings)
+
+        def run(response=response, settings=settings, objective=objective) -> np.ndarray:
+            return response.pullback(settings, lambda m: objective.evaluate(m[None])[1][0])
+
+        u = haar(n)
+        yield compare(
+            f"value + gradient N = {n}", "complex product", run, lambda u=u: u @ u, 11 if small else 51, bar
+        )  # fmt: skip
+
+
 REFERENCE = """\
 import numpy, numba, scipy.linalg
 from meshctl_bench_kernel import total
