@@ -3,15 +3,18 @@
 import itertools
 import json
 import math
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 from dense_light import dense_matrix
+from plane_nets import traced_wishes
 
 import meshctl
 from meshctl.errors import MissingRow, NoRoutes, NotFinite, UnsoundFile
 from meshctl.mesh.meshfile import lattice, load, write
+from meshctl.mesh.plane import hexagonal
 from meshctl.plan.chip import Chip
 from meshctl.plan.plan import plan_text, read_plan
 from meshctl.plan.signals import fringes_db
@@ -93,8 +96,8 @@ def test_rings_lattice_carries_several_routes(curlew, wishes):
 
 
 def test_levels_over_band_are_simulated(curlew):
-    wishes, waves = ["p1:p12", "p20:p28"], [1548.0, 1549.3, 1550.6, 1551.9]
-    plan = meshctl.route(curlew, wishes, band="1548:1551.9:4")
+    wishes, waves = ["p1:p12", "p20:p28"], [1548.0, 1549.3, 1550.6]
+    plan = meshctl.route(curlew, wishes, band="1548:1550.6:3")
     for k, entry in enumerate(plan.routes):
         levels = [level_db(curlew, plan, wishes[k], wave) for wave in waves]
         other = wishes[1 - k].split(":")[0] + ":" + entry["output"]
@@ -346,3 +349,59 @@ def test_notebook_shows_power_error(dunlin):
     shown = meshctl.route(dunlin, ["in1:drop1"])._repr_html_()
     assert "power error" in shown
     assert "nan" not in shown
+
+
+@pytest.mark.parametrize(
+    ("status", "proof", "says"),
+    [
+        ("impossible_within", "bounded", r"\(bounded proof: longer ways are not ruled out\); choose other ports"),
+        ("not_found", "none", r"\(10 s\); none were proved impossible; give more --seconds or another --seed"),
+    ],
+)
+def test_weaker_verdicts_claim_no_more(curlew, monkeypatch, status, proof, says):
+    from meshctl.plan import switching
+
+    found = switching.find_routes
+
+    def weaker(*args, **words):
+        return replace(found(*args, **words), status=status, words="as far as was looked")
+
+    monkeypatch.setattr(switching, "find_routes", weaker)
+    with pytest.raises(NoRoutes, match=rf"as far as was looked {says}") as said:
+        meshctl.route(curlew, ["p1:p20", "p5:p30"])
+    assert (said.value.status, said.value.proof) == (status, proof)
+
+
+def test_short_time_is_no_proof(curlew):
+    with pytest.raises(NoRoutes, match="none were proved impossible") as said:
+        meshctl.route(curlew, ["p1:p20", "p5:p30"], seconds=1e-9)
+    assert (said.value.status, said.value.proof) == ("not_found", "none")
+
+
+def test_loops_left_by_full_chip_are_told(curlew):
+    told = {}
+    for seed in (0, 5):  # with a route at every port hardly a cell is free; the second set leaves a ring
+        wishes = traced_wishes(hexagonal(2), 18, np.random.default_rng(seed))
+        plan = meshctl.route(curlew, wishes)
+        # a ring is two closed ways of light, one in each direction; light of no port comes to them
+        told[seed] = plan.search["loops"], any("closed loops are left" in line for line in plan.warnings)
+        for wish in wishes:
+            assert next(r for r in plan.routes if f"{r['input']}:{r['output']}" == wish)["signal_db"] > -1.5
+    assert told == {0: (0, False), 5: (2, True)}
+
+
+def test_light_that_goes_elsewhere_is_told(curlew, monkeypatch):
+    from meshctl.plan import switching
+
+    settings_for = switching.settings_for
+
+    def off(switches, share, entering):
+        settings = settings_for(switches, share, entering)
+        angle = curlew.net.setting_is_angle
+        return np.where(angle, settings + 0.3, settings)  # every coupler 0.3 rad beyond its state
+
+    monkeypatch.setattr(switching, "settings_for", off)
+    plan = meshctl.route(curlew, ["p29:p26"])
+    level = level_db(curlew, plan, "p29:p26")
+    assert level < -1.0
+    assert f"p29:p26: {-level:.2f} dB are lost, " in plan.warnings[0]

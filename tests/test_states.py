@@ -245,3 +245,28 @@ def test_state_file_is_plain_plan(dunlin, run, tmp_path):
     code, said, _ = run("predict", dunlin.folder, tmp_path / "p.json", "--json")
     assert code == 0
     assert {r["output"] for r in json.loads(said)["routes"]} == set(STRAIGHT.values())
+
+
+JUNK = (None, True, -1, 2.5, "x", [], {}, [1], ["x"], {"a": 1}, [None], 1e400)
+
+
+def test_spoilt_states_are_never_bugs(dunlin, run):
+    path = dunlin.folder / "states" / "through.json"
+    whole, rng = path.read_text(), np.random.default_rng(0)
+    codes = set()
+    for inside in ((), ("target",), ("routes", 0), ("search",), ("continuous",)):
+        keys = json.loads(whole)
+        for step in inside:
+            keys = keys[step]
+        for key in keys:
+            entry = spoilt = json.loads(whole)
+            for step in inside:
+                spoilt = spoilt[step]
+            spoilt[key] = JUNK[rng.integers(len(JUNK))]
+            path.write_text(json.dumps(entry))
+            for words in (("states", dunlin.folder, "through"), ("show", dunlin.folder, "through")):
+                code, _, remarks = run(*words)
+                codes.add(code)
+                assert code in (0, 3), (key, remarks)
+                assert code == 0 or remarks.count("\n") == 1
+    assert codes == {0, 3}
