@@ -359,6 +359,7 @@ def first_solve(small: bool) -> Iterator[Row]:
 STUDIES: tuple[Callable[[bool], Iterator[Row]], ...] = (
     decompose,
     propagate,
+    gradient,
     startup,
     scattering,
     spectrum,
