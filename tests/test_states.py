@@ -180,7 +180,12 @@ def test_failed_renewal_keeps_old_state(dunlin):
 def test_list_says_what_is_unreadable(dunlin):
     (dunlin.folder / "states" / "cut.json").write_text('{"format": 1, "mesh')
     (dunlin.folder / "states" / "not a state.json").write_text("{}")
+    beyond = json.loads((dunlin.folder / "states" / "through.json").read_text())
+    beyond["codes"][0] = 1 << 14  # the source has 14 bits
+    (dunlin.folder / "states" / "beyond.json").write_text(json.dumps(beyond))
     rows = {row.name: row for row in listed_states(dunlin)}
+    assert "code 16384 of channel 'g1' is outside 0 to 16383" in rows["beyond"].note
+    assert not rows["beyond"].fresh
     assert "not readable as JSON" in rows["cut"].note
     assert "not a state" not in rows
     assert rows["through"].fresh

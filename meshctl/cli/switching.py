@@ -17,7 +17,7 @@ from meshctl.cli import printing
 from meshctl.errors import DONE, OUT_OF_REACH, Finding, NoRoutes, WrongUsage
 from meshctl.mesh.graph import Mesh
 from meshctl.plan.signals import Signal
-from meshctl.plan.states import Difference, StateRow
+from meshctl.plan.states import STALE, Difference, StateRow
 from meshctl.plan.switching import RouteTarget
 from meshctl.session import Session
 from meshctl.solver.solution import REASONS
@@ -148,7 +148,9 @@ def states(words: Namespace) -> int:
     if words.other is None:
         _remark(session.remarks)
         if words.json:
-            _print({"state": words.name, **printing.plan_entry(session.mesh, plan, 0.0)})
+            entry = printing.plan_entry(session.mesh, plan, 0.0)
+            del entry["seconds"]  # nothing was solved
+            _print({"state": words.name, **entry})
         else:
             print(printing.plan_table(session.mesh, plan))
             print(f"state         {words.name}: {plan.target.get('source', '')}")
@@ -179,7 +181,7 @@ def _list_text(rows: Sequence[StateRow]) -> str:
     lines = [f"{'state':<{name}}  {'reason':<{reason}}  {'power_mw':>8}  {'':5}  target"]
     for r in rows:
         power = "" if math.isnan(r.power_mw) else f"{r.power_mw:.3f}"
-        fresh = "fresh" if r.fresh else "stale" if r.target else "wrong"
+        fresh = "fresh" if r.fresh else STALE if r.note.startswith(STALE) else "wrong"
         lines.append(f"{r.name:<{name}}  {r.reason:<{reason}}  {power:>8}  {fresh}  {r.target}".rstrip())
     return "\n".join(lines)
 

@@ -1,6 +1,6 @@
 """Named states of a mesh folder: plans by name in its folder `states`, written one at a time.
 
-Public: save_state, load_state, state_names, state_file, listed_states, renew_state, compare, StateRow, Difference.
+Public: save_state, load_state, state_names, state_file, listed_states, renew_state, compare, StateRow, Difference, STALE.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ from pathlib import Path
 
 import numpy as np
 
-from meshctl.errors import Finding, MissingFile, UnsoundFile, WrongUsage
+from meshctl.errors import Finding, MissingFile, StalePlan, UnsoundFile, WrongUsage
 from meshctl.mesh.files import write_whole
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.tables import unknown_name
@@ -22,6 +22,7 @@ from meshctl.plan.plan import Plan, check_fresh, plan_text, read_plan
 from meshctl.units import TWO_PI
 
 STATES = "states"
+STALE = "stale"  # how the note of a stale state begins
 _NAME = re.compile(r"[A-Za-z0-9_>-][A-Za-z0-9._>-]*")
 _MOST = 100  # characters: file systems take 255 bytes with the ending and what is put before while writing
 CROSS_POWER_SHOWS = 1e-3  # a change that a drawing or a power meter would show
@@ -107,13 +108,14 @@ def listed_states(mesh: Mesh) -> list[StateRow]:
         except Finding as finding:
             rows.append(StateRow(name, "", "", float("nan"), False, str(finding)))
             continue
+        note = ""
         try:
-            check_fresh(mesh, plan)
-            note = ""
-        except Finding:
-            note = (
-                f"stale: made for physics {plan.mesh_hash[:12]}, now {mesh.hash[:12]}; solve again with --renew {name}"
-            )
+            check_fresh(mesh, plan, where=f"state '{name}'")
+        except StalePlan:
+            now = f"made for physics {plan.mesh_hash[:12]}, now {mesh.hash[:12]}"
+            note = f"{STALE}: {now}; solve again with --renew {name}"
+        except Finding as finding:
+            note = str(finding)
         target = str(plan.target.get("source", ""))
         rows.append(StateRow(name, target, plan.reason, float(plan.power_mw.sum()), not note, note))
     return rows
