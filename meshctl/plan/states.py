@@ -1,6 +1,7 @@
 """Named states of a mesh folder: plans by name in its folder `states`, written one at a time.
 
-Public: save_state, load_state, state_names, state_file, listed_states, renew_state, compare, StateRow, Difference, STALE.
+Public: save_state, load_state, state_names, state_file, listed_states, renew_state, compare, StateRow, Difference,
+STALE.
 """
 
 from __future__ import annotations
