@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 __version__ = "0.1.0"
 
 if TYPE_CHECKING:  # pragma: no cover
-    from meshctl.api import predict, route, solve
+    from meshctl.api import predict, route, solve, tolerance
     from meshctl.mesh.graph import Mesh
     from meshctl.mesh.meshfile import lattice, load, write
     from meshctl.plan.pipeline import Prediction
@@ -24,13 +24,14 @@ _HOMES = {
     "solve": "meshctl.api",
     "route": "meshctl.api",
     "predict": "meshctl.api",
+    "tolerance": "meshctl.api",
     "Mesh": "meshctl.mesh.graph",
     "Plan": "meshctl.plan.plan",
     "Prediction": "meshctl.plan.pipeline",
     "Target": "meshctl.solver.target",
 }
 
-__all__ = ["Mesh", "Plan", "Prediction", "Target", "lattice", "load", "predict", "route", "solve", "write"]
+__all__ = ["Mesh", "Plan", "Prediction", "Target", "lattice", "load", "predict", "route", "solve", "tolerance", "write"]
 
 
 def __getattr__(name: str) -> Any:

@@ -1,12 +1,13 @@
 """The Python interface: the same calls as the commands, on objects in place of files.
 
-Public: solve, route, predict.
+Public: solve, route, tolerance, predict.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from typing import Any
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -15,6 +16,9 @@ from meshctl.mesh.graph import Mesh
 from meshctl.plan import pipeline
 from meshctl.plan.plan import Plan, check_fresh
 from meshctl.solver.target import Target, make_target, read_target
+
+if TYPE_CHECKING:  # pragma: no cover
+    from meshctl.tolerances.whole import Tolerance
 
 
 def solve(
@@ -143,6 +147,62 @@ def route(
     rank = None if priorities is None else tuple(float(p) for p in priorities)
     asked = switching.RouteTarget(tuple(wishes), tuple(avoid), rank, unused, seed, seconds, band, best_effort)
     return switching.route(mesh, asked)
+
+
+def tolerance(
+    mesh: Mesh,
+    plan: Plan,
+    *,
+    trials: int = 1000,
+    seed: int = 0,
+    policy: str = "as-set",
+    require: Iterable[str] = (),
+    until: str | None = None,
+    scale: float = 1.0,
+    spec: bool = False,
+    wish: str = "95%",
+    folder: str | Path | None = None,
+    processes: int = 1,
+    cluster: str | None = None,
+    stale_ok: bool = False,
+) -> Tolerance:
+    """How far dies that scatter as the mesh's spread says will be off, and what the next chip needs.
+
+    Parameters
+    ----------
+    trials, seed : dies, each drawn from seed and its number alone
+    policy : as-set (the plan's codes on each die), corrected (each die corrected cell by cell), refined (solved anew)
+    require : what a good die meets, such as "fidelity>=0.99"
+    until : half width of the yield's interval at which to stop, such as "1%"
+    scale : of all of the spread
+    spec, wish : also how far each cause may scatter for the wished yield
+    folder : where trials are kept as they come; a run that was broken off there goes on
+    processes, cluster : who runs them; with several processes call this under `if __name__ == "__main__"`
+
+    Returns
+    -------
+    Tolerance; `.found` the trials, `.budget` the analytic account, `.spec` what is allowed
+
+    Raises
+    ------
+    StalePlan, UnsoundFile, WrongUsage, OutOfReach
+
+    Example
+    -------
+    >>> import meshctl
+    >>> mesh = meshctl.load("meshes/plover8")
+    >>> far = meshctl.tolerance(mesh, meshctl.solve(mesh, "dft"), trials=50, scale=0.01)
+    >>> far.found.trials
+    50
+    """
+    from meshctl.tolerances.whole import Question, answer
+
+    check_fresh(mesh, plan, stale_ok=stale_ok)
+    place = None if folder is None else Path(folder)
+    required = (require,) if isinstance(require, str) else tuple(require)
+    return answer(
+        mesh, plan, Question(trials, seed, policy, required, until, scale, spec, wish, place, processes, cluster)
+    )
 
 
 def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *, stale_ok: bool = False) -> np.ndarray:

@@ -46,6 +46,7 @@ from meshctl.units import db_array
 if TYPE_CHECKING:  # pragma: no cover
     from meshctl.plan.signals import Signal
     from meshctl.plan.switching import RouteTarget
+    from meshctl.tolerances.whole import Ears, Question, Tolerance
 
 DEMO_MESH = "plover8"
 SPECTRUM_HEAD = (
@@ -207,6 +208,12 @@ class Session:
     def energy(self) -> Energy:
         """What holding the plan in hand costs, and reaching it from power off."""
         return energy(Chip(self.mesh), self._in_hand().codes)
+
+    def tolerance(self, question: Question, ears: Ears | None = None) -> Tolerance:
+        """How far dies will be off with the plan in hand, and what the next chip needs."""
+        from meshctl.tolerances.whole import answer
+
+        return answer(self.mesh, self._in_hand(), question, ears)
 
     # ---- writing
     def write_plan(self, path: str | Path) -> None:

@@ -187,6 +187,12 @@ def energy(words: Namespace) -> int:
     return DONE
 
 
+def tolerance(words: Namespace) -> int:
+    from meshctl.cli import scatter
+
+    return scatter.tolerance(words)
+
+
 def demo(words: Namespace) -> int:
     session = Session(demo_mesh_folder())
     plan = session.solve(session.target("dft"))

@@ -41,13 +41,16 @@ class Watch:
         """True once Ctrl-C was pressed."""
         return self.interrupted
 
-    def progress(self, now: Any) -> None:
-        """Show how far a refine has come, on a terminal only."""
+    def tell(self, line: str) -> None:
+        """Show a line of progress in place of the last one, on a terminal only."""
         if not sys.stderr.isatty():
             return
         self._shown = True
-        line = (
+        print(f"\r\x1b[K{line[:100]}", end="", file=sys.stderr, flush=True)
+
+    def progress(self, now: Any) -> None:
+        """Show how far a refine has come, on a terminal only."""
+        self.tell(
             f"{self.what}: start {now.start} of {now.starts}, {now.evaluations} evaluations, "
             f"objective {now.value:.3e}, {now.seconds:.0f} s; Ctrl-C keeps the best so far"
         )
-        print(f"\r\x1b[K{line[:100]}", end="", file=sys.stderr, flush=True)

@@ -189,6 +189,35 @@ def parser() -> argparse.ArgumentParser:
     cost.add_argument("pairs", metavar="MESH PLAN", nargs="+", help="a mesh and its plan, as often as wished")
     _stale(cost)
 
+    far = verb(
+        "tolerance",
+        "how far dies will be off, and what the next chip needs",
+        "meshctl tolerance meshes/plover8 plan.json --require 'fidelity>=0.99' --until 1% -o run",
+    )
+    far.add_argument("mesh", metavar="MESH")
+    far.add_argument("plan", metavar="PLAN")
+    far.add_argument("--trials", type=_whole(1), default=1000, metavar="N", help="most dies drawn, default 1000")
+    far.add_argument("--seed", type=_whole(0), default=0, metavar="SEED", help="of all dies")
+    far.add_argument(
+        "--policy", choices=("as-set", "corrected", "refined"), default="as-set",
+        help="the plan's codes on each die; each die corrected; each die solved anew",
+    )  # fmt: skip
+    far.add_argument(
+        "--require", metavar="MEASURE>=NUMBER", action="append", default=[],
+        help="what a good die meets, such as 'fidelity>=0.99'; may be repeated",
+    )  # fmt: skip
+    far.add_argument(
+        "--until", metavar="WIDTH", help="stop where the yield is known to plus or minus this, such as 1%%"
+    )
+    far.add_argument("--scale", type=_positive, default=1.0, metavar="F", help="all of [spread] times F")
+    far.add_argument("--spec", action="store_true", help="how far each cause may scatter for the wished yield")
+    far.add_argument("--yield", dest="wish", default="95%", metavar="SHARE", help="the wished yield, default 95%%")
+    far.add_argument("--processes", type=_whole(1), default=1, metavar="N", help="of this machine, default 1")
+    far.add_argument("--cluster", metavar="ADDRESS", help="a dask scheduler that shares the trials out")
+    far.add_argument("-o", "--out", metavar="FOLDER", help="keep trials as they come; goes on where a run broke off")
+    far.add_argument("--figures", metavar="FOLDER", help="histogram, yield against tolerance, sensitivity map")
+    _stale(far)
+
     verb("demo", "the main job on a shipped mesh, with what it means", "meshctl demo")
     return top
 

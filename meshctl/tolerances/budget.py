@@ -92,6 +92,10 @@ class _Account:
         self.by_element = np.zeros(self.net.n_elements)
         self.sensitivity = np.zeros(self.net.n_elements)
 
+    def sigma(self, cause: str) -> float:
+        """Standard deviation of a cause, its scale counted."""
+        return float(getattr(self.drawing.spread, cause) * self.task.scales.get(cause, 1.0))
+
     def seen(self, rows: np.ndarray) -> np.ndarray:
         """What counts of derivatives [n, out, in], as real numbers [n, 2 out in] of unit light."""
         flat = rows.reshape(len(rows), -1)
@@ -176,7 +180,7 @@ def _slope(account: _Account, cause: str) -> np.ndarray:
 
 def _cause(account: _Account, cause: str) -> float:
     drawing, spread, net = account.drawing, account.drawing.spread, account.net
-    sigma = getattr(spread, cause)
+    sigma = account.sigma(cause)
     rows = drawing.rows[cause]
     if cause in ("split_rad", "phase_rad"):
         return account.added(cause, np.full(len(rows), sigma), rows)
@@ -193,7 +197,9 @@ def _cause(account: _Account, cause: str) -> float:
         np.add.at(by_channel.T, account.chip.actuators.channel, own.T)
         return _by_setting(account, by_channel, cause)
     if cause == "crosstalk_share":
-        coo = account.chip.actuators.crosstalk.tocoo()
+        crosstalk = account.chip.actuators.crosstalk
+        assert crosstalk is not None, "a drawing has crosstalk to scatter"
+        coo = crosstalk.tocoo()
         change = account.chip.own_changes(account.levels)
         own = np.zeros((net.n_settings, coo.nnz))
         own[coo.row, np.arange(coo.nnz)] = sigma * coo.data * change[coo.col]
@@ -241,7 +247,7 @@ def _second_order(account: _Account) -> float | None:
         return None
     variance = np.zeros(net.n_elements)
     for cause in spread.active:
-        variance[drawing.rows[cause]] += getattr(spread, cause) ** 2
+        variance[drawing.rows[cause]] += account.sigma(cause) ** 2
     response, circuit = account.response, account.response.circuit
     from meshctl.optics.feedforward import fuse
 

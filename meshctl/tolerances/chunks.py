@@ -2,7 +2,7 @@
 
 Chunks do not depend on how many processes share them. Each is written whole as it comes, so that a run that was
 broken off, at any moment, goes on where it was.
-Public: Task, run_chunk, Kept, chunk_size.
+Public: Task, run_chunk, Kept, chunk_size, finite.
 """
 
 from __future__ import annotations
@@ -97,6 +97,15 @@ class Task:
             "scales": dict(self.scales),
             "measures": list(self.goal.measures),
         }
+
+
+def finite(entry: Any) -> Any:
+    """The same structure with NaN and infinity as null, for JSON."""
+    if isinstance(entry, dict):
+        return {key: finite(value) for key, value in entry.items()}
+    if isinstance(entry, list | tuple):
+        return [finite(value) for value in entry]
+    return None if isinstance(entry, float) and not np.isfinite(entry) else entry
 
 
 def chunk_size(policy: str) -> int:
