@@ -18,6 +18,7 @@ LAYERS = (
     {"calibration", "tolerances", "bench"},
     {"session"},
     {"picture", "plots", "report"},
+    {"work"},
     {"api", "cli", "screens"},
 )
 RANK = {room: rank for rank, rooms in enumerate(LAYERS) for room in rooms}
