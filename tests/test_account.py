@@ -277,3 +277,15 @@ def test_larger_chips_are_explained_in_full():
     assert account["causes"][0]["without"] == solve(there, target, effort=Effort(starts=2)).matrix_error
     assert account["all_off"] < 1e-6
     assert len(account["elements"]) == 10
+
+
+def test_stopped_accounts_are_left_out(tmp_path):
+    asked = []
+
+    def cancel():
+        asked.append(None)
+        return len(asked) > 40
+
+    plan = solve(load(stuck(tmp_path)), read_target("haar:0", (4, 4)), explain=True, effort=Effort(cancel=cancel))
+    assert plan.account == {}
+    assert plan.codes.shape == (16,)

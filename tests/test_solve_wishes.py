@@ -1,6 +1,8 @@
 """Every kind of wish from target to codes: met by a forward path of plain numpy, kept in plans, told by commands."""
 
 import json
+import subprocess
+import sys
 from dataclasses import replace
 
 import numpy as np
@@ -354,3 +356,16 @@ def test_same_seed_gives_same_wish_codes():
     mesh, wish = lattice("rectangular", modes=4, built=3), wished(power=np.full((4, 4), 0.25))
     one, two = (solve(mesh, wish, effort=Effort(seed=7)) for _ in range(2))
     assert np.array_equal(one.codes, two.codes)
+
+
+def test_plain_solves_load_no_refinement(tmp_path):
+    program = (
+        "import sys\nfrom meshctl.cli import main\n"
+        f"main(['solve', 'meshes/plover8', 'haar:7', '-o', {str(tmp_path / 'p.json')!r}])\n"
+        "print('LOADED', *[m for m in sys.modules if m.startswith('meshctl.')])"
+    )
+    done = subprocess.run([sys.executable, "-c", program], capture_output=True, text=True, check=True)
+    loaded = set(done.stdout.strip().splitlines()[-1].split())
+    heavy = {"solver.refine", "solver.objective", "solver.wishes", "solver.dilation", "plan.joint", "plan.account"}
+    assert not loaded & {f"meshctl.{name}" for name in heavy}
+    assert "meshctl.plan.pipeline" in loaded

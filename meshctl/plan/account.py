@@ -151,12 +151,11 @@ def account(
         `measure` and `error` of the plan; `causes`, by what switching each off gains: `cause`, `words`, `without`
         (error where it alone is off), `part` (error - without), `alone` (error where all others are off); `all_off`;
         `rest` (error - all_off - sum of parts: below 0 where parts overlap, above where causes hide one another);
-        `elements`, see `most_helpful`.
+        `elements`, see `most_helpful`. Empty where it was stopped.
 
     Cost: two solves for each cause there is.
     """
     measure, error = error_of(plan)
-    quiet = replace(effort, progress=None)
 
     def solved(off: Iterable[str]) -> float:
         from meshctl.plan.pipeline import solve
@@ -164,7 +163,7 @@ def account(
         there, asked = without(mesh, wish, off)
         try:
             again = solve(
-                there, asked, best_effort=best_effort, least_power=least_power, aware=aware, joint=joint, effort=quiet
+                there, asked, best_effort=best_effort, least_power=least_power, aware=aware, joint=joint, effort=effort
             )
         except DriveFinding:
             return math.nan
@@ -184,8 +183,10 @@ def account(
                 "alone": _number(alone),
             }
         )
-    causes.sort(key=lambda entry: -(entry["part"] or 0.0))
     all_off = solved(present)
+    if effort.cancel is not None and effort.cancel():
+        return {}  # the solves were cut short and say nothing
+    causes.sort(key=lambda entry: -(entry["part"] or 0.0))
     parts = sum(entry["part"] or 0.0 for entry in causes)
     return {
         "measure": measure,

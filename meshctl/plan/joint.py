@@ -18,7 +18,7 @@ from meshctl.errors import DriveFinding
 from meshctl.mesh.response import Response
 from meshctl.plan.chip import Chip
 from meshctl.plan.placing import fixed_settings, place, reach_of
-from meshctl.plan.rounding import code_range, rounded
+from meshctl.plan.rounding import AWARE_TO, code_range, rounded
 from meshctl.plan.settling import Effort, Settling, Work
 from meshctl.plan.wanted import Wanted
 from meshctl.solver.cells import MZI
@@ -26,6 +26,7 @@ from meshctl.solver.reach import Reach
 
 TRIES = (20, 80, 1000)  # other signs of inner phases tried for coarse codes: least, most, times cells
 REFINED = 4  # of those that come closer, refined where the settings were
+REFINED_TO = 400  # settings; in larger meshes one is
 STEPPED_TO = 300  # channels up to which codes are stepped one by one
 _GROUND_ROUNDS = 3  # the shared ground's rise takes room from what was refined
 _GROUND_SHARE = 0.97  # of its reach that is left to an actuator each time
@@ -197,12 +198,13 @@ def _other_signs(
     effort = replace(effort, starts=1, progress=None)
     form = Settling(chip, wanted, best_effort, False, effort).form
     cells = np.empty(0, np.int64) if form is None else np.flatnonzero(form.table.form == MZI)
-    if form is None or not len(cells):
+    if form is None or not len(cells) or chip.net.n_settings > AWARE_TO:
         return work, codes, least
     allowed = len(form.fit(reach_of(chip), form.best_place(reach_of(chip))).shortfalls)
     climb = _Climb(chip, wanted, effort, best_effort, allowed, until)
     found = work, codes, least
-    for flip in climb.flips(cells, form.n_cells)[: REFINED if work.refined else 1]:
+    refined = 1 if not work.refined or chip.net.n_settings > REFINED_TO else REFINED
+    for flip in climb.flips(cells, form.n_cells)[:refined]:
         there = climb.rounded(flip, work.refined)
         if there is not None and there[2] < found[2]:
             found = there
