@@ -64,12 +64,10 @@ state = "cross"
 [budget]
 loss_db = 2.0                   # what the readout units can spare between any two ports
 
-[spread]
+[spread]                        # from die to die, each die's offsets and heaters being calibrated
 split_rad = 0.02
-phase_rad = 1.8
+phase_rad = 0.005
 loss_db = 0.01
-p2pi_share = 0.02
-r_share = 0.02
 """
 
 KNOT16 = f"""\
@@ -114,12 +112,10 @@ resistance_ohm = 0.05
 [rest]
 state = "cross"
 
-[spread]
+[spread]                        # from die to die, each die's offsets and heaters being calibrated
 split_rad = 0.02
-phase_rad = 1.8
+phase_rad = 0.005
 loss_db = 0.01
-p2pi_share = 0.02
-r_share = 0.02
 """
 
 CURLEW = f"""\
