@@ -71,7 +71,7 @@ def test_crosstalk_within_band_is_warned(run):
     assert "in1:drop2: crosstalk comes to -9." in remarks
 
 
-def test_python_and_command_agree(run):
+def test_python_and_command_line_agree(run):
     said = json.loads(run("route", "curlew", "p29:p26", "p1:p4", "--seed", 2, "--json")[1])
     plan = meshctl.route(meshctl.load("curlew"), ["p29:p26", "p1:p4"], seed=2)
     assert [row["code"] for row in said["actuators"]] == plan.codes.tolist()
@@ -103,7 +103,7 @@ def test_best_effort_writes_partial_answer(run):
     assert power[mesh.net.outputs.index("p20"), mesh.net.inputs.index("p1")] > -1.0
 
 
-def test_options_reach_the_search(run):
+def test_every_option_reaches_the_search(run):
     words = ["--unused", "rest", "--avoid", "c15", "--band", "1549:1551:5", "--seconds", 5, "--priorities", "2,1"]
     found = json.loads(run("route", "curlew", "p29:p26", "p1:p4", *words, "--json")[1])
     assert found["search"]["unused"] == "rest"
@@ -112,7 +112,7 @@ def test_options_reach_the_search(run):
     assert (target["band"], target["seconds"], target["priorities"]) == ("1549:1551:5", 5.0, [2.0, 1.0])
 
 
-def test_wished_length_is_kept(run):
+def test_wished_length_is_kept_exactly(run):
     found = json.loads(run("route", "curlew", "p29:p26@9cells", "--json")[1])
     assert len(found["routes"][0]["cells"]) == 9
     code, _, remarks = run("route", "curlew", "p29:p26@6cells")

@@ -256,7 +256,7 @@ def test_best_effort_leaves_last_named_out(curlew):
     assert plan.power_error > 0.9
 
 
-def test_priorities_say_who_stays(curlew):
+def test_priorities_say_which_route_stays(curlew):
     plan = meshctl.route(curlew, ["p1:p20", "p5:p30"], priorities=[1, 2])
     assert plan.search["left_out"] == ["p1:p20"]
     assert level_db(curlew, plan, "p5:p30") > -1.0

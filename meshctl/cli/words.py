@@ -139,7 +139,9 @@ def parser() -> argparse.ArgumentParser:
     )
     route.add_argument("--seconds", type=_positive, default=10.0, metavar="S", help="of search and proof together")
     route.add_argument("--seed", type=_whole(0), default=0, metavar="SEED", help="of the order in which routes go")
-    route.add_argument("--best-effort", action="store_true", help="leave out what does not go together")
+    route.add_argument(
+        "--best-effort", action="store_true", help="leave out what does not go together, hold actuators at their limits"
+    )
 
     states = verb(
         "states",
