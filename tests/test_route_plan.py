@@ -345,7 +345,7 @@ def test_coupler_kept_from_cross_is_impossible(tmp_path, dunlin):
         meshctl.route(load(folder), ["in1:drop1"])
 
 
-def test_notebook_shows_power_error(dunlin):
+def test_notebook_table_shows_power_error(dunlin):
     shown = meshctl.route(dunlin, ["in1:drop1"])._repr_html_()
     assert "power error" in shown
     assert "nan" not in shown
