@@ -209,7 +209,6 @@ def test_what_no_die_meets_is_refused():
 
 # ---- processes
 @pytest.mark.slow
-@pytest.mark.sample
 def test_killed_workers_change_nothing_but_time(tmp_path):
     task, pieces = task_of(MESH, PLAN, spread=SPREAD), [(k, 250) for k in range(40)]
     found, killed = [], 0
@@ -229,7 +228,6 @@ def children():
 
 
 @pytest.mark.slow
-@pytest.mark.sample
 def test_clusters_and_killed_workers_change_nothing(tmp_path):
     distributed = pytest.importorskip("distributed")
     task, pieces = task_of(MESH, PLAN, spread=SPREAD), [(k, 250) for k in range(40)]

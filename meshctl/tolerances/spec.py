@@ -2,7 +2,7 @@
 
 Every scale is tried on the same dies, drawn again larger or smaller, so that yields of two scales differ by the
 scale and not by luck. A scale counts as allowed where the lower end of its yield's interval reaches the wish.
-Public: Allowed, Specification, specification, fewest_trials.
+Public: Allowed, Specification, specification, yield_curve, fewest_met, fewest_trials.
 """
 
 from __future__ import annotations
@@ -218,3 +218,19 @@ def specification(
             f"no scatter however small leaves {wish:g} of the dies good", remedy="require less, or wish a lower yield"
         )
     return Specification(wish, trials, tuple(requirements), allowed)
+
+
+def yield_curve(
+    task: Task, requirements: Sequence[Requirement], scales: Sequence[float], trials: int = 300
+) -> list[Yield]:
+    """Yields of all causes at several scales, on the same dies."""
+    names, found = task.goal.measures, []
+    columns = [names.index(r.measure) for r in requirements]
+    for scale in scales:
+        times = dict.fromkeys(task.spread.active, scale)
+        met = 0
+        for trial in range(trials):
+            values = task.measured(task.drawing.errors(task.drawing.normals(task.seed, trial), times))
+            met += all(r.met(np.array(values[c])) for r, c in zip(requirements, columns, strict=True))
+        found.append(yield_of(met, trials))
+    return found
