@@ -22,7 +22,7 @@ if TYPE_CHECKING:  # pragma: no cover
     from matplotlib.figure import Figure
 
 BLUE, RED, GREY = "#33658a", "#a4593f", "#b9b9b9"
-CURVE = np.geomspace(0.25, 4.0, 9)  # scales of the yield's curve, around the one in question
+CURVE = np.linspace(0.25, 2.0, 15)  # scales of the yield's curve, around the one in question
 CURVE_DIES = 300
 
 
@@ -59,7 +59,7 @@ def yield_figure(scales: Sequence[float], yields: Sequence[Yield], wish: float, 
     axes.fill_between(scales, [y.low for y in yields], [y.high for y in yields], color=GREY, label="95 % interval")
     axes.plot(scales, [y.share for y in yields], "o-", color=BLUE, label=f"{yields[0].trials} dies each")
     axes.axhline(wish, color=RED, label=f"wished: {100 * wish:g} %")
-    axes.set(xscale="log", xlabel="scale of the mesh's spread", ylabel="yield", title=title, ylim=(-0.02, 1.02))
+    axes.set(xlabel="scale of the mesh's spread", ylabel="yield", title=title, ylim=(-0.02, 1.02))
     axes.legend(fontsize="small")
     return figure
 

@@ -356,6 +356,54 @@ def first_solve(small: bool) -> Iterator[Row]:
     yield Row(f"first solve of {mesh.net.n_cells} cells", "10 s", 1e3 * took, 1e4, took / 10.0, 1.0)
 
 
+MEMORY = """\
+import sys
+from pathlib import Path
+from meshctl import lattice, solve
+from meshctl.mesh.spread import Spread
+from meshctl.tolerances.trials import run_trials, task_of
+mesh = lattice("rectangular", modes=int(sys.argv[2]))
+task = task_of(mesh, solve(mesh, "haar:1"), spread=Spread(split_rad=0.01, phase_rad=0.01))
+run_trials(task, int(sys.argv[1]))
+# the rusage of a process counts what its parent held before: the kernel's own mark of this program alone
+print(int(Path("/proc/self/status").read_text().split("VmHWM:")[1].split()[0]) / 1024)
+"""
+
+
+def trials(small: bool) -> Iterator[Row]:
+    """One die of a tolerance run, drawn, set and measured, against one complex matrix product of its size."""
+    from meshctl.api import solve
+    from meshctl.mesh.meshfile import lattice
+    from meshctl.mesh.spread import Spread
+    from meshctl.tolerances.budget import budget_of
+    from meshctl.tolerances.trials import task_of
+
+    spread, dies = Spread(split_rad=0.01, phase_rad=0.01), 100 if small else 1000
+    for n in (16,) if small else (16, 64):
+        mesh, u = lattice("rectangular", modes=n), haar(n)
+        plan = solve(mesh, "haar:1")
+        for policy, bar in (("as-set", 8.0), ("corrected", 40.0)):
+            task = task_of(mesh, plan, spread=spread, policy=policy)
+            mine, theirs = [], []
+            task.die(0)
+            for k in range(0, dies, 50):
+                theirs.append(seconds(lambda u=u: [u @ u for _ in range(500)]) / 500)
+                mine.append(seconds(lambda k=k, task=task: [task.die(k + j) for j in range(50)]) / 50)
+            ratios = [a / b for a, b in zip(mine, theirs, strict=True)]
+            yield Row(
+                f"{policy} die N = {n}, mean of {dies}", "complex product", 1e3 * statistics.median(mine),
+                1e3 * statistics.median(theirs), statistics.median(ratios), bar if n == 64 else None,
+            )  # fmt: skip
+        task = task_of(mesh, plan, spread=spread)
+        yield within(f"budget of errors N = {n}", "1 s, wished", lambda task=task: budget_of(task), 1.0, 1)
+    size = "8" if small else "64"
+    few, many = (
+        float(subprocess.run([sys.executable, "-c", MEMORY, count, size], capture_output=True, check=True).stdout)
+        for count in ("1000", "10000")
+    )
+    yield Row(f"MB more for 10000 dies N = {size}", "50 MB over 1000 dies", many - few, 50.0, (many - few) / 50.0, 1.0)
+
+
 STUDIES: tuple[Callable[[bool], Iterator[Row]], ...] = (
     decompose,
     propagate,
@@ -366,6 +414,7 @@ STUDIES: tuple[Callable[[bool], Iterator[Row]], ...] = (
     wraps,
     routing,
     first_solve,
+    trials,
 )
 
 
