@@ -2,7 +2,7 @@
 
 Descent here goes over own changes of the actuators within their limits, neighbours' shares included, so that
 whatever it finds can be driven. Codes are chosen among equally good settings, then stepped one by one.
-Public: Driven, within_limits, finer_codes.
+Public: Driven, within_limits, well_inside, finer_codes.
 """
 
 from __future__ import annotations
@@ -17,8 +17,8 @@ import numpy as np
 from meshctl.errors import DriveFinding
 from meshctl.mesh.response import Response
 from meshctl.plan.chip import Chip
-from meshctl.plan.placing import fixed_settings, place, reach_of
-from meshctl.plan.rounding import AWARE_TO, code_range, rounded
+from meshctl.plan.placing import code_range, fixed_settings, place, reach_of
+from meshctl.plan.rounding import AWARE_TO, rounded
 from meshctl.plan.settling import Effort, Settling, Work
 from meshctl.plan.wanted import Wanted
 from meshctl.solver.cells import MZI
@@ -31,6 +31,7 @@ STEPPED_TO = 300  # channels up to which codes are stepped one by one
 _GROUND_ROUNDS = 3  # the shared ground's rise takes room from what was refined
 _GROUND_SHARE = 0.97  # of its reach that is left to an actuator each time
 _SWEEPS = 4
+_MARGINS = 4  # times that a mask is narrowed, each time by four times as much
 AT_LIMIT_RAD = 1e-9  # from its limit, at which an actuator counts as held there
 
 
@@ -114,6 +115,38 @@ def within_limits(chip: Chip, work: Work, wanted: Wanted, effort: Effort) -> Wor
             break
         share[np.array(placed.held)] *= _GROUND_SHARE
     return best
+
+
+def well_inside(
+    chip: Chip, work: Work, codes: np.ndarray, wanted: Wanted, effort: Effort, best_effort: bool
+) -> tuple[Work, np.ndarray]:
+    """A mask that settings meet and codes do not: refined again for bands a little narrower, until codes meet it.
+
+    Returns
+    -------
+    (Work, int64 (K,)), those given where nothing comes closer
+    """
+    target, found = wanted.target, (work, codes)
+    if target is None or target.least_db is None or target.most_db is None:
+        return found
+    room = target.most_db - target.least_db
+    widest = 0.4 * float(np.nanmin(room)) if np.isfinite(room).any() else math.inf
+    least = _value(chip, codes, wanted)
+    margin = 4.0 * wanted.measured(chip.matrix(codes, wanted.wavelengths_nm))["excess_db"]
+    for _ in range(_MARGINS):
+        margin = min(margin, widest)
+        narrow = replace(target, least_db=target.least_db + margin, most_db=target.most_db - margin)
+        settling = Settling(chip, Wanted(narrow, wanted.size), best_effort, False, effort)
+        settling.refined = work.solution.settings
+        there = settling.run()
+        value = _value(chip, there.placed.codes, wanted)
+        if value < least:
+            there = replace(there, reached=work.reached, worked_around=work.worked_around, limited=work.limited)
+            found, least = (there, there.placed.codes), value
+        if least == 0.0 or margin == widest:
+            break
+        margin *= 4.0
+    return found
 
 
 def finer_codes(

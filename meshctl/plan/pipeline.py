@@ -104,6 +104,11 @@ def solve(
         value = wanted.value(chip.matrix(other, wanted.wavelengths_nm))
         if value < reached or wanted.plain:
             codes, reached = other, value
+    if joint and before == 0.0 < reached:
+        from meshctl.plan.joint import well_inside
+
+        work, codes = well_inside(chip, work, codes, wanted, effort, best_effort)
+        reached = wanted.value(chip.matrix(codes, wanted.wavelengths_nm))
     if aware and joint and reached > 1.05 * before + COARSE:
         from meshctl.plan.joint import finer_codes
 

@@ -1,6 +1,6 @@
 """Settings put on the electronics: whole turns, volts and codes within limits; the inverse of `chip`.
 
-Public: Placed, place, reach_of, fixed_settings, require_sound_crosstalk.
+Public: Placed, place, reach_of, fixed_settings, code_range, require_sound_crosstalk.
 """
 
 from __future__ import annotations
@@ -240,8 +240,19 @@ def place(
         held += tuple(int(a) for a in np.flatnonzero(np.isin(chip.actuators.channel, bad)))
     levels = np.clip(levels, lowest, highest)
     codes = chip.source.nearest_codes(levels)
-    codes[chip.levels(codes) > highest + _TOLERANCE] -= 1  # rounding must not step over a limit
+    codes = np.clip(codes, *code_range(chip))  # rounding must not step over a limit of channel or law
     return Placed(codes, levels, change, found.verdict, tuple(sorted(set(held))))
+
+
+def code_range(chip: Chip) -> tuple[np.ndarray, np.ndarray]:
+    """Lowest and highest code of every channel within all limits, int64 (K,) both."""
+    source, (bottom, top) = chip.source, (ends.copy() for ends in chip.level_range)
+    volts = ~chip.by_current
+    np.maximum.at(bottom, chip.actuators.channel[volts], chip.bounds.low_v[volts])
+    np.minimum.at(top, chip.actuators.channel[volts], chip.bounds.high_v[volts])
+    low = np.ceil((bottom - source.first_v) / source.step_v - 1e-9).astype(np.int64)
+    high = np.floor((top - source.first_v) / source.step_v + 1e-9).astype(np.int64)
+    return np.maximum(low, 0), np.minimum(high, source.highest)
 
 
 def _refuse_levels(chip: Chip, levels: np.ndarray, bad: np.ndarray) -> NoReturn:

@@ -14,7 +14,8 @@ from typing import Any
 import numpy as np
 
 from meshctl import __version__
-from meshctl.errors import MissingFile, MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
+from meshctl.errors import MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
+from meshctl.mesh.files import read_text
 from meshctl.mesh.graph import Mesh, frozen
 from meshctl.plan.structure import NUMBER, PLAN, ROUTE, ROUTES_ASKED, SEARCH, require
 
@@ -181,12 +182,8 @@ def read_plan(path: str | Path) -> Plan:
     """
     where = str(path)
     try:
-        entry = json.loads(Path(path).read_text(encoding="utf-8"))
-    except FileNotFoundError:
-        raise MissingFile("there is no such file", where=where, remedy="name a plan that 'solve' wrote") from None
-    except IsADirectoryError:
-        raise UnsoundFile("is a folder", where=where, remedy="name a plan file") from None
-    except (json.JSONDecodeError, UnicodeDecodeError) as problem:
+        entry = json.loads(read_text(Path(path), "plan file"))
+    except (json.JSONDecodeError, RecursionError) as problem:
         raise UnsoundFile(f"not readable as JSON: {problem}", where=where, remedy="solve again") from None
     if not isinstance(entry, dict) or entry.pop("format", None) != FORMAT:
         raise UnsoundFile("not a plan of format 1", where=where, remedy="name a plan that 'solve' wrote")

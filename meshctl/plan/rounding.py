@@ -1,6 +1,6 @@
 """Codes rounded against the matrix: errors are let fall where the light cares least.
 
-Public: rounded, code_range, AWARE_TO.
+Public: rounded, AWARE_TO.
 """
 
 from __future__ import annotations
@@ -9,7 +9,7 @@ import numpy as np
 
 from meshctl.mesh.sensitivity import gram, jacobian
 from meshctl.plan.chip import Chip
-from meshctl.plan.placing import Placed
+from meshctl.plan.placing import Placed, code_range
 from meshctl.plan.wanted import Wanted
 
 CURVED_TO = 400  # settings up to which wishes other than one matrix are followed: two gradients for each
@@ -74,17 +74,6 @@ def rounded(chip: Chip, placed: Placed, settings: np.ndarray, wanted: Wanted) ->
         spread=_spread(chip),
     )
     return answer.codes
-
-
-def code_range(chip: Chip) -> tuple[np.ndarray, np.ndarray]:
-    """Lowest and highest code of every channel within all limits, int64 (K,) both."""
-    source, (bottom, top) = chip.source, (ends.copy() for ends in chip.level_range)
-    volts = ~chip.by_current
-    np.maximum.at(bottom, chip.actuators.channel[volts], chip.bounds.low_v[volts])
-    np.minimum.at(top, chip.actuators.channel[volts], chip.bounds.high_v[volts])
-    low = np.ceil((bottom - source.first_v) / source.step_v - 1e-9).astype(np.int64)
-    high = np.floor((top - source.first_v) / source.step_v + 1e-9).astype(np.int64)
-    return np.maximum(low, 0), np.minimum(high, source.highest)
 
 
 def _curvature(chip: Chip, settings: np.ndarray, wanted: Wanted) -> np.ndarray:

@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 
 from meshctl.errors import Finding, MissingFile, StalePlan, UnsoundFile, WrongUsage
-from meshctl.mesh.files import write_whole
+from meshctl.mesh.files import made_folder, write_whole
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.tables import unknown_name
 from meshctl.plan.chip import Chip
@@ -64,7 +64,7 @@ def state_names(mesh: Mesh) -> list[str]:
 def save_state(mesh: Mesh, name: str, plan: Plan) -> Path:
     """Keep a plan by name; an older one of that name stays whole until the new one is there."""
     path = state_file(mesh, name)
-    path.parent.mkdir(exist_ok=True)
+    made_folder(path.parent)
     write_whole(path, plan_text(plan))
     return path
 
