@@ -354,3 +354,29 @@ def test_written_files_have_usual_rights(tmp_path):
     write_whole(tmp_path / "f", "x")
     (tmp_path / "g").write_text("x")
     assert (tmp_path / "f").stat().st_mode == (tmp_path / "g").stat().st_mode
+
+
+def test_links_are_followed_when_written(tmp_path):
+    (tmp_path / "link.json").symlink_to(tmp_path / "real.json")
+    write_whole(tmp_path / "link.json", "one")
+    assert (tmp_path / "link.json").is_symlink()
+    assert (tmp_path / "real.json").read_text() == "one"
+
+
+@pytest.mark.skipif(os.name != "posix", reason="needs a named pipe")
+def test_pipes_are_written_to_not_replaced(tmp_path):
+    pipe = tmp_path / "pipe"
+    os.mkfifo(pipe)
+    reader = os.open(pipe, os.O_RDONLY | os.O_NONBLOCK)
+    write_whole(pipe, "one")
+    assert os.read(reader, 10) == b"one"
+    assert pipe.is_fifo()
+    os.close(reader)
+
+
+def test_folder_in_place_of_table_is_named(chip, lattice_toml, run):
+    folder = chip(lattice_toml())
+    (folder / "actuators.csv").mkdir()
+    code, out, err = run("check", folder)
+    assert (code, out) == (3, "")
+    assert "actuators.csv: is a folder" in err

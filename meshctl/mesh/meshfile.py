@@ -12,11 +12,11 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import MissingFile, OutOfRange, UnknownKey, UnsoundFile, WrongUsage
+from meshctl.errors import MissingFile, OutOfRange, UnknownKey, WrongUsage
 from meshctl.mesh.actuation import PARAM_NAMES
 from meshctl.mesh.building import Tables, build_mesh
 from meshctl.mesh.description import MESH_TOML, Description, parse_description
-from meshctl.mesh.files import new_folder, write_whole
+from meshctl.mesh.files import new_folder, read_text, write_whole
 from meshctl.mesh.graph import Mesh
 from meshctl.mesh.lattices import LATTICES, PLANE_SIZES
 from meshctl.mesh.quantities import QUANTITIES, Quantity
@@ -88,10 +88,7 @@ def load(folder: str | Path) -> Mesh:
         )
     if not toml.is_file():
         raise MissingFile(f"no {MESH_TOML} in it", where=str(folder), remedy="name a mesh folder")
-    try:
-        text = toml.read_text(encoding="utf-8")
-    except UnicodeDecodeError as problem:
-        raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=MESH_TOML, remedy="save it as UTF-8") from None
+    text = read_text(toml)
     description = parse_description(text)
     measured = measured_files(description)
     for entry in folder.iterdir():

@@ -12,7 +12,8 @@ from typing import Any
 
 import numpy as np
 
-from meshctl.errors import MissingFile, NotFinite, UnsoundFile
+from meshctl.errors import NotFinite, UnsoundFile
+from meshctl.mesh.files import read_text
 from meshctl.mesh.spread import Shape, Spread, spread_of
 
 FEWEST = 5  # samples: fewer say nothing of a distribution
@@ -41,12 +42,7 @@ def read_spread(entry: Mapping[str, Any], folder: Path | None) -> Spread:
 
 def _samples(cause: str, file: str, folder: Path | None) -> np.ndarray:
     path = (folder or Path()) / file
-    try:
-        lines = path.read_text(encoding="utf-8").split()
-    except FileNotFoundError:
-        raise MissingFile("there is no such file", where=str(path), remedy="put the samples there") from None
-    except (OSError, UnicodeDecodeError) as problem:
-        raise UnsoundFile(f"not readable: {problem}", where=str(path), remedy="write it as text") from None
+    lines = read_text(path, "file of samples").split()
     if not lines or lines[0] != cause:
         found = lines[0] if lines else "nothing"
         raise UnsoundFile(f"the first line is '{found}'", where=str(path), remedy=f"head the samples with '{cause}'")

@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import Any
 
 from meshctl.errors import DuplicateName, MissingRow, NotFinite, OutOfRange, UnknownKey, UnsoundFile
+from meshctl.mesh.files import read_text
 from meshctl.mesh.quantities import Quantity
 
 
@@ -101,10 +102,7 @@ def read_table(
     UnknownKey, DuplicateName, MissingRow, NotFinite, OutOfRange, UnsoundFile
     """
     name = path.name
-    try:
-        text = path.read_text(encoding="utf-8-sig")
-    except UnicodeDecodeError as problem:
-        raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=name, remedy="save it as UTF-8") from None
+    text = read_text(path, "table")
     try:
         return _parsed(text, name, words, numbers, required, allowed)
     except csv.Error as problem:

@@ -14,10 +14,11 @@ from typing import Any
 import numpy as np
 
 from meshctl import __version__
-from meshctl.errors import MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
+from meshctl.errors import Finding, MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
 from meshctl.mesh.files import read_text
 from meshctl.mesh.graph import Mesh, frozen
-from meshctl.plan.structure import NUMBER, PLAN, ROUTE, ROUTES_ASKED, SEARCH, require
+from meshctl.plan.structure import LEVEL, NUMBER, PLAN, ROUTE, ROUTES_ASKED, SEARCH, TARGET, require
+from meshctl.plan.wanted import Wanted
 
 FORMAT = 1
 ARRAYS = {
@@ -128,12 +129,12 @@ def _array(entry: dict[str, Any], name: str, where: str) -> np.ndarray:
     kind = np.int64 if name == "codes" else np.float64
     try:
         given = np.array(entry[name])
-        array = given.astype(kind)
     except (TypeError, ValueError, OverflowError):
         raise UnsoundFile(f"'{name}' is no list of numbers", where=where, remedy="solve again") from None
-    if given.size and given.dtype.kind not in ("iu" if name == "codes" else "iuf"):
+    if given.size and given.dtype.kind not in ("i" if name == "codes" else "iuf"):
         numbers = "whole numbers" if name == "codes" else "numbers"
         raise UnsoundFile(f"'{name}' holds other things than {numbers}", where=where, remedy="solve again")
+    array = given.astype(kind)
     if array.ndim != 1:
         raise WrongSize(f"'{name}' has {array.ndim} dimensions, must have 1", where=where, remedy="solve again")
     if not np.isfinite(array).all():
@@ -157,6 +158,20 @@ def _check_routes(entry: dict[str, Any], where: str) -> None:
     entry |= {"fidelity": math.nan, "matrix_error": math.nan}
 
 
+def _check_target(entry: dict[str, Any], where: str) -> None:
+    """Refuse a target that nothing can be made of, and keys that only plans for routes have."""
+    require(entry["target"], TARGET, where, "target")
+    for name in ("routes", "search"):
+        if name in entry:
+            raise UnknownKey(f"key '{name}' belongs to plans for routes", where=where, remedy="remove it, or route")
+    require({"power_error": entry.get("power_error")}, {"power_error": LEVEL}, where)
+    try:
+        Wanted.from_description(entry["target"])
+    except Finding as finding:  # what the file asks, not what the user wrote
+        said = f"'target' cannot be used: {finding.what}"
+        raise UnsoundFile(said, where=where, remedy=finding.remedy or "solve again") from None
+
+
 def _check_measures(entry: dict[str, Any], where: str) -> None:
     """Refuse measures and accounts of another form; NaN takes the place of what wishes without a matrix lack."""
     for name in ("measures", "account"):
@@ -170,6 +185,8 @@ def _check_measures(entry: dict[str, Any], where: str) -> None:
         if not measures:
             raise MissingRow("key 'measures' is missing", where=where, remedy="solve again")
         entry |= {"fidelity": math.nan, "matrix_error": math.nan}
+    else:
+        require(entry["continuous"], {"fidelity": NUMBER, "matrix_error": NUMBER}, where, "continuous")
     entry.setdefault("power_error", measures.get("power_error"))
 
 
@@ -182,9 +199,10 @@ def read_plan(path: str | Path) -> Plan:
     """
     where = str(path)
     try:
-        entry = json.loads(read_text(Path(path), "plan file"))
-    except (json.JSONDecodeError, RecursionError) as problem:
-        raise UnsoundFile(f"not readable as JSON: {problem}", where=where, remedy="solve again") from None
+        entry = json.loads(read_text(Path(path), remedy="name a plan file that 'solve' wrote"))
+    except (ValueError, RecursionError) as problem:  # also a number of thousands of digits
+        said = "nested too deep" if isinstance(problem, RecursionError) else str(problem).partition(";")[0]
+        raise UnsoundFile(f"not readable as JSON: {said}", where=where, remedy="solve again") from None
     if not isinstance(entry, dict) or entry.pop("format", None) != FORMAT:
         raise UnsoundFile("not a plan of format 1", where=where, remedy="name a plan that 'solve' wrote")
     known = set(Plan.__dataclass_fields__)
@@ -201,6 +219,7 @@ def read_plan(path: str | Path) -> Plan:
     if routes:
         _check_routes(entry, where)
     else:
+        _check_target(entry, where)
         _check_measures(entry, where)
     bare = routes or _without_matrix(entry["target"])
     numbers = ("power_error",) if routes else () if bare else ("fidelity", "matrix_error")
@@ -211,6 +230,25 @@ def read_plan(path: str | Path) -> Plan:
     for name in ARRAYS:
         entry[name] = _array(entry, name, where)
     return Plan(**entry)
+
+
+def _check_fits(mesh: Mesh, plan: Plan, where: str) -> None:
+    """Refuse codes, sizes and ports that the mesh does not have."""
+    highest = (np.int64(1) << mesh.channels.bits.astype(np.int64)) - 1
+    wrong = np.flatnonzero((plan.codes < 0) | (plan.codes > highest))
+    if len(wrong):
+        k = int(wrong[0])
+        said = f"code {plan.codes[k]} of channel '{mesh.channel_names[k]}' is outside 0 to {highest[k]}"
+        raise UnsoundFile(said, where=where, remedy="solve again")
+    inputs, outputs = mesh.net.inputs, mesh.net.outputs
+    for route in plan.routes:
+        if route["input"] not in inputs or route["output"] not in outputs:
+            said = f"the route {route['input']}:{route['output']} is not on mesh '{mesh.name}'"
+            raise UnsoundFile(said, where=where, remedy="route again")
+    size = tuple(plan.target.get("size", (len(outputs), len(inputs))))
+    if size != (len(outputs), len(inputs)):
+        said = f"'target.size' is {size[0]} outputs and {size[1]} inputs; the mesh has {len(outputs)} and {len(inputs)}"
+        raise WrongSize(said, where=where, remedy="solve again")
 
 
 def check_fresh(mesh: Mesh, plan: Plan, *, stale_ok: bool = False, where: str = "plan") -> list[str]:
@@ -233,16 +271,14 @@ def check_fresh(mesh: Mesh, plan: Plan, *, stale_ok: bool = False, where: str = 
         "n_actuators": len(mesh.actuators),
     }
     fits = all(getattr(plan, name).shape == (sizes[size],) for name, size in ARRAYS.items())
-    if plan.mesh_hash == mesh.hash and fits:
-        highest = (np.int64(1) << mesh.channels.bits.astype(np.int64)) - 1
-        wrong = np.flatnonzero((plan.codes < 0) | (plan.codes > highest))
-        if len(wrong):
-            k = int(wrong[0])
-            raise UnsoundFile(
-                f"code {plan.codes[k]} of channel '{mesh.channel_names[k]}' is outside 0 to {highest[k]}",
-                where=where,
-                remedy="solve again",
-            )
+    if plan.mesh_hash == mesh.hash:
+        for name, size in ARRAYS.items():
+            has = len(getattr(plan, name))
+            if has != sizes[size]:
+                things = f"{sizes[size]} {size.removeprefix('n_')}"
+                said = f"'{name}' has {has} entries, the mesh {things}"
+                raise WrongSize(said, where=where, remedy="the file was changed by hand: solve again")
+        _check_fits(mesh, plan, where)
         return []
     said = (
         f"made for mesh '{plan.mesh_name}' ({plan.mesh_hash[:12]}); "
@@ -252,4 +288,5 @@ def check_fresh(mesh: Mesh, plan: Plan, *, stale_ok: bool = False, where: str = 
         raise StalePlan(said, where=where, remedy="solve again, or pass --stale-ok if you know why they differ")
     if not fits:
         raise WrongSize(f"{said} in size too", where=where, remedy="solve again")
+    _check_fits(mesh, plan, where)
     return [f"{where}: {said}"]

@@ -7,6 +7,7 @@ Public: Target, TARGETS, read_target, make_target, checked_array, described, fro
 from __future__ import annotations
 
 import csv
+import io
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
@@ -17,6 +18,7 @@ from zipfile import BadZipFile
 import numpy as np
 
 from meshctl.errors import MissingFile, NotFinite, NotUnitary, UnsoundFile, WrongSize, WrongUsage
+from meshctl.mesh.files import read_text
 from meshctl.mesh.tables import brief, unknown_name
 from meshctl.optics.measures import FREE_PHASES, unitarity_defect
 
@@ -149,7 +151,7 @@ WITH_ARGUMENT = ("haar", "permutation")
 
 def _from_csv(path: Path) -> np.ndarray:
     rows: list[list[complex]] = []
-    with path.open(newline="", encoding="utf-8-sig") as lines:
+    with io.StringIO(read_text(path), newline="") as lines:
         try:
             for row in (r for r in csv.reader(lines, strict=True) if any(field.strip() for field in r)):
                 line = len(rows) + 1
@@ -171,8 +173,6 @@ def _from_csv(path: Path) -> np.ndarray:
                         remedy="give one row per output, one cell per input",
                     )
                 rows.append(values)
-        except UnicodeDecodeError as problem:
-            raise UnsoundFile(f"not UTF-8 text: {problem.reason}", where=str(path), remedy="save it as UTF-8") from None
         except csv.Error as problem:
             raise UnsoundFile(f"not readable as CSV: {problem}", where=str(path), remedy="mend the file") from None
     if not rows:
@@ -365,4 +365,6 @@ def _from_description(entry: dict[str, Any]) -> Target:
         )
     if matrix is not None:
         return make_target(matrix, shape, entry["free"], entry["source"])
+    if entry["source"].partition(":")[0] not in TARGETS:
+        raise ValueError(f"'{brief(entry['source'])}' has no matrix beside it")
     return read_target(entry["source"], shape, entry["free"])

@@ -29,6 +29,7 @@ from typing import Any
 import numpy as np
 
 from meshctl.errors import Finding, MissingRow, NotFinite, OutOfRange, UnsoundFile, WrongSize, WrongUsage
+from meshctl.mesh.files import read_text
 from meshctl.mesh.tables import unknown_name
 from meshctl.solver.target import TARGETS, Target, check_free, checked_array, make_target, read_matrix
 
@@ -287,8 +288,8 @@ def read_wish(
     """
     where = str(path)
     try:
-        text = tomllib.loads(path.read_text(encoding="utf-8"))
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as problem:
+        text = tomllib.loads(read_text(path))
+    except tomllib.TOMLDecodeError as problem:
         raise UnsoundFile(f"not readable as TOML: {problem}", where=where, remedy="correct it there") from None
     try:
         return _wish(text, path, shape, free, inputs, outputs)
