@@ -19,9 +19,12 @@ from meshctl.mesh.response import Response
 from meshctl.mesh.spread import Spread
 from meshctl.optics.measures import matrix_error
 from meshctl.plan.chip import Chip
-from meshctl.plan.pipeline import predict
+from meshctl.plan.pipeline import Effort, predict
+from meshctl.plan.pipeline import solve as plan_for
 from meshctl.plan.plan import plan_text
 from meshctl.session import demo_mesh_folder
+from meshctl.solver.target import from_description
+from meshctl.tolerances.budget import budget_of
 from meshctl.tolerances.chunks import Kept, run_chunk
 from meshctl.tolerances.dies import die_as_built, mesh_of
 from meshctl.tolerances.requirement import MEASURES, requirement, until_width, yield_of
@@ -61,6 +64,26 @@ def test_codes_give_what_the_chip_gives(cause):
         assert np.abs(task.dies.run(errors)[0] - by_the_chip(task, errors)).max() < 1e-13  # rounding
 
 
+@pytest.mark.parametrize("cause", ["crosstalk_share", "r_share"])
+def test_crosstalk_scatters_as_the_chip_says(cause, chip, lattice_toml):
+    law = '[crosstalk]\nlaw = "exponential"\namplitude = 0.05\ndistance_um = 300.0\narm_um = 30.0\n'
+    mesh = load(chip(lattice_toml(more=law)))
+    spread = Spread(crosstalk_share=0.3, r_share=0.02).only(cause)
+    task = task_of(mesh, solve(mesh, "haar:2"), spread=spread)
+    errors = task.drawing.errors(task.drawing.normals(3, 0))
+    assert np.abs(task.dies.run(errors)[0] - by_the_chip(task, errors)).max() < 1e-13
+    mean = run_trials(task, 1500).summary("matrix_error")["mean_square"]
+    assert budget_of(task).e2 == pytest.approx(mean, rel=0.06)  # few causes dominate: E^2 scatters by its own size
+
+
+def test_nets_with_loops_are_measured_too():
+    mesh = load(demo_mesh_folder("curlew"))
+    task = task_of(mesh, route(mesh, ["p1:p9"]), spread=Spread(split_rad=0.01, phase_rad=0.01))
+    errors = task.drawing.errors(task.drawing.normals(3, 0))
+    assert np.abs(task.dies.run(errors)[0] - by_the_chip(task, errors)).max() < 1e-12
+    assert task.nominal()["insertion_loss_db"] == pytest.approx(task.plan.routes[0]["insertion_loss_db"], abs=1e-9)
+
+
 def test_unscattered_dies_do_what_predict_says():
     plan = solve(PLOVER, "haar:2")
     nominal, said = task_of(PLOVER, plan).nominal(), predict(PLOVER, plan)
@@ -84,12 +107,25 @@ def test_corrected_dies_beat_codes_as_set():
     assert error["refined"] < error["corrected"] < 0.2 * error["as-set"]
 
 
+def test_corrected_dies_do_what_solving_them_says():
+    spread = Spread(split_rad=0.05, phase_rad=0.5, p2pi_share=0.02, r_share=0.02)
+    task = task_of(PLOVER, solve(PLOVER, "haar:2"), spread=spread, policy="corrected")
+    for trial in range(3):
+        errors = task.drawing.errors(task.drawing.normals(3, trial))
+        die = mesh_of(task.drawing, errors)
+        target = from_description(task.plan.target)
+        anew = plan_for(die, target, best_effort=True, aware=False, joint=False, effort=Effort(refine=False))
+        matrix, power = task.dies.run(errors)
+        assert matrix_error(matrix, target.matrix) == pytest.approx(anew.matrix_error, rel=1e-6)
+        assert power == pytest.approx(anew.power_mw.sum())
+
+
 def test_drift_comes_after_the_correction():
     task = task_of(
         MESH, PLAN, spread=Spread(phase_rad=0.3, temperature_k=1.0, phase_rad_per_k=0.02), policy="corrected"
     )
     calm = task_of(MESH, PLAN, spread=Spread(phase_rad=0.3), policy="corrected")
-    assert run_trials(calm, 5).summary("matrix_error")["mean"] < 1e-9
+    assert run_trials(calm, 5).summary("matrix_error")["mean"] < 3e-4  # what 16 bits leave
     assert run_trials(task, 50).summary("matrix_error")["mean"] > 0.005
 
 

@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -54,18 +55,18 @@ class Source:
             object.__setattr__(self, name, np.array(getattr(self, name), float))
         object.__setattr__(self, "bits", np.array(self.bits, np.int64))
 
-    @property
+    @cached_property
     def highest(self) -> Ints:
         """Highest code of each channel; the lowest is 0."""
         return np.asarray(2 ** np.asarray(self.bits) - 1, np.int64)
 
-    @property
+    @cached_property
     def step_v(self) -> Floats:
         """Volts from one code to the next."""
         span = np.asarray(self.max_v) - np.asarray(self.min_v)
         return np.asarray(np.asarray(self.gain) * span / self.highest)
 
-    @property
+    @cached_property
     def first_v(self) -> Floats:
         """Volts at code 0."""
         return np.asarray(np.asarray(self.offset_v) + np.asarray(self.gain) * np.asarray(self.min_v))

@@ -169,11 +169,11 @@ class Chip:
         """Power at every output for unit power in every input: |matrix|^2."""
         return np.asarray(np.abs(self.matrix(codes, wavelengths_nm)) ** 2)
 
-    def power_mw(self, levels: np.ndarray) -> np.ndarray:
-        """Static power [A] of every actuator for levels [K] of the source."""
+    def power_mw(self, levels: np.ndarray, change: np.ndarray | None = None) -> np.ndarray:
+        """Static power [A] of every actuator for levels [K] of the source; `change` where it is known already."""
         at = levels[self.actuators.channel]
         power = np.zeros(len(self.actuators))
-        change = self.own_changes(levels)
+        change = self.own_changes(levels) if change is None else change
         for group in self.groups:
             if group.law.power_law:
                 power[group.rows] = turns(self.arm[group.rows] * change[group.rows]) * group.p["p2pi_mw"]

@@ -1,7 +1,7 @@
 """What is done with a die before its light is measured: codes as they are, local correction, or a full solve.
 
-`as-set` puts the plan's codes on the die. `corrected` knows the die's parts and corrects cell by cell, before
-codes are rounded. `refined` solves for the die anew, codes included. What drifts comes after all of them.
+`as-set` puts the plan's codes on the die. `corrected` knows the die's parts, corrects cell by cell and takes the
+nearest codes. `refined` solves for the die anew. What drifts comes after all of them.
 Public: Policy, POLICIES, AsSet, Corrected, Refined.
 """
 
@@ -115,12 +115,13 @@ class Policy:
         """(field matrix, power in mW) of one die."""
         raise NotImplementedError
 
-    def _measured(
-        self, chip: Chip, errors: Errors, levels: np.ndarray, settings: np.ndarray | None = None
-    ) -> np.ndarray:
-        """Light of a die at levels, or at settings in force; `errors` with what drifts."""
-        if settings is None:
-            settings = chip.mesh.as_built.in_force(chip.reference_rad + chip.total_changes(chip.own_changes(levels)))
+    def _measured(self, chip: Chip, errors: Errors, levels: np.ndarray) -> tuple[np.ndarray, float]:
+        """Light and power of a die at levels; `errors` with what drifts."""
+        change = chip.own_changes(levels)
+        settings = chip.mesh.as_built.in_force(chip.reference_rad + chip.total_changes(change))
+        return self._lit(chip, errors, levels, settings), float(chip.power_mw(levels, change).sum())
+
+    def _lit(self, chip: Chip, errors: Errors, levels: np.ndarray, settings: np.ndarray) -> np.ndarray:
         if not self.slow and "laser_nm" not in errors:
             return self.light.matrix(errors, settings)
         extra = die_as_built(self.drawing, errors, drift=True).error_rad - chip.mesh.as_built.error_rad
@@ -130,25 +131,26 @@ class Policy:
             return response.matrix(settings)
         return response.matrix(settings, self.mesh.net.wavelength_nm + errors["laser_nm"])[0]
 
+    def _chip(self, errors: Errors) -> Chip:
+        """The chip of a die; the mesh's own where light alone sees the difference."""
+        if self.slow or any(cause in errors for cause in (*ELECTRIC, "laser_nm")):
+            return Chip(mesh_of(self.drawing, errors))
+        return self.chip
+
 
 class AsSet(Policy):
     """The plan's codes on every die."""
 
     def run(self, errors: Errors) -> tuple[np.ndarray, float]:
+        chip = self._chip(errors)
         if not any(cause in errors for cause in COUPLED):
-            if not self.slow and "laser_nm" not in errors:
-                return self.light.matrix(errors, self.light.settings), self.power_mw
-            chip = Chip(mesh_of(self.drawing, errors))
-            return self._measured(chip, errors, self.levels, self.light.settings), self.power_mw
-        chip = Chip(mesh_of(self.drawing, errors)) if any(c in errors for c in ELECTRIC) else self.chip
+            return self._lit(chip, errors, self.levels, self.light.settings), self.power_mw
         levels = self.levels + errors["noise_v"] if "noise_v" in errors else self.levels
-        if chip is self.chip and (self.slow or "laser_nm" in errors):
-            chip = Chip(mesh_of(self.drawing, errors))
-        return self._measured(chip, errors, levels), float(chip.power_mw(levels).sum())
+        return self._measured(chip, errors, levels)
 
 
 class Corrected(Policy):
-    """Every die with its parts known, corrected cell by cell within its limits; codes are not rounded."""
+    """Every die with its parts known, corrected cell by cell within its limits, the nearest codes taken."""
 
     chunk = 100
 
@@ -162,22 +164,13 @@ class Corrected(Policy):
 
     def run(self, errors: Errors) -> tuple[np.ndarray, float]:
         electric = any(cause in errors for cause in ELECTRIC)
-        as_built = die_as_built(self.drawing, errors, drift=False)
-        chip = Chip(mesh_of(self.drawing, errors)) if electric else self.chip
-        reach = reach_of(chip) if electric else self.reach
-        closed = self.closed
+        as_built, closed, chip = die_as_built(self.drawing, errors, drift=False), self.closed, self._chip(errors)
         fitted = fit_cells(
-            self.mesh.net, as_built, closed.response.circuit, closed.table, self.steps, self.step_of, reach, self.free
-        )
-        settings = as_built.in_force(fitted.settings)
-        if not electric and "noise_v" not in errors and not self.slow and "laser_nm" not in errors:
-            return self.light.matrix(errors, settings), float("nan")
-        chip = Chip(mesh_of(self.drawing, errors))
-        levels = place(chip, fitted.settings, best_effort=True).levels
-        power = float(chip.power_mw(levels).sum())
-        if "noise_v" in errors:
-            levels = levels + errors["noise_v"]
-        return self._measured(chip, errors, levels), power
+            self.mesh.net, as_built, closed.response.circuit, closed.table, self.steps, self.step_of,
+            reach_of(chip) if electric else self.reach, self.free,
+        )  # fmt: skip
+        levels = chip.levels(place(chip, fitted.settings, best_effort=True).codes)
+        return self._measured(chip, errors, levels + errors["noise_v"] if "noise_v" in errors else levels)
 
 
 class Refined(Policy):
@@ -190,9 +183,7 @@ class Refined(Policy):
         chip = Chip(mesh)
         plan = solve(mesh, from_description(self.plan.target), best_effort=True, effort=Effort(refine=True))
         levels = chip.levels(plan.codes)
-        if "noise_v" in errors:
-            levels = levels + errors["noise_v"]
-        return self._measured(chip, errors, levels), float(chip.power_mw(levels).sum())
+        return self._measured(chip, errors, levels + errors["noise_v"] if "noise_v" in errors else levels)
 
 
 POLICIES: dict[str, Callable[[Drawing, Plan], Any]] = {"as-set": AsSet, "corrected": Corrected, "refined": Refined}
