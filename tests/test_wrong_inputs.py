@@ -200,13 +200,29 @@ PLANS = [
     (lambda p: p.plan(codes=lambda c: [-1, *c[1:]]), ["p.json", "code -1", "0 to 65535"]),
     (lambda p: p.plan(codes=lambda c: [1.5, *c[1:]]), ["p.json", "'codes'", "whole numbers"]),
     (lambda p: p.plan(codes=lambda c: ["7", *c[1:]]), ["p.json", "'codes'", "whole numbers"]),
-    (lambda p: p.plan(codes=lambda c: c[1:]), ["p.json", "physics differs"]),
+    (lambda p: p.plan(codes=lambda c: c[1:]), ["p.json", "'codes' has 15 entries, the mesh 16 channels"]),
     (lambda p: p.plan(volts=lambda v: [float("nan"), *v[1:]]), ["p.json", "'volts' holds NaN"]),
     (lambda p: p.plan(settings=[[0.0]]), ["p.json", "'settings' has 2 dimensions"]),
     (lambda p: p.plan(codes=None), ["p.json", "key 'codes' is missing", "solve again"]),
     (lambda p: p.plan(colour="red"), ["p.json", "key 'colour' is not known"]),
     (lambda p: p.plan(fidelity="high"), ["p.json", "'fidelity' is 'high'"]),
     (lambda p: p.plan(target=5), ["p.json", "'target' is 5"]),
+    (lambda p: p.plan(target={}), ["p.json", "'target.source' is missing", "solve again"]),
+    (lambda p: p.plan(target=lambda t: {**t, "source": "haar:x"}), ["p.json", "'target'", "haar:x has no seed"]),
+    (lambda p: p.plan(target=lambda t: {**t, "source": "t.npy"}), ["p.json", "'t.npy' has no matrix", "solve again"]),
+    (lambda p: p.plan(target=lambda t: {**t, "free": "x"}), ["p.json", "'target.free' is 'x'", "outputs"]),
+    (lambda p: p.plan(target=lambda t: {**t, "size": [5, 5]}), ["p.json", "5 outputs and 5 inputs", "has 4 and 4"]),
+    (lambda p: p.plan(target=lambda t: {**t, "size": [4]}), ["p.json", "'target.size' is [4]", "two whole numbers"]),
+    (lambda p: p.plan(target=lambda t: {**t, "wish": True}), ["p.json", "solve again"]),
+    (lambda p: p.plan(routes=5), ["p.json", "'routes' belongs to plans for routes"]),
+    (lambda p: p.plan(search={}), ["p.json", "'search' belongs to plans for routes"]),
+    (lambda p: p.plan(power_error="x"), ["p.json", "'power_error' is 'x'", "null"]),
+    (lambda p: p.plan(continuous={}), ["p.json", "'continuous.fidelity' is missing"]),
+    (lambda p: p.plan(codes=lambda c: [float("nan"), *c[1:]]), ["p.json", "'codes'", "whole numbers"]),
+    (lambda p: p.plan(codes=lambda c: [2**63, *c[1:]]), ["p.json", "'codes'", "whole numbers"]),
+    (lambda p: p.plan(mesh_hash=5), ["p.json", "'mesh_hash' is 5", "a text"]),
+    (lambda p: p.file("p.json", "[" * 100_000), ["p.json", "nested too deep", "solve again"]),
+    (lambda p: p.file("p.json", "1" * 5000), ["p.json", "not readable as JSON", "solve again"]),
     (lambda p: p.plan(mesh_hash="0" * 64), ["p.json", "(000000000000)", "--stale-ok"]),
     (lambda p: p.edit("1550.0", "1551.0"), ["p.json", "physics differs", "solve again"]),
 ]
@@ -313,11 +329,6 @@ def test_missing_command_is_asked_for(run):
 def test_limit_below_need_is_one_line(run, place):
     place.edit("max_v = 10.0", "max_v = 10.0\nlimit_v = 1.5")
     ends_with_one_line(run, place, "solve m haar:1 -o q.json", 4, "V is needed", "1.5 V", "limit_v", "--best-effort")
-
-
-def test_plan_without_target_is_one_line(run, place):
-    place.plan(target={})
-    ends_with_one_line(run, place, "predict m p.json --matrix u.npy", 3, "target", "not readable", "solve again")
 
 
 def test_net_without_cells_is_no_bug(run, place):

@@ -80,6 +80,10 @@ class Plan:
         """True where a matrix is among what is asked."""
         return not (self.is_routes or _without_matrix(self.target))
 
+    def __repr__(self) -> str:
+        near = ", ".join(f"{name} {value}" for name, value in self._nearness())
+        return f"<Plan for mesh '{self.mesh_name}': {self.target.get('source', '')}; {near}; {self.reason}>"
+
     def _repr_html_(self) -> str:
         from html import escape
 
@@ -169,7 +173,7 @@ def _check_target(entry: dict[str, Any], where: str) -> None:
         Wanted.from_description(entry["target"])
     except Finding as finding:  # what the file asks, not what the user wrote
         said = f"'target' cannot be used: {finding.what}"
-        raise UnsoundFile(said, where=where, remedy=finding.remedy or "solve again") from None
+        raise UnsoundFile(said, where=where, remedy="solve again") from None
 
 
 def _check_measures(entry: dict[str, Any], where: str) -> None:

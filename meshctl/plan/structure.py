@@ -1,6 +1,6 @@
 """What must stand where in a plan file, as tables: one check refuses everything else by key, value and remedy.
 
-Public: require, PLAN, ROUTES_ASKED, ROUTE, SEARCH.
+Public: require, PLAN, TARGET, ROUTES_ASKED, ROUTE, SEARCH.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from meshctl.errors import MissingRow, UnsoundFile
+from meshctl.optics.measures import FREE_PHASES
 from meshctl.solver.solution import REASONS
 
 
@@ -26,10 +27,12 @@ def _is_number(value: Any) -> bool:
     return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)
 
 
-def _list_of(one: Form, said: str, *, some: bool = False) -> Form:
-    return Form(
-        said, lambda value: isinstance(value, list) and (bool(value) or not some) and all(map(one.holds, value))
-    )
+def _list_of(one: Form, said: str, *, some: bool = False, count: int | None = None) -> Form:
+    def holds(value: Any) -> bool:
+        long_enough = isinstance(value, list) and (bool(value) or not some) and count in (None, len(value))
+        return long_enough and all(map(one.holds, value))
+
+    return Form(said, holds)
 
 
 def _or_none(one: Form) -> Form:
@@ -57,6 +60,11 @@ PLAN = {
     "saved_mw": NUMBER,
     "seed": COUNT,
     "version": TEXT,
+}
+TARGET = {
+    "source": TEXT,
+    "free": Form(f"one of {', '.join(FREE_PHASES)}", lambda value: isinstance(value, str) and value in FREE_PHASES),
+    "size": _list_of(COUNT, "two whole numbers, outputs and inputs", count=2),
 }
 ROUTES_ASKED = {
     "source": TEXT,
