@@ -5,20 +5,62 @@ Public: solve, route, tolerance, predict.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from meshctl.errors import WrongSize
+from meshctl.errors import WrongSize, WrongUsage
 from meshctl.mesh.graph import Mesh
+from meshctl.optics.grid import checked_wavelengths
 from meshctl.plan import pipeline
 from meshctl.plan.plan import Plan, check_fresh
 from meshctl.solver.target import Target, make_target, read_target
 
 if TYPE_CHECKING:  # pragma: no cover
     from meshctl.tolerances.whole import Tolerance
+
+SECONDS_MOST = 1e9
+
+
+def _require(mesh: Any, plan: Any = None, *, with_plan: bool = False) -> None:
+    """Refuse a path or anything else where a mesh or a plan must stand."""
+    if not isinstance(mesh, Mesh):
+        raise WrongUsage(
+            f"mesh is {_said(mesh)}, must be a Mesh", remedy='load it first: meshctl.load("meshes/plover8")'
+        )
+    if with_plan and not isinstance(plan, Plan):
+        raise WrongUsage(
+            f"plan is {_said(plan)}, must be a Plan",
+            remedy="give what meshctl.solve or meshctl.route returned; a file is read by meshctl.plan.plan.read_plan",
+        )
+
+
+def _said(value: Any) -> str:
+    shown = repr(value)
+    return f"{shown if len(shown) <= 40 else f'{shown[:37]}..'} ({type(value).__name__})"
+
+
+def _positive(name: str, value: Any) -> None:
+    number = isinstance(value, int | float) and not isinstance(value, bool)
+    if not number or not 0.0 < value < SECONDS_MOST:
+        raise WrongUsage(f"{name} is {_said(value)}", remedy=f"allowed is a number above 0 and below {SECONDS_MOST:g}")
+
+
+def _whole(name: str, value: Any, low: int) -> None:
+    if not isinstance(value, int | np.integer) or isinstance(value, bool) or value < low:
+        raise WrongUsage(f"{name} is {_said(value)}", remedy=f"allowed is a whole number from {low}")
+
+
+def _words(name: str, value: Any) -> tuple[str, ...]:
+    """Names from Python: several, or a single one."""
+    found = (value,) if isinstance(value, str) else tuple(value)
+    for word in found:
+        if not isinstance(word, str):
+            raise WrongUsage(f"{name} holds {_said(word)}", remedy="give a list of names")
+    return found
 
 
 def solve(
@@ -64,6 +106,11 @@ def solve(
     >>> plan.fidelity > 0.999999
     True
     """
+    _require(mesh)
+    _whole("starts", starts, 1)
+    _whole("seed", seed, 0)
+    if seconds is not None:
+        _positive("seconds", seconds)
     effort = pipeline.Effort(refine, starts, seconds, seed)
     return pipeline.solve(
         mesh,
@@ -97,7 +144,14 @@ def _wish(mesh: Mesh, target: Any, free: str) -> Any:
         from meshctl.solver.objective import OwnWish
 
         return OwnWish(target)
-    return make_target(target, shape, free)
+    try:
+        matrix = np.asarray(target)
+    except ValueError:  # rows of different length
+        raise WrongSize(
+            "the target is no matrix: its rows differ in length",
+            remedy=f"give {shape[0]} rows of {shape[1]} numbers each",
+        ) from None
+    return make_target(matrix, shape, free)
 
 
 def route(
@@ -142,11 +196,32 @@ def route(
     """
     from meshctl.plan import switching
 
-    if isinstance(wishes, str):
-        wishes = [wishes]
-    rank = None if priorities is None else tuple(float(p) for p in priorities)
-    asked = switching.RouteTarget(tuple(wishes), tuple(avoid), rank, unused, seed, seconds, band, best_effort)
+    _require(mesh)
+    _whole("seed", seed, 0)
+    _positive("seconds", seconds)
+    asked = switching.RouteTarget(
+        _words("wishes", wishes),
+        _words("avoid", avoid),
+        None if priorities is None else _ranks(priorities),
+        unused,
+        seed,
+        seconds,
+        band,
+        best_effort,
+    )
     return switching.route(mesh, asked)
+
+
+def _ranks(priorities: Any) -> tuple[float, ...]:
+    try:
+        ranks = tuple(float(p) for p in priorities)
+    except (TypeError, ValueError):
+        ranks = (math.nan,)
+    if not all(map(math.isfinite, ranks)):
+        raise WrongUsage(
+            f"priorities are {_said(priorities)}", remedy="give a finite number for each wish, such as [2, 1]"
+        )
+    return ranks
 
 
 def tolerance(
@@ -197,6 +272,7 @@ def tolerance(
     """
     from meshctl.tolerances.whole import Question, answer
 
+    _require(mesh, plan, with_plan=True)
     check_fresh(mesh, plan, stale_ok=stale_ok)
     place = None if folder is None else Path(folder)
     required = (require,) if isinstance(require, str) else tuple(require)
@@ -220,9 +296,19 @@ def predict(mesh: Mesh, plan: Plan, wavelengths_nm: np.ndarray | None = None, *,
     ------
     StalePlan
         For a plan of another mesh.
+    WrongUsage
+        For wavelengths outside 200 to 20000 nm.
+
+    Example
+    -------
+    >>> import meshctl
+    >>> mesh = meshctl.lattice("rectangular", modes=4)
+    >>> meshctl.predict(mesh, meshctl.solve(mesh, "dft"), [1549.0, 1551.0]).shape
+    (2, 4, 4)
     """
+    _require(mesh, plan, with_plan=True)
     check_fresh(mesh, plan, stale_ok=stale_ok)
-    wavelengths = None if wavelengths_nm is None else np.atleast_1d(np.asarray(wavelengths_nm, float))
+    wavelengths = None if wavelengths_nm is None else checked_wavelengths(wavelengths_nm)
     if plan.is_routes:
         from meshctl.plan.switching import predict_routes
 

@@ -113,3 +113,64 @@ def test_plan_draws_its_volts_and_power():
     assert [bar.get_height() for bar in applied] == pytest.approx(plan.volts.tolist())
     assert [bar.get_height() + bar.get_y() for bar in room] == pytest.approx([10.0] * 16)  # the source's range
     assert sum(bar.get_height() for bar in below.containers[0]) == pytest.approx(plan.power_mw.sum())
+
+
+MADE = meshctl.lattice("rectangular", modes=3)
+
+
+@pytest.mark.parametrize(
+    ("values", "says"),
+    [
+        ([-5.0], "-5 nm.*200 to 20000 nm"),
+        ([0.0], "holds 0 nm"),
+        ([np.nan], "holds nan nm"),
+        ([], "is empty"),
+        ("1540:1560:3", "the text '1540:1560:3'.*linspace"),
+        ([[1550.0]], "2 dimensions"),
+        ([[1550.0], [1.0, 2.0]], "no list of numbers"),
+        ([1550j], "complex"),
+    ],
+)
+def test_wrong_wavelengths_are_said(values, says):
+    with pytest.raises(WrongUsage, match=f"wavelengths_nm.*{says}"):
+        meshctl.predict(MADE, meshctl.solve(MADE, "dft"), values)
+
+
+@pytest.mark.parametrize(
+    ("call", "says"),
+    [
+        (lambda: meshctl.solve("meshes/plover8", "dft"), r"'meshes/plover8' \(str\), must be a Mesh; .*meshctl.load"),
+        (lambda: meshctl.predict(MADE, "plan.json"), r"'plan.json' \(str\), must be a Plan"),
+        (lambda: meshctl.tolerance(MADE, None), r"None \(NoneType\), must be a Plan"),
+        (lambda: meshctl.route("m", ["in1:out1"]), "must be a Mesh"),
+        (lambda: meshctl.solve(MADE, "dft", seconds=-1), "seconds is -1.*above 0"),
+        (lambda: meshctl.solve(MADE, "dft", starts=0), "starts is 0.*from 1"),
+        (lambda: meshctl.solve(MADE, "dft", seed=-1), "seed is -1.*from 0"),
+        (lambda: meshctl.route(MADE, ["in1:out1"], seconds=-1), "seconds is -1"),
+        (lambda: meshctl.route(MADE, ["in1:out1"], priorities=[np.nan]), "priorities are .*finite"),
+        (lambda: meshctl.route(MADE, ["in1:out1"], avoid="c9_9"), "'c9_9'"),
+        (lambda: meshctl.route(MADE, [5]), "wishes holds 5"),
+        (lambda: meshctl.lattice("rectangular", modes="4"), "modes is '4', a str"),
+        (lambda: meshctl.lattice("rectangular", modes=4.0), "modes is 4.0, a float"),
+        (lambda: meshctl.lattice("rectangular", modes=4, built=-1), "built is -1.*from 0"),
+    ],
+)
+def test_wrong_calls_name_value_and_remedy(call, says):
+    with pytest.raises(WrongUsage, match=says):
+        call()
+
+
+def test_ragged_target_is_said():
+    with pytest.raises(WrongSize, match="rows differ in length; give 3 rows of 3"):
+        meshctl.solve(MADE, [[1, 2], [3]])
+
+
+def test_one_name_to_avoid_may_stand_alone():
+    assert meshctl.route(MADE, "in3:out3", avoid="c1_1").target["avoid"] == ["c1_1"]
+
+
+def test_objects_name_themselves_in_a_line():
+    plan = meshctl.solve(MADE, "dft")
+    assert repr(MADE) == "<Mesh 'rectangular3': rectangular, 3 in, 3 out, 3 cells>"
+    assert repr(plan).startswith("<Plan for mesh 'rectangular3': dft; fidelity 0.99999")
+    assert len(repr(plan)) < 120

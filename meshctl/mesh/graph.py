@@ -277,6 +277,11 @@ class Mesh:
     def actuator_names(self) -> list[str]:
         return self.actuators.names(self.net)
 
+    def __repr__(self) -> str:
+        net, at = self.net, f", folder='{self.folder}'" if self.folder else ""
+        ports = f"{len(net.inputs)} in, {len(net.outputs)} out"
+        return f"<Mesh '{self.name}': {self.shape or 'explicit'}, {ports}, {net.n_cells} cells{at}>"
+
     def _repr_html_(self) -> str:
         from html import escape
 

@@ -157,8 +157,14 @@ def lattice(
         raise WrongUsage(f"a {shape} lattice takes no {', '.join(plane)}", remedy="give modes, such as 8")
     elif shape != "switch" and modes is None:
         raise WrongUsage(f"a {shape} lattice needs a number of modes", remedy="give modes, such as 8")
+    if built is not None and (not isinstance(built, int | np.integer) or isinstance(built, bool) or built < 0):
+        raise WrongUsage(f"built is {built!r}", remedy="give the seed of a die, a whole number from 0")
     for key, size in (("modes", modes), ("spare", spare), *plane.items()):
-        if size is not None and not QUANTITIES[key].allows(size):
+        if size is None:
+            continue
+        if not isinstance(size, int | np.integer) or isinstance(size, bool):
+            raise WrongUsage(f"{key} is {size!r}, a {type(size).__name__}", remedy="give a whole number, such as 8")
+        if not QUANTITIES[key].allows(size):
             raise WrongUsage(f"{key} is {size}", remedy=f"allowed is {QUANTITIES[key].allowed}")
     name = name or f"{shape}{modes or 'x'.join(map(str, plane.values()))}"
     text = lattice_text(shape, name, modes=modes, cell=cell, spare=spare, balanced=balanced, plane=plane)

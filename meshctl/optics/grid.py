@@ -1,9 +1,11 @@
 """Wavelengths to look at, from words: a range in nm or THz, or a plan of channels.
 
-Public: wavelengths_of.
+Public: wavelengths_of, checked_wavelengths, LOW_NM, HIGH_NM.
 """
 
 from __future__ import annotations
+
+from typing import Any
 
 import numpy as np
 
@@ -70,6 +72,8 @@ def wavelengths_of(words: str, option: str = "--wavelengths") -> np.ndarray:
 
 def _channels(words: str, numbers: list[float], option: str) -> np.ndarray:
     spacing, first, last = numbers
+    if not np.isfinite(numbers).all():
+        raise ValueError
     if not (spacing in SPACINGS_GHZ or (spacing >= 100 and spacing % 100 == 0)):
         raise WrongUsage(
             f"{option} {words}: a spacing of {spacing:g} GHz is in no channel plan",
@@ -80,4 +84,40 @@ def _channels(words: str, numbers: list[float], option: str) -> np.ndarray:
             f"{option} {words}: channels {first:g} to {last:g} are no rising whole numbers",
             remedy="write such as itu:50:-20:20",
         )
-    return np.asarray(nm_from_thz(ANCHOR_THZ + np.arange(int(first), int(last) + 1) * spacing * THZ_PER_GHZ))
+    thz = ANCHOR_THZ + np.arange(int(first), int(last) + 1) * spacing * THZ_PER_GHZ
+    if thz[0] <= 0.0:
+        raise WrongUsage(
+            f"{option} {words}: channel {first:g} lies at {thz[0]:.6g} THz",
+            remedy=f"stay within {LOW_NM:g} to {HIGH_NM:g} nm, such as itu:50:-20:20",
+        )
+    return np.asarray(nm_from_thz(thz))
+
+
+def checked_wavelengths(values: Any, name: str = "wavelengths_nm") -> np.ndarray:
+    """Wavelengths from Python, float (W,): one number or a list of them, in nm.
+
+    Raises
+    ------
+    WrongUsage
+
+    Example
+    -------
+    >>> checked_wavelengths(1550)
+    array([1550.])
+    """
+    remedy = f"give one number or a list of them, {LOW_NM:g} to {HIGH_NM:g} nm"
+    if isinstance(values, str):
+        raise WrongUsage(f"{name} is the text '{values}'", remedy=f"{remedy}; numpy.linspace makes ranges")
+    try:
+        found = np.atleast_1d(np.asarray(values))
+    except ValueError:
+        raise WrongUsage(f"{name} is no list of numbers", remedy=remedy) from None
+    if found.dtype.kind not in "iuf":
+        raise WrongUsage(f"{name} holds {found.dtype}, not numbers", remedy=remedy)
+    if found.ndim != 1 or not len(found):
+        said = f"has {found.ndim} dimensions" if found.ndim != 1 else "is empty"
+        raise WrongUsage(f"{name} {said}", remedy=remedy)
+    beyond = found[~((found >= LOW_NM) & (found <= HIGH_NM))]
+    if len(beyond):
+        raise WrongUsage(f"{name} holds {beyond[0]:.6g} nm", remedy=remedy)
+    return found.astype(float)
