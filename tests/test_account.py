@@ -181,7 +181,7 @@ def test_dispersion_is_owed_the_band():
     assert entry["alone"] == pytest.approx(plan.matrix_error, rel=0.5)
 
 
-def test_no_cause_is_named_that_is_not_there():
+def test_only_causes_there_are_named():
     plan = meshctl.solve(lattice("rectangular", modes=4), "haar:1", explain=True)
     assert [entry["cause"] for entry in plan.account["causes"]] == ["codes"]
     assert plan.account["causes"][0]["alone"] == plan.matrix_error
@@ -217,7 +217,7 @@ def test_one_lossy_coupler_helps_most(tmp_path):
     assert first["off"] == pytest.approx(1.5, abs=0.1)
 
 
-def test_freeing_a_stuck_phase_gains_at_least_its_share(tmp_path):
+def test_freed_phases_gain_their_share(tmp_path):
     folder, target = stuck(tmp_path), read_target("haar:0", (4, 4))
     plan = solve(load(folder), target, explain=True)
     first = plan.account["elements"][0]
@@ -258,7 +258,7 @@ def test_every_cause_says_what_it_is():
         assert off(mesh).net.n_settings == mesh.net.n_settings
 
 
-def test_explaining_changes_no_plan(tmp_path):
+def test_explaining_changes_no_plan_itself(tmp_path):
     mesh = load(worn(tmp_path))
     one, two = (meshctl.solve(mesh, "haar:1", explain=flag) for flag in (False, True))
     assert np.array_equal(one.codes, two.codes)

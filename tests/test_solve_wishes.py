@@ -3,6 +3,7 @@
 import json
 import subprocess
 import sys
+import time
 from dataclasses import replace
 
 import numpy as np
@@ -51,7 +52,7 @@ def off(matrix, target, weight=None):
 
 
 # ---- each kind of wish
-def test_powers_alone_are_reached(made):
+def test_powers_alone_are_reached_too(made):
     mesh, matrix_of, _ = made
     # light is lost on the way: wished powers are those of a unitary matrix, a little weaker
     power = 0.8 * np.abs(drawn(1)) ** 2
@@ -100,7 +101,7 @@ def test_states_are_prepared_at_outputs(made):
     assert plan.fidelity == pytest.approx(overlap, abs=1e-12)
 
 
-def test_dark_outputs_stay_dark(made):
+def test_dark_outputs_stay_dark_indeed(made):
     mesh, matrix_of, _ = made
     weight = np.zeros((MODES, MODES))
     weight[:, 0] = 1.0
@@ -114,7 +115,7 @@ def test_dark_outputs_stay_dark(made):
 
 
 @pytest.mark.parametrize(("size", "modes"), [(4, 8), (6, 12)])
-def test_contractions_are_dilated_exactly(tmp_path, run, size, modes):
+def test_contractions_are_dilated_without_error(tmp_path, run, size, modes):
     rng = np.random.default_rng(size)
     matrix = rng.normal(size=(size, size)) + 1j * rng.normal(size=(size, size))
     matrix *= 0.8 / np.linalg.norm(matrix, 2)
@@ -136,7 +137,7 @@ def only(size):
     return f"only_inputs = [{ports.replace('{}', 'in')}]\nonly_outputs = [{ports.replace('{}', 'out')}]\n"
 
 
-def test_impossible_contractions_say_why(tmp_path, run):
+def test_impossible_contractions_say_why_so(tmp_path, run):
     rng = np.random.default_rng(6)
     matrix = rng.normal(size=(6, 6)) + 1j * rng.normal(size=(6, 6))
     np.save(tmp_path / "m.npy", 0.8 * matrix / np.linalg.norm(matrix, 2))
@@ -369,3 +370,23 @@ def test_plain_solves_load_no_refinement(tmp_path):
     heavy = {"solver.refine", "solver.objective", "solver.wishes", "solver.dilation", "plan.joint", "plan.account"}
     assert not loaded & {f"meshctl.{name}" for name in heavy}
     assert "meshctl.plan.pipeline" in loaded
+
+
+def test_dark_wishes_survive_any_codes():
+    mesh, weight = lattice("rectangular", modes=2), np.array([[1.0, 0.0], [1.0, 0.0]])
+    plan = solve(mesh, make_wish((2, 2), dark=[0], weight=weight))
+    light = np.abs(meshctl.predict(mesh, plan)[0, 0]) ** 2
+    assert plan.measures["dark_share"] == pytest.approx(light, abs=1e-15)
+    assert light <= 1e-6
+
+
+def test_time_allowed_covers_all_steps():
+    mesh = lattice("rectangular", modes=16, built=1)
+    rng = np.random.default_rng(0)
+    error = np.where(mesh.net.kind == 0, rng.normal(0, 0.1, mesh.net.n_elements), 0.0)
+    mesh = replace(mesh, as_built=replace(mesh.as_built, error_rad=error))
+    began = time.perf_counter()
+    plan = meshctl.solve(mesh, "haar:1", seconds=0.2, starts=50)
+    assert plan.reason == "time"
+    # fifty starts would take a minute; what is not refinement takes a second at most
+    assert time.perf_counter() - began <= 10.0

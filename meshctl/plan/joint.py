@@ -132,7 +132,9 @@ def well_inside(
     room = target.most_db - target.least_db
     widest = 0.4 * float(np.nanmin(room)) if np.isfinite(room).any() else math.inf
     least = _value(chip, codes, wanted)
-    margin = 4.0 * wanted.measured(chip.matrix(codes, wanted.wavelengths_nm))["excess_db"]
+    margin = 4.0 * wanted.measured(chip.matrix(codes, wanted.wavelengths_nm)).get("excess_db", 0.0)
+    if margin == 0.0:
+        return found  # something else than a mask is missed
     for _ in range(_MARGINS):
         margin = min(margin, widest)
         narrow = replace(target, least_db=target.least_db + margin, most_db=target.most_db - margin)

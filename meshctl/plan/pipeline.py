@@ -6,6 +6,7 @@ Public: solve, predict, predict_codes, headroom_v, Prediction, Effort.
 from __future__ import annotations
 
 import math
+import time
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
@@ -26,6 +27,7 @@ if TYPE_CHECKING:  # pragma: no cover
 
 CODES_WORTH = 0.01  # share of E^2 that codes must add before they are rounded against the matrix
 CODES_SHOW = 1e-6  # matrix error that codes add beyond which they are the reason
+LEAST_SECONDS = 1e-3  # that a further step may take where the time is over
 COARSE = 4e-6  # what codes may add to E^2, or to another wish, before other settings are tried for them
 
 
@@ -87,13 +89,19 @@ def solve(
     """
     chip = Chip(mesh)
     effort = effort or Effort()
+    until = math.inf if effort.seconds is None else time.monotonic() + effort.seconds
+
+    def rest() -> Effort:
+        """The effort with what is left of its time."""
+        return effort if math.isinf(until) else replace(effort, seconds=max(until - time.monotonic(), LEAST_SECONDS))
+
     wanted = Wanted.of(target, (len(mesh.net.outputs), len(mesh.net.inputs)))
     work = Settling(chip, wanted, best_effort, least_power, effort).run()
     joint = joint and effort.refine is not False
     if joint and work.placed.held:
         from meshctl.plan.joint import within_limits
 
-        work = within_limits(chip, work, wanted, effort)
+        work = within_limits(chip, work, wanted, rest())
     before = _placed_value(chip, work, wanted)
     codes = work.placed.codes
     matrix = chip.matrix(codes, wanted.wavelengths_nm)
@@ -107,12 +115,12 @@ def solve(
     if joint and before == 0.0 < reached:
         from meshctl.plan.joint import well_inside
 
-        work, codes = well_inside(chip, work, codes, wanted, effort, best_effort)
+        work, codes = well_inside(chip, work, codes, wanted, rest(), best_effort)
         reached = wanted.value(chip.matrix(codes, wanted.wavelengths_nm))
     if aware and joint and reached > 1.05 * before + COARSE:
         from meshctl.plan.joint import finer_codes
 
-        work, codes = finer_codes(chip, work, codes, wanted, effort, least_power, best_effort)
+        work, codes = finer_codes(chip, work, codes, wanted, rest(), least_power, best_effort)
     plan = _plan(chip, work, codes, wanted, effort)
     if explain:
         from meshctl.plan.account import account

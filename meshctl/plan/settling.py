@@ -271,7 +271,7 @@ class Settling:
             placed = place(
                 chip,
                 solution.settings,
-                best_effort=self.best_effort or not self.wanted.plain,
+                best_effort=self.best_effort or not (self.wanted.plain or self.effort.refine is False),
                 moved_by=moved_by,
                 turning=self.wanted.at_centre(chip.net.wavelength_nm),
             )
