@@ -390,3 +390,11 @@ def test_time_allowed_covers_all_steps():
     assert plan.reason == "time"
     # fifty starts would take a minute; what is not refinement takes a second at most
     assert time.perf_counter() - began <= 10.0
+
+
+def test_unrefined_wishes_are_called_guesses(run, tmp_path):
+    write(lattice("rectangular", modes=2, built=1), tmp_path / "m")
+    (tmp_path / "t.toml").write_text("power = [[0.3, 0.6], [0.6, 0.3]]\n")
+    code, said, _ = run("solve", tmp_path / "m", tmp_path / "t.toml", "--no-refine")
+    assert code == 0
+    assert "reason        guess: The closed form of the nearest unitary matrix" in said
