@@ -32,6 +32,7 @@ from meshctl.plan.states import Difference
 from meshctl.plan.wanted import Wanted
 from meshctl.session import Session
 from meshctl.solver.switches import Switches, find_switches, settings_for
+from meshctl.units import db_array
 
 TOPICS = frozenset({"settings", "faults", "input", "plan"})
 ANGLE_MOST_RAD = 100.0  # a setting beyond is a slip of the finger
@@ -409,6 +410,21 @@ class Work:
         """
         return solve_matrix(self.mesh, self.session.target(words), best_effort=True, effort=effort)
 
+    def explain(self, effort: Effort) -> Plan:
+        """The plan in hand solved again with the account of what keeps it from being closer.
+
+        Raises
+        ------
+        Finding
+        """
+        from meshctl.solver.target import from_description
+
+        plan = self.state.plan
+        if plan is None or plan.is_routes:
+            raise WrongUsage("no plan for a matrix is in hand", remedy="solve or open one first")
+        wish = from_description(plan.target)
+        return solve_matrix(self.mesh, wish, best_effort=True, effort=effort, explain=True)
+
     def route(self, words: str, seconds: float = 10.0) -> Plan:
         """Volts and codes for routes; changes nothing, so any thread may.
 
@@ -432,6 +448,15 @@ class Work:
         Finding
         """
         self.take(self.session.open_plan(path))
+
+    def open_state(self, name: str) -> None:
+        """Take a named state in hand.
+
+        Raises
+        ------
+        Finding
+        """
+        self.take(self.session.open_state(name))
 
     def save_plan(self, path: str | Path) -> None:
         """Write the plan in hand.
@@ -491,6 +516,47 @@ class Work:
             raise drive
         return spectrum(self.chip, drive.codes, wavelengths_nm, pairs, self.response)
 
+    # ---- tables
+    def table(self, panel: str) -> tuple[np.ndarray | None, np.ndarray]:
+        """Values and levels in dB of a panel, [out, in]: predicted and target in dB, their difference in percent.
+
+        Values are None where the wish has no matrix.
+        """
+        power = np.abs(self.matrix) ** 2
+        if panel == "predicted":
+            return db_array(power), db_array(power)
+        target = self.target
+        if target is None:
+            return None, np.empty((0, 0))
+        wished = np.abs(target) ** 2
+        if panel == "target":
+            return db_array(wished), db_array(wished)
+        off = power - wished
+        return 100.0 * off, db_array(np.abs(off))
+
+    def actuator_columns(self, placed: bool = True) -> list[np.ndarray] | str:
+        """Name, wanted and given in rad, volts, code, room in V, mW and status of every actuator, f64[A] each.
+
+        Where the settings have no drive: why, in words; with `placed` False NaN for what is not known.
+        """
+        mesh, drive = self.mesh, self.drive
+        actuators, n = mesh.actuators, len(mesh.actuators)
+        setting, channel = actuators.setting, actuators.channel
+        stuck = ~np.isnan(mesh.as_built.stuck_rad[setting])
+        names, wanted = np.array(mesh.actuator_names, dtype=str), self.state.wanted[setting]
+        held = np.zeros(n, bool)
+        if isinstance(drive, Finding):
+            if placed:
+                return str(drive)
+            unknown = np.full(n, np.nan)
+            numbers = [unknown, unknown, np.zeros(n, np.int64), unknown, unknown]
+        else:
+            held[list(drive.held)] = True
+            given = (drive.actual[setting], drive.volts[channel], drive.codes[channel], drive.headroom_v[channel])
+            numbers = [*given, drive.power_mw]
+        status = np.select([actuators.dead, stuck, held], ["dead", "stuck", "at limit"], "")
+        return [names, wanted, *numbers, status]
+
     # ---- words
     def faulty_settings(self) -> np.ndarray:
         """Settings that are stuck or dead, of the mesh or assumed, bool[S]."""
@@ -498,8 +564,9 @@ class Work:
 
 
 def _wished(plan: Plan) -> np.ndarray | None:
-    real, imag = plan.target.get("real"), plan.target.get("imag")
-    return None if real is None or imag is None else np.array(real) + 1j * np.array(imag)
+    from meshctl.solver.target import from_description
+
+    return from_description(plan.target).matrix
 
 
 _SETTINGS, _FAULTS = frozenset({"settings", "plan", "faults"}), frozenset({"faults"})

@@ -22,7 +22,7 @@ LAYERS = (
     {"api", "cli", "screens"},
 )
 RANK = {room: rank for rank, rooms in enumerate(LAYERS) for room in rooms}
-ON_DEMAND = {("plan", "plots")}  # a plan draws itself in a notebook
+ON_DEMAND = {("plan", "plots"), ("cli", "screens")}  # a plan draws itself in a notebook; one command opens the screens
 ALLOWED = {
     "numba": {"optics", "drive", "solver"},
     "matplotlib": {"plots", "report"},

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import dataclasses
 import json
+import os
 import shutil
 import sys
 from argparse import Namespace
@@ -191,6 +192,23 @@ def tolerance(words: Namespace) -> int:
     from meshctl.cli import scatter
 
     return scatter.tolerance(words)
+
+
+def dashboard(words: Namespace) -> int:
+    kind = os.environ.get("TERM", "")
+    if not all(end.isatty() for end in (sys.stdin, sys.stdout, sys.stderr)) or kind in ("", "dumb"):
+        raise WrongUsage(
+            f"the dashboard needs a terminal that can move its cursor; this is {kind or 'none'}",
+            remedy="run it in one, or take 'meshctl show' and 'meshctl show --words' for text",
+        )
+    session = Session(words.mesh)
+    if words.plan:
+        session.open_plan(words.plan, stale_ok=words.stale_ok)
+    _remark(session.remarks)
+    from meshctl.screens.app import run
+
+    run(session)
+    return DONE
 
 
 def demo(words: Namespace) -> int:

@@ -214,11 +214,24 @@ def parser() -> argparse.ArgumentParser:
     far.add_argument("--scale", type=_positive, default=1.0, metavar="F", help="all of [spread] times F")
     far.add_argument("--spec", action="store_true", help="how far each cause may scatter for the wished yield")
     far.add_argument("--yield", dest="wish", default="95%", metavar="SHARE", help="the wished yield, default 95%%")
+    far.add_argument(
+        "--lattices", action="store_true", help="compare rectangles, triangles, spares and Benes with this spread"
+    )
     far.add_argument("--processes", type=_whole(1), default=1, metavar="N", help="of this machine, default 1")
     far.add_argument("--cluster", metavar="ADDRESS", help="a dask scheduler that shares the trials out")
     far.add_argument("-o", "--out", metavar="FOLDER", help="keep trials as they come; goes on where a run broke off")
     far.add_argument("--figures", metavar="FOLDER", help="histogram, yield against tolerance, sensitivity map")
     _stale(far)
+
+    board = verb(
+        "dashboard",
+        "the mesh, its states and its drive on a terminal",
+        "meshctl dashboard meshes/plover8 plan.json",
+        json=False,
+    )
+    board.add_argument("mesh", metavar="MESH")
+    board.add_argument("plan", metavar="PLAN", nargs="?", help="a plan file, or a state by name")
+    _stale(board)
 
     verb("demo", "the main job on a shipped mesh, with what it means", "meshctl demo")
     return top
