@@ -393,7 +393,7 @@ def test_time_allowed_covers_all_steps():
 
 
 def test_unrefined_wishes_are_called_guesses(run, tmp_path):
-    write(lattice("rectangular", modes=2, built=1), tmp_path / "m")
+    write(lattice("rectangular", modes=2), tmp_path / "m")
     (tmp_path / "t.toml").write_text("power = [[0.3, 0.6], [0.6, 0.3]]\n")
     code, said, _ = run("solve", tmp_path / "m", tmp_path / "t.toml", "--no-refine")
     assert code == 0

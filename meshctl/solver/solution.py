@@ -17,7 +17,6 @@ REASONS = {
     "fixed_parts": "The closed form is exact but for fixed parts, such as taps, that no setting undoes.",
     "out_of_range": "Some cells cannot be set as the closed form wants; the nearest they reach was used.",
     "guess": "The closed form of the nearest unitary matrix was taken; a refinement comes nearer to what was asked.",
-    "guess": "The closed form of the nearest unitary matrix was taken as it is; a refinement comes closer.",
     "no_output_phases": "The target fixes output phases, and the mesh has nothing to set them with.",
     "limits": "Some actuators were held at their limits.",
     "codes": "The source has too few bits to come closer.",
