@@ -239,6 +239,7 @@ def tolerance(
     folder: str | Path | None = None,
     processes: int = 1,
     cluster: str | None = None,
+    lattices: bool = False,
     stale_ok: bool = False,
 ) -> Tolerance:
     """How far dies that scatter as the mesh's spread says will be off, and what the next chip needs.
@@ -252,6 +253,7 @@ def tolerance(
     scale : of all of the spread
     spec, wish : also how far each cause may scatter for the wished yield
     folder : where trials are kept as they come; a run that was broken off there goes on
+    lattices : compare rectangles, triangles, spare columns and Benes lattices that scatter alike
     processes, cluster : who runs them; with several processes call this under `if __name__ == "__main__"`
 
     Returns
@@ -277,7 +279,9 @@ def tolerance(
     place = None if folder is None else Path(folder)
     required = (require,) if isinstance(require, str) else tuple(require)
     return answer(
-        mesh, plan, Question(trials, seed, policy, required, until, scale, spec, wish, place, processes, cluster)
+        mesh,
+        plan,
+        Question(trials, seed, policy, required, until, scale, spec, wish, place, processes, cluster, lattices),
     )
 
 

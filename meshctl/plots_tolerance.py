@@ -89,8 +89,9 @@ def scaling_figure(rows: Sequence[Compared], title: str = "error over size") -> 
     """Error over the number of modes, a line for each lattice: as set, and corrected where that is known."""
     figure = _figure()
     axes = figure.subplots()
-    for name in dict.fromkeys(row.lattice for row in rows):
-        mine = [row for row in rows if row.lattice == name and row.as_set is not None]
+    matrices = [row for row in rows if row.measure == "matrix_error"]
+    for name in dict.fromkeys(row.lattice for row in matrices):
+        mine = [row for row in matrices if row.lattice == name and row.as_set is not None]
         if not mine:
             continue
         modes = [row.modes for row in mine]
@@ -125,6 +126,8 @@ def tolerance_figures(made: Tolerance, folder: Path) -> list[Path]:
         figures["yield"] = yield_figure(scales, yields, wish, title)
     if made.budget is not None:
         figures["sensitivity"] = sensitivity_map(made)
+    if made.lattices:
+        figures["scaling"] = scaling_figure(made.lattices)
     paths = []
     for name, figure in figures.items():
         paths.append(folder / f"{name}.png")

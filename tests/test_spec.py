@@ -89,6 +89,19 @@ def test_lattices_compare_on_the_same_targets():
     assert corrected["rectangular+2"] > 0.2 * error["rectangular+2"]  # spare cells reach bar no nearer than they split
 
 
+def test_routes_on_benes_keep_to_themselves():
+    rows = compare_lattices(Spread(split_rad=0.02), shapes=("rectangular", "benes"), modes=(8,), targets=("routes:1",),
+                            trials=100)  # fmt: skip
+    # a path of k couplers errs by about k s^2: five stages of a Benes lattice against eight of a rectangle
+    assert rows[1].as_set < rows[0].as_set
+    assert rows[1].crosstalk_db < rows[0].crosstalk_db < -15.0
+
+
+def test_targets_to_compare_by_are_checked():
+    with pytest.raises(WrongUsage, match="haar:SEED or routes:SEED"):
+        compare_lattices(Spread(split_rad=0.02), targets=("dft",))
+
+
 def test_triangles_suffer_more_from_known_loss():
     # unequal paths cost triangles fidelity that rectangles keep (Clements et al. 2016)
     rows = compare_lattices(

@@ -101,6 +101,14 @@ def test_figures_are_drawn_into_a_folder(run, plan, tmp_path):
     assert min(sizes.values()) > 5000  # an empty figure is smaller
 
 
+def test_lattices_are_compared_on_demand(run, plan, tmp_path):
+    code, out, err = run("tolerance", PLOVER, plan, "--trials", 5, "--lattices", "--figures", tmp_path / "pictures")
+    assert code == 0, err
+    assert (tmp_path / "pictures" / "scaling.png").stat().st_size > 5000
+    for word in ("rectangular+2", "triangular", "benes", "no closed form", "routes", "crosstalk dB"):
+        assert word in out
+
+
 def test_scaling_is_drawn_for_every_lattice():
     from meshctl.plots_tolerance import scaling_figure
 

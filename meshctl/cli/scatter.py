@@ -8,6 +8,7 @@ from __future__ import annotations
 import json
 import sys
 from argparse import Namespace
+from collections.abc import Sequence
 from pathlib import Path
 
 from meshctl.cli.watch import Watch
@@ -16,6 +17,7 @@ from meshctl.mesh.spread import CAUSES
 from meshctl.session import Session
 from meshctl.tolerances.budget import Budget
 from meshctl.tolerances.chunks import finite
+from meshctl.tolerances.lattices import Compared
 from meshctl.tolerances.requirement import Yield
 from meshctl.tolerances.spec import Allowed, Specification
 from meshctl.tolerances.trials import Progress
@@ -29,7 +31,7 @@ def tolerance(words: Namespace) -> int:
     session.open_plan(words.plan, stale_ok=words.stale_ok)
     question = Question(
         words.trials, words.seed, words.policy, tuple(words.require), words.until, words.scale, words.spec,
-        words.wish, Path(words.out) if words.out else None, words.processes, words.cluster,
+        words.wish, Path(words.out) if words.out else None, words.processes, words.cluster, words.lattices,
     )  # fmt: skip
     with Watch("trials") as watch:
 
@@ -78,7 +80,21 @@ def tolerance_text(made: Tolerance) -> str:
             lines += [f"yield {_yield(y)} for {words}" for words, y in _yields(made)]
     if made.spec is not None:
         lines += ["", *_spec_lines(made.spec)]
+    if made.lattices:
+        lines += ["", *_lattice_lines(made.lattices)]
     return "\n".join(lines)
+
+
+def _lattice_lines(rows: Sequence[Compared]) -> list[str]:
+    head = f"{'lattice':<15}{'modes':>6}  {'target':<8}{'measure':<14}"
+    lines = [f"{head}{'budget':>12}{'as set':>12}{'corrected':>12}{'crosstalk dB':>14}"]
+    for row in rows:
+        start = f"{row.lattice:<15}{row.modes:>6}  {row.target:<8}{row.measure:<14}"
+        if row.reason:
+            lines.append(f"{start}  {row.reason[:70]}")
+        else:
+            lines.append(start + "".join(_cell(v) for v in (row.budget, row.as_set, row.corrected, row.crosstalk_db)))
+    return lines
 
 
 def _yields(made: Tolerance) -> list[tuple[str, Yield]]:

@@ -117,6 +117,8 @@ def task_of(
     """
     if policy not in POLICIES:
         raise WrongUsage(f"policy '{policy}' is not known", remedy=f"use one of: {', '.join(POLICIES)}")
+    if policy != "as-set" and plan.is_routes:
+        raise WrongUsage(f"policy {policy} solves for a matrix, and this plan is for routes", remedy="use as-set")
     if seed < 0:
         raise WrongUsage(f"seed is {seed}", remedy="allowed is 0 and above")
     given = mesh.spread if spread is None else spread

@@ -10,21 +10,24 @@ import io
 import json
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
 from meshctl.errors import OutOfReach, WrongUsage
 from meshctl.mesh.files import write_whole
 from meshctl.mesh.graph import Mesh
+from meshctl.mesh.spread import Spread
 from meshctl.plan.plan import Plan
 from meshctl.tolerances.budget import Budget, budget_of
+from meshctl.tolerances.lattices import Compared, compare_lattices
 from meshctl.tolerances.requirement import Requirement, requirement, until_width
 from meshctl.tolerances.spec import Specification, specification
 from meshctl.tolerances.trials import Found, Progress, run_trials, task_of
 
 ANSWER_FILE, TRIALS_FILE = "tolerance.json", "trials.csv"
 MOST_SCALE = 1e6
+COMPARED = 200  # most dies for each target of a comparison of lattices
 
 
 @dataclass(frozen=True)
@@ -42,6 +45,7 @@ class Question:
     folder: Path | None = None
     processes: int = 1
     cluster: str | None = None
+    lattices: bool = False
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,6 +58,7 @@ class Tolerance:
     budget: Budget | None  # None for routes, loops, and policies other than as-set
     found: Found
     spec: Specification | None
+    lattices: tuple[Compared, ...] = ()
     remarks: tuple[str, ...] = ()
     seconds: float = 0.0
 
@@ -69,6 +74,7 @@ class Tolerance:
             **self.found.entry(),
             "budget": None if self.budget is None else self.budget.entry(names),
             "specification": None if self.spec is None else self.spec.entry(),
+            "lattices": [row.entry() for row in self.lattices],
             "remarks": list(self.remarks),
             "seconds": self.seconds,
         }
@@ -144,10 +150,23 @@ def answer(mesh: Mesh, plan: Plan, question: Question, ears: Ears | None = None)
     if question.spec and found.stopped != "interrupted":
         plain = task_of(mesh, plan, seed=question.seed, policy=question.policy)
         spec = specification(plain, required, wish=wish, trials=question.trials, progress=ears.spec, cancel=ears.cancel)
-    made = Tolerance(mesh, plan, question, budget, found, spec, tuple(remarks), time.perf_counter() - started)
+    lattices: list[Compared] = []
+    if question.lattices and found.stopped != "interrupted":
+        lattices = compare_lattices(_everywhere(mesh), trials=min(question.trials, COMPARED), seed=question.seed)
+    made = Tolerance(
+        mesh, plan, question, budget, found, spec, tuple(lattices), tuple(remarks), time.perf_counter() - started
+    )
     if question.folder is not None:
         write_answer(made, question.folder)
     return made
+
+
+def _everywhere(mesh: Mesh) -> Spread:
+    """The mesh's spread without what other lattices lack: crosstalk, and shapes that lie over this die."""
+    spread = replace(mesh.spread, crosstalk_share=0.0, shapes={}, between=())
+    if not spread.active:
+        raise OutOfReach("only crosstalk scatters here, and the lattices compared have none", remedy="leave it out")
+    return spread
 
 
 def write_answer(made: Tolerance, folder: Path) -> None:
