@@ -98,7 +98,11 @@ def scaling_figure(rows: Sequence[Compared], title: str = "error over size") -> 
         (line,) = axes.plot(modes, [row.as_set or np.nan for row in mine], "o-", label=f"{name}, as set")
         known = [row.corrected if row.corrected and row.corrected > 1e-12 else np.nan for row in mine]
         axes.plot(modes, known, "s--", color=line.get_color(), label=f"{name}, corrected")
-    axes.set(xscale="log", yscale="log", xlabel="modes", ylabel="matrix error", title=title)
+    axes.set_xscale("log")
+    sizes = sorted({row.modes for row in matrices})
+    axes.set_xticks(sizes, [str(n) for n in sizes])
+    axes.set_xticks([], minor=True)
+    axes.set(yscale="log", xlabel="modes", ylabel="matrix error", title=title)
     axes.legend(fontsize="small")
     return figure
 
