@@ -49,7 +49,7 @@ def test_every_readme_command_does_as_shown(bench):
         done = run(command, bench)
         assert "Traceback" not in done.stderr
         if shown:  # only refusals are shown in console blocks
-            assert done.returncode == 3, command
+            assert done.returncode == 2, command
             assert done.stderr.strip() == shown
         else:
             assert done.returncode == 0, (command, done.stderr)

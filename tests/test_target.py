@@ -133,7 +133,7 @@ def test_unsound_matrices_are_all_refused(matrix, finding, says):
         ("haar:-1", WrongUsage),
         ("haar:x", WrongUsage),
         ("dft:3", WrongUsage),
-        ("permutation:1,2,3", WrongSize),
+        ("permutation:1,2,3", WrongUsage),
         ("permutation:1,2,3,3", WrongUsage),
         ("permutation:0,1,2,3", WrongUsage),
         ("permutation:a,b,c,d", WrongUsage),
@@ -147,7 +147,7 @@ def test_incomplete_target_words_are_refused(words, finding):
 
 
 def test_hadamard_needs_power_of_two():
-    with pytest.raises(WrongSize, match="use a power of two"):
+    with pytest.raises(WrongUsage, match="use a power of two"):
         target("hadamard", 6)
 
 

@@ -85,7 +85,8 @@ def throughput_per_input(matrix: np.ndarray) -> np.ndarray:
 
 def unitarity_defect(matrix: np.ndarray) -> float:
     """Largest entry of |T^H T - 1|; 0 for a matrix that neither loses nor makes light."""
-    gram = np.conj(matrix.T) @ matrix
+    with np.errstate(over="ignore", invalid="ignore"):  # numbers of 1e200 give infinity, which is refused
+        gram = np.conj(matrix.T) @ matrix
     return float(np.abs(gram - np.eye(len(gram))).max())
 
 

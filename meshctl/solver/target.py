@@ -99,7 +99,7 @@ def dft(modes: int) -> np.ndarray:
 def hadamard(modes: int) -> np.ndarray:
     """Sylvester's Hadamard matrix / sqrt(N); N must be a power of two."""
     if modes & (modes - 1):
-        raise WrongSize(f"a Hadamard matrix of {modes} modes is not known here", remedy="use a power of two")
+        raise WrongUsage(f"a Hadamard matrix of {modes} modes is not known here", remedy="use a power of two")
     h = np.ones((1, 1), complex)
     while len(h) < modes:
         h = np.block([[h, h], [h, -h]])
@@ -128,7 +128,7 @@ def permutation(modes: int, order: str) -> np.ndarray:
     except ValueError:
         raise WrongUsage(f"permutation:{order} is not a list of numbers", remedy="write permutation:3,1,2,4") from None
     if len(goes_to) != modes:
-        raise WrongSize(
+        raise WrongUsage(
             f"permutation:{order} names {len(goes_to)} outputs; the mesh has {modes}",
             remedy=f"name each output from 1 to {modes} once",
         )
@@ -146,7 +146,7 @@ TARGETS: dict[str, Callable[..., np.ndarray]] = {
     "haar": haar,
     "permutation": permutation,
 }
-WITH_ARGUMENT = ("haar", "permutation")
+WITH_ARGUMENT = {"haar": "haar:SEED, such as haar:7", "permutation": "permutation:3,1,2,4"}
 
 
 def _from_csv(path: Path) -> np.ndarray:
@@ -196,7 +196,7 @@ def _from_npy(path: Path) -> np.ndarray:
 
 def read_matrix(path: Path) -> np.ndarray:
     """The numbers of a .npy or .csv file, unchecked."""
-    return _from_npy(path) if path.suffix == ".npy" else _from_csv(path)
+    return _from_npy(path) if path.suffix.lower() == ".npy" else _from_csv(path)
 
 
 def check_free(free: str) -> None:
@@ -283,10 +283,11 @@ def read_target(
     [[0.0, 1.0], [1.0, 0.0]]
     """
     path = Path(words)
-    if path.suffix in (".npy", ".csv", ".toml"):
+    suffix = path.suffix.lower()
+    if suffix in (".npy", ".csv", ".toml"):
         if not path.is_file():
             raise MissingFile("there is no such file", where=words, remedy="name a file that exists, or a target")
-        if path.suffix == ".toml":
+        if suffix == ".toml":
             from meshctl.solver.wishes import read_wish
 
             return read_wish(path, shape, free, inputs, outputs)
@@ -297,13 +298,14 @@ def read_target(
         finding = unknown_name("target", words, known, "")
         raise WrongUsage(finding.what, remedy=finding.remedy)
     if shape[0] != shape[1]:
-        raise WrongSize(
+        raise WrongUsage(
             f"target '{words}' is square; the mesh has {shape[0]} outputs and {shape[1]} inputs",
             remedy="give a matrix of that size as a file",
         )
     if (name in WITH_ARGUMENT) != bool(colon):
-        form = f"{name}:.." if name in WITH_ARGUMENT else name
-        raise WrongUsage(f"target '{words}' is not complete", remedy=f"write {form}")
+        if colon:
+            raise WrongUsage(f"target '{name}' takes no ':{brief(argument)}'", remedy=f"write {name}")
+        raise WrongUsage(f"target '{words}' is not complete", remedy=f"write {WITH_ARGUMENT[name]}")
     matrix = TARGETS[name](shape[0], argument) if colon else TARGETS[name](shape[0])
     return make_target(matrix, shape, free, words)
 

@@ -31,6 +31,7 @@ import numpy as np
 from meshctl.errors import Finding, MissingRow, NotFinite, OutOfRange, UnsoundFile, WrongSize, WrongUsage
 from meshctl.mesh.files import read_text
 from meshctl.mesh.tables import unknown_name
+from meshctl.optics.grid import COUNT_MOST, HIGH_NM, LOW_NM
 from meshctl.solver.target import TARGETS, Target, check_free, checked_array, make_target, read_matrix
 
 KEYS = (
@@ -80,10 +81,12 @@ def make_wish(
     waves = None
     if wavelengths_nm is not None:
         waves = np.atleast_1d(np.asarray(wavelengths_nm, float))
-        bad = waves[~(np.isfinite(waves) & (waves > 0.0))]
+        bad = waves[~((waves >= LOW_NM) & (waves <= HIGH_NM))]
         if waves.ndim != 1 or not len(waves) or len(bad):
             raise OutOfRange(
-                f"wavelengths_nm holds {bad[0] if len(bad) else waves}", where=where, remedy="give lengths above 0 nm"
+                f"wavelengths_nm holds {f'{bad[0]:g} nm' if len(bad) else waves}",
+                where=where,
+                remedy=f"give a list of wavelengths from {LOW_NM:g} to {HIGH_NM:g} nm",
             )
 
     def stack(values: Any, name: str, holes: bool = False) -> Any:
@@ -96,6 +99,10 @@ def make_wish(
 
     matrix, power, weight = stack(matrix, "the target"), stack(power, "power"), stack(weight, "weight")
     least_db, most_db = stack(least_db, "least_db", True), stack(most_db, "most_db", True)
+    if least_db is not None and (least_db > 0.0).any():
+        raise OutOfRange(
+            f"least_db is {np.nanmax(least_db):g} dB, more light than enters", where=where, remedy="give 0 dB or less"
+        )
     if least_db is None and most_db is not None:
         least_db = np.full(most_db.shape, np.nan)
     if most_db is None and least_db is not None:
@@ -148,7 +155,7 @@ def _cells(value: Any, key: str, folder: Path, where: str) -> np.ndarray:
     """Rows of numbers, of cells as text, or the name of a file beside the target file."""
     if isinstance(value, str):
         path = folder / value
-        if path.suffix not in (".npy", ".csv") or not path.is_file():
+        if path.suffix.lower() not in (".npy", ".csv") or not path.is_file():
             raise _fail(where, key, value, "name a .npy or .csv file beside the target file, or write rows of cells")
         return read_matrix(path)
     rows = value if isinstance(value, list) else None
@@ -199,6 +206,8 @@ def _ports(value: Any, key: str, names: Sequence[str], where: str) -> list[int]:
         raise _fail(where, key, value, f'write a list of port names, such as ["{names[0]}"]')
     rows = {name: row for row, name in enumerate(names)}
     for name in value:
+        if not isinstance(name, str):
+            raise _fail(where, key, name, f'write the name of a port, such as "{names[0]}"')
         if name not in rows:
             raise unknown_name(f"{key}: port", str(name), names, where)
     if len(set(value)) != len(value):
@@ -211,8 +220,8 @@ def _wavelengths(value: Any, where: str) -> np.ndarray:
         if set(value) != {"from", "to", "count"}:
             raise _fail(where, "wavelengths_nm", value, "write {from = 1540.0, to = 1560.0, count = 5}")
         count = value["count"]
-        if isinstance(count, bool) or not isinstance(count, int) or count < 2:
-            raise _fail(where, "wavelengths_nm count", count, "write a whole number from 2")
+        if isinstance(count, bool) or not isinstance(count, int) or not 2 <= count <= COUNT_MOST:
+            raise _fail(where, "wavelengths_nm count", count, f"write a whole number from 2 to {COUNT_MOST}")
         ends = [_number(value[k], f"wavelengths_nm {k}", where) for k in ("from", "to")]
         return np.linspace(ends[0], ends[1], count)
     if not isinstance(value, list) or not value:
@@ -252,11 +261,14 @@ def _bands(
         )
         ends = _wavelengths(band["wavelengths_nm"], place)
         points = band.get("points", BAND_POINTS)
-        if isinstance(points, bool) or not isinstance(points, int) or points < 1:
-            raise _fail(place, "points", points, "write a whole number from 1")
+        if isinstance(points, bool) or not isinstance(points, int) or not 1 <= points <= COUNT_MOST:
+            raise _fail(place, "points", points, f"write a whole number from 1 to {COUNT_MOST}")
         waves = np.linspace(ends[0], ends[-1], points) if len(ends) == 2 else ends
         key = "least_db" if "least_db" in band else "most_db"
-        asked.append((waves, row, column, key, _number(band[key], key, place)))
+        value = _number(band[key], key, place)
+        if key == "least_db" and value > 0.0:
+            raise OutOfRange(f"least_db is {value:g} dB, more light than enters", where=place, remedy="write 0 or less")
+        asked.append((waves, row, column, key, value))
     waves = np.unique(np.concatenate([a[0] for a in asked]))
     limits = {key: np.full((len(waves), *shape), np.nan) for key in ("least_db", "most_db")}
     for own, row, column, key, value in asked:
@@ -293,6 +305,8 @@ def read_wish(
         raise UnsoundFile(f"not readable as TOML: {problem}", where=where, remedy="correct it there") from None
     try:
         return _wish(text, path, shape, free, inputs, outputs)
+    except WrongUsage as finding:  # what the file asks, not what stands on the command line
+        raise UnsoundFile(finding.what, where=finding.where or where, remedy=finding.remedy) from None
     except Finding as finding:
         finding.where = finding.where or where
         raise
