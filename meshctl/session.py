@@ -222,6 +222,7 @@ class Session:
 
     def write_elements(self, path: str | Path) -> int:
         """Write the parts in light order as CSV; returns the number of rows."""
+        require_suffix(path, ".csv")
         out = io.StringIO()
         writer = csv.writer(out, lineterminator="\n")
         writer.writerow(HEAD)
@@ -287,7 +288,7 @@ def demo_mesh_folder(name: str = DEMO_MESH) -> Path:
 
 def require_suffix(path: str | Path, *suffixes: str) -> None:
     """Refuse a file name that does not end as its content asks."""
-    if Path(path).suffix not in suffixes:
+    if Path(path).suffix.lower() not in suffixes:
         listed = " or ".join(suffixes)
         raise WrongUsage(f"'{path}' is no {listed} file", remedy=f"name a file that ends in {listed}")
 

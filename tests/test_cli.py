@@ -1,7 +1,11 @@
 """Every command in process: what goes to stdout, what to stderr, what is written, how it ends."""
 
 import csv
+import errno
 import json
+import os
+import subprocess
+import sys
 
 import numpy as np
 import pytest
@@ -285,3 +289,46 @@ def test_bug_is_reported_without_traceback(run, solved, monkeypatch, tmp_path):
     assert "a bug in meshctl itself (ZeroDivisionError: one over nothing)" in remarks
     assert "Traceback" not in remarks
     assert "Traceback" in next(tmp_path.glob("meshctl-bug-*.txt")).read_text()
+
+
+def meshctl_process(words, **how):
+    return subprocess.Popen([sys.executable, "-m", "meshctl", *words], text=True, stderr=subprocess.PIPE, **how)
+
+
+def test_closed_stdout_is_said():
+    done = subprocess.run(
+        ["sh", "-c", '"$0" -m meshctl check meshes/plover8 >&-', sys.executable], capture_output=True, text=True
+    )
+    assert (done.returncode, done.stderr.count("\n")) == (3, 1)
+    assert "stdout is closed" in done.stderr
+
+
+def test_terminal_without_lines_is_pointed_to_ascii():
+    for words, code in ((["show", "meshes/plover8"], 2), (["show", "meshes/plover8", "--ascii"], 0)):
+        made = {**os.environ, "PYTHONIOENCODING": "ascii"}
+        process = meshctl_process(words, stdout=subprocess.DEVNULL, env=made)
+        said = process.communicate()[1]
+        assert process.returncode == code
+        assert said.count("\n") == (1 if code else 0)
+        assert ("--ascii" in said) == bool(code)
+
+
+def test_stdout_without_room_is_said(run, monkeypatch):
+    def full(_):
+        raise OSError(errno.ENOSPC, "No space left on device")
+
+    from meshctl.cli import commands
+
+    monkeypatch.setattr(commands, "check", full)
+    monkeypatch.setattr("os.dup2", lambda *_: None)
+    code, _, remarks = run("check", "meshes/plover8")
+    assert (code, remarks.count("\n")) == (3, 1)
+    assert "stdout cannot be written: no space left on device" in remarks
+
+
+def test_interruption_before_the_command_runs(run, monkeypatch):
+    def interrupted():
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("meshctl.cli.words.parser", interrupted)
+    assert run("check", "m") == (130, "", "meshctl: interrupted\n")

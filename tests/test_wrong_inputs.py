@@ -10,6 +10,7 @@ import pytest
 from meshctl.mesh.meshfile import lattice, write
 
 TAP = '\n[[insert]]\nname = "t"\nkind = "tap"\nat = "in1"\nmonitor = "m"\ncross_power = 0.1\n'
+BAND = '[[band]]\nfrom = {}\nto = "out1"\nwavelengths_nm = {}\n{}\n'
 EXPLICIT = (
     'format = 1\nname = "two"\nwavelength_nm = 1550.0\ninputs = ["i1"]\noutputs = ["o1"]\n'
     'elements = [["x", "coupler"], ["y", "phase"]]\nlinks = ["i1 x.a1", "x.b1 y.a", "y.b o1"]\n'
@@ -189,6 +190,14 @@ TARGETS = [
     ("t.csv", "1,0\n0\n", ["t.csv", "row 2 has 1 cells where row 1 has 2"]),
     ("t.csv", '1,0\n0,"1\n1\n1\n', ["t.csv", "not readable as CSV", "mend"]),
     ("t.csv", b"\xff\xfe1", ["t.csv", "UTF-8"]),
+    ("t.csv", "1e200,0,0,0\n0,1,0,0\n0,0,1,0\n0,0,0,1", ["t.csv", "not unitary", "inf"]),
+    ("T.CSV", "1,0\n0,1\n", ["T.CSV", "2 x 2", "4 outputs"]),
+    ("t.toml", BAND.format('["in1"]', [1549, 1551], "least_db = -1"), ["t.toml band 1", "from is ['in1']", "port"]),
+    ("t.toml", BAND.format('"in1"', [-5, 1551], "least_db = -1"), ["t.toml", "-5 nm", "from 200 to 20000 nm"]),
+    ("t.toml", BAND.format('"in1"', [1549, 1551], "least_db = 1"), ["t.toml band 1", "least_db is 1 dB", "0 or less"]),
+    ("t.toml", 'matrix = "permutation:1,2"', ["t.toml", "names 2 outputs; the mesh has 4"]),
+    ("t.toml", 'matrix = "permutation:1,1,2,3"', ["t.toml", "no permutation"]),
+    ("t.toml", 'power = "p.txt"', ["t.toml", "power is 'p.txt'", ".csv"]),
     ("t.csv", "1" * 200_000, ["t.csv", "not readable as CSV", "mend"]),
 ]
 PLANS = [
@@ -228,10 +237,15 @@ PLANS = [
 ]
 WORDS = [
     ("solve m fourier", 2, ["target 'fourier' is not known", "use one of: identity, dft"]),
-    ("solve m haar", 2, ["'haar'", "write haar:.."]),
+    ("solve m haar", 2, ["'haar'", "write haar:SEED"]),
     ("solve m haar:x", 2, ["haar:x has no seed", "haar:SEED"]),
     ("solve m permutation:1,2,2,4", 2, ["permutation:1,2,2,4 is no permutation", "from 1 to 4 once"]),
-    ("solve m permutation:1,2", 3, ["names 2 outputs; the mesh has 4"]),
+    ("solve m identity:2", 2, ["'identity' takes no ':2'", "write identity"]),
+    ("solve m dft -o ", 2, ["an empty word is given"]),
+    ("solve m dft --save=", 2, ["an empty word is given"]),
+    ("predict m p.json --between in1:out1", 2, ["--between needs -o or --figure"]),
+    ("elements m p.json -o l.txt", 2, ["'l.txt' is no .csv file"]),
+    ("solve m permutation:1,2", 2, ["names 2 outputs; the mesh has 4"]),
     ("solve m none.npy", 3, ["none.npy", "no such file", "name a "]),
     ("solve nowhere dft", 3, ["nowhere", "no such folder", "meshctl new"]),
     ("solve m dft --free some", 2, ["--free", "'some'", "outputs"]),
@@ -255,6 +269,9 @@ WORDS = [
     ("predict m p.json --wavelengths 1540:1560:0", 2, ["1540:1560:0", "1 to 1000000"]),
     ("predict m m", 3, ["m: is a folder", "name a plan file"]),
     ("elements m p.json", 2, ["-o", "--help"]),
+    ("predict m p.json --wavelengths -5:1560:5", 2, ["--wavelengths -5:1560:5 is no range", "200 to 20000 nm"]),
+    ("predict m p.json --wavelengths itu:50:-99999:0", 2, ["channel -99999", "200 to 20000 nm"]),
+    ("predict m p.json --wavelengths itu:50:nan:0", 2, ["itu:50:nan:0 is no range"]),
     ("show m --input in1", 2, ["--input needs a plan"]),
     ("show m p.json --input in9", 2, ["port 'in9' is not known", "in1"]),
 ]

@@ -47,7 +47,9 @@ def new(words: Namespace) -> int:
     )
     if words.json:
         return _json({"mesh": words.folder, "hash": mesh.hash, "cells": mesh.net.n_cells})
-    print(f"{words.folder}: {mesh.shape}, {mesh.net.n_cells} cells, {mesh.net.n_settings} settings")
+    print(
+        f"{words.folder}: {mesh.shape}, {printing.counted(mesh.net.n_cells, 'cell')}, {printing.counted(mesh.net.n_settings, 'setting')}"
+    )
     return DONE
 
 
@@ -137,6 +139,8 @@ def predict(words: Namespace) -> int:
             require_suffix(path, *suffixes)
     if wavelengths is None and (words.feature or words.figure):
         raise WrongUsage("--feature and --figure need --wavelengths", remedy="give a range, such as 1540:1560:2001")
+    if words.between and not (words.out or words.figure):
+        raise WrongUsage("--between needs -o or --figure", remedy="name a file to write, or leave it out")
     pairs = [session.port_pair(word, "--between") for word in words.between] or None
     marked, kind = printing.marked(words.feature)
     pair = session.port_pair(marked, "--feature") if marked else None
@@ -169,7 +173,7 @@ def elements(words: Namespace) -> int:
     _remark(session.remarks)
     if words.json:
         return _json({"file": words.out, "rows": count})
-    print(f"{words.out}: {count} parts in light order")
+    print(f"{words.out}: {printing.counted(count, 'part')} in light order")
     return DONE
 
 

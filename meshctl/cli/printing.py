@@ -36,6 +36,11 @@ def finite(entry: Any) -> Any:
     return None if isinstance(entry, float) and not math.isfinite(entry) else entry
 
 
+def counted(count: int, thing: str) -> str:
+    """A count with its noun: 1 cell, 2 cells."""
+    return f"{count} {thing}" if count == 1 else f"{count} {thing}s"
+
+
 def require_port(name: str, ports: tuple[str, ...]) -> None:
     """Refuse a port that is not among the mesh's."""
     if name not in ports:
