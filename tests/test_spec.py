@@ -64,6 +64,19 @@ def test_yields_fall_as_scatter_grows():
     assert (shares[0], shares[-1]) == (1.0, 0.0)
 
 
+def test_two_processes_allow_the_same():
+    task = task_of(MESH, PLAN, spread=Spread(split_rad=0.01, phase_rad=0.02))
+    one, two = (specification(task, WISH, trials=100, processes=n).entry() for n in (1, 2))
+    assert one == two
+
+
+def test_cancelled_specifications_end_as_interrupted():
+    task = task_of(MESH, PLAN, spread=Spread(split_rad=0.01))
+    for processes in (1, 2):
+        with pytest.raises(KeyboardInterrupt):
+            specification(task, WISH, trials=100, processes=processes, cancel=lambda: True)
+
+
 @pytest.mark.parametrize(
     ("asked", "finding", "said"),
     [

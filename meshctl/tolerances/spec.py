@@ -19,6 +19,7 @@ from meshctl.mesh.spread import CAUSES, Shape, Spread
 from meshctl.tolerances.chunks import Task
 from meshctl.tolerances.requirement import Requirement, Yield, yield_of
 from meshctl.tolerances.trials import check_nominal
+from meshctl.tolerances.workers import shared_out
 
 WITHIN = 1.01  # ratio of the scales between which the largest allowed one is known
 MOST, LEAST = 2.0**10, 2.0**-20  # scales beyond which nothing is looked for
@@ -144,6 +145,21 @@ class _Bracket:
         return low, found, "found"
 
 
+@dataclass(frozen=True, eq=False)
+class _Search:
+    """What one process looks for."""
+
+    name: str
+    task: Task
+    requirements: tuple[Requirement, ...]
+    wish: float
+    trials: int
+
+
+def _largest(search: _Search, cancel: Callable[[], bool]) -> tuple[float, int | None, str]:
+    return _Bracket(search.task, search.requirements, search.wish, search.trials, cancel).largest()
+
+
 def _code_spread(task: Task) -> tuple[Spread, float] | None:
     """Scatter as codes of the plan's own resolution give it, and their bits; None where channels differ.
 
@@ -166,6 +182,7 @@ def specification(
     *,
     wish: float = 0.95,
     trials: int = 1000,
+    processes: int = 1,
     progress: Callable[[str], None] | None = None,
     cancel: Callable[[], bool] | None = None,
 ) -> Specification:
@@ -177,6 +194,7 @@ def specification(
     requirements : what a good die meets
     wish : share of good dies
     trials : dies for each scale that is tried; some fifteen scales for each cause
+    processes : that share the causes out; the result is the same
 
     Raises
     ------
@@ -201,13 +219,28 @@ def specification(
     if codes is not None:
         jobs.append((CODES, *codes))
     jobs.append((TOGETHER, task.spread, None))
+    searches = [
+        _Search(
+            name,
+            Task(
+                task.mesh, task.plan, replace(s, between=s.between if name == TOGETHER else ()), task.seed, task.policy
+            ),
+            tuple(requirements),
+            wish,
+            trials,
+        )
+        for name, s, _ in jobs
+    ]
+    if processes > 1:
+        found = shared_out(_largest, searches, processes, cancel)
+    else:
+        found = []
+        for search in searches:
+            if progress is not None:
+                progress(search.name)
+            found.append(_largest(search, cancel or (lambda: False)))
     allowed = {}
-    for name, spread, bits in jobs:
-        if progress is not None:
-            progress(name)
-        one = Task(task.mesh, task.plan, replace(spread, between=spread.between if name == TOGETHER else ()), task.seed)
-        one.policy = task.policy
-        scale, met, limit = _Bracket(one, requirements, wish, trials, cancel).largest()
+    for (name, spread, bits), (scale, met, limit) in zip(jobs, found, strict=True):
         if bits is not None:
             value: float | None = float(max(1.0, math.ceil(bits - math.log2(scale)))) if scale > 0.0 else None
         else:

@@ -149,7 +149,10 @@ def answer(mesh: Mesh, plan: Plan, question: Question, ears: Ears | None = None)
     spec = None
     if question.spec and found.stopped != "interrupted":
         plain = task_of(mesh, plan, seed=question.seed, policy=question.policy)
-        spec = specification(plain, required, wish=wish, trials=question.trials, progress=ears.spec, cancel=ears.cancel)
+        spec = specification(
+            plain, required, wish=wish, trials=question.trials, processes=question.processes,
+            progress=ears.spec, cancel=ears.cancel,
+        )  # fmt: skip
     lattices: list[Compared] = []
     if question.lattices and found.stopped != "interrupted":
         lattices = compare_lattices(_everywhere(mesh), trials=min(question.trials, COMPARED), seed=question.seed)

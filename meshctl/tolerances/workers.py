@@ -1,6 +1,6 @@
 """Chunks of trials shared out: one process, several, or the workers of a cluster; always handed back in order.
 
-Public: results.
+Public: results, shared_out.
 """
 
 from __future__ import annotations
@@ -26,7 +26,7 @@ _task: Task | None = None
 _stop: Any = None
 
 
-def _start(task: Task, stop: Any) -> None:
+def _start(task: Task | None, stop: Any) -> None:
     """First thing in a worker: what is to be done; Ctrl-C is for the parent to hear."""
     global _task, _stop
     signal.signal(signal.SIGINT, signal.SIG_IGN)
@@ -88,6 +88,43 @@ def results(
             yield found
     else:
         yield from _by_processes(task, pieces, kept, processes, stopped)
+
+
+def _job(function: Callable[[Any, Cancel], Any], job: Any) -> Any:
+    return function(job, lambda: bool(_stop.value))
+
+
+def shared_out(
+    function: Callable[[Any, Cancel], Any], jobs: list[Any], processes: int, cancel: Cancel | None
+) -> list[Any]:
+    """`function(job, cancel)` of every job, in order, by several processes.
+
+    Raises
+    ------
+    KeyboardInterrupt
+        Where `cancel` says so.
+    OutOfReach
+        Where a process dies: its job cannot be told from the others that were on their way.
+    """
+    from concurrent.futures import ProcessPoolExecutor, wait
+    from concurrent.futures.process import BrokenProcessPool
+    from multiprocessing import get_context
+
+    context = get_context("spawn")
+    stop = context.RawValue("b", 0)
+    with _one_thread(), ProcessPoolExecutor(processes, context, _start, (None, stop)) as executor:
+        futures = [executor.submit(_job, function, job) for job in jobs]
+        while wait(futures, timeout=0.2).not_done:
+            if cancel is not None and cancel():
+                stop.value = 1
+                executor.shutdown(wait=True, cancel_futures=True)
+                raise KeyboardInterrupt
+        try:
+            return [future.result() for future in futures]
+        except BrokenProcessPool:
+            raise OutOfReach(
+                "a worker process died", remedy="look at the memory of the machine, or use fewer --processes"
+            ) from None
 
 
 def _by_processes(task: Task, pieces: list[Piece], kept: Kept, processes: int, stopped: Cancel) -> Iterator[np.ndarray]:
