@@ -47,9 +47,8 @@ def new(words: Namespace) -> int:
     )
     if words.json:
         return _json({"mesh": words.folder, "hash": mesh.hash, "cells": mesh.net.n_cells})
-    print(
-        f"{words.folder}: {mesh.shape}, {printing.counted(mesh.net.n_cells, 'cell')}, {printing.counted(mesh.net.n_settings, 'setting')}"
-    )
+    cells, settings = printing.counted(mesh.net.n_cells, "cell"), printing.counted(mesh.net.n_settings, "setting")
+    print(f"{words.folder}: {mesh.shape}, {cells}, {settings}")
     return DONE
 
 
