@@ -319,6 +319,10 @@ class Work:
         """Name of the chosen input."""
         return self.session.mesh.net.inputs[self.state.input_row]
 
+    def strongest_output(self) -> int:
+        """Position of the output that most of the chosen input's light comes out of."""
+        return int(np.argmax(np.abs(self.matrix[:, self.state.input_row])))
+
     # ---- changing
     def settings_of_cell(self, cell: int) -> list[int]:
         """Settings that move a cell."""
@@ -503,18 +507,18 @@ class Work:
         finally:
             session.plan = held
 
-    def spectrum(self, wavelengths_nm: np.ndarray, pairs: list[tuple[str, str]]) -> Spectrum:
-        """Fields between port pairs over wavelength as the codes in hand give them.
+    def spectrum_task(self, wavelengths_nm: np.ndarray, pair: tuple[str, str]) -> Callable[[], Spectrum]:
+        """What will find the field of a port pair over wavelength as the codes in hand are now, on any thread.
 
         Raises
         ------
         Finding
             Where there are no codes.
         """
-        drive = self.drive
+        drive, mesh = self.drive, self.mesh
         if isinstance(drive, Finding):
             raise drive
-        return spectrum(self.chip, drive.codes, wavelengths_nm, pairs, self.response)
+        return lambda: spectrum(Chip(mesh), drive.codes, wavelengths_nm, [pair])
 
     # ---- tables
     def table(self, panel: str) -> tuple[np.ndarray | None, np.ndarray]:

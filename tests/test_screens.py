@@ -14,7 +14,9 @@ from meshctl.screens.actions import ACTIONS, SCREENS, actions_of
 from meshctl.screens.app import dashboard
 from meshctl.screens.base import Ask, Base, Tell
 from meshctl.screens.canvas import MeshCanvas
+from meshctl.screens.curve import Curve
 from meshctl.screens.matrix import MatrixView
+from meshctl.screens.spectrum import POINTS
 from meshctl.screens.table import ArrayTable
 from meshctl.session import Session, demo_mesh_folder
 
@@ -78,6 +80,7 @@ def test_all_screens_open_in_small_windows(mesh):
             assert header.startswith(mesh)
             assert header.endswith("no bench")
             assert len(header) <= SMALL[0]
+            assert str(app.screen.query_one(".keys").content).rstrip().endswith("? help")
 
     driven(demo_mesh_folder(mesh), steps)
 
@@ -359,6 +362,61 @@ def test_states_are_stepped_through_by_key():
     driven(demo_mesh_folder("dunlin"), steps)
 
 
+def test_spectrum_at_centre_is_the_matrix():
+    async def steps(app, pilot):
+        app.work.toggle_cell(5)
+        await pilot.press("5")
+        await _found(app, pilot)
+        first = app.screen.pair
+        assert app.screen.found.power[POINTS // 2, 0] == pytest.approx(_power(app.work, first), rel=1e-9)
+        await pilot.press("down", "minus", "right_square_bracket")
+        await _found(app, pilot)
+        assert app.screen.pair[0] != first[0]
+        assert app.screen.pair[1] != first[1]
+        assert app.screen.found.power[POINTS // 2, 0] == pytest.approx(_power(app.work, app.screen.pair), rel=1e-9)
+        assert np.ptp(app.screen.found.wavelengths_nm) == pytest.approx(20.0)
+        assert "highest" in str(app.screen.query_one(".words").content)
+
+    def _power(work, pair):
+        net = work.mesh.net
+        return abs(work.matrix[net.outputs.index(pair[1]), net.inputs.index(pair[0])]) ** 2
+
+    async def _found(app, pilot):
+        stop = time.monotonic() + 20.0
+        await pilot.pause()
+        while app.screen.found is None:
+            assert time.monotonic() < stop
+            await pilot.pause(0.02)
+
+    driven(demo_mesh_folder("curlew"), steps)
+
+
+def test_curves_put_dots_where_points_lie():
+    curve = Curve()
+    curve.y = np.array([0.0, -40.0, -20.0, -20.0])
+    page = curve._dots(2, 10, 0.0, -40.0)
+    assert page[0, 0] & 0x01  # the first point is the highest dot of the first column
+    assert page[9, 0] & 0x80  # the second is the lowest of the next
+    assert not page[9, 1] & 0x80  # the last two lie half way up
+    assert page[5, 1] & 0x08
+    assert (page[:, 0] > 0).all()  # and they are joined
+
+
+def test_routes_are_wished_and_found_by_keys():
+    async def steps(app, pilot):
+        await pilot.press("6", "down", "down", "enter", "right", "enter", "g")
+        await rested(app, pilot)
+        assert app.screen.wished == ["in1:out3", "in2:out3"]
+        assert "cannot go together" in str(app.screen.query_one(".words").content)
+        assert app.work.state.plan is None
+        await pilot.press("backspace", "g")
+        await rested(app, pilot)
+        assert [(r["input"], r["output"]) for r in app.work.state.plan.routes] == [("in1", "out3")]
+        assert app.screen.query_one(ArrayTable).data[0].tolist() == ["in1:out3"]
+
+    driven(demo_mesh_folder("plover8"), steps)
+
+
 def test_tiny_windows_say_what_they_need():
     async def steps(app, pilot):
         assert "needs 60 by 16" in str(app.screen.query_one(".small").content)
@@ -401,7 +459,7 @@ def test_random_keys_and_clicks_raise_nothing(mesh, screen):
     async def steps(app, pilot):
         rng = np.random.default_rng(100 + screen)
         await pilot.press(str(screen + 1))
-        for _ in range(25):
+        for _ in range(20):
             if rng.random() < 0.2:
                 await pilot.click(offset=(int(rng.integers(80)), int(rng.integers(24))))
             else:

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 from textual.binding import Binding
 
-SCREENS = ("mesh", "matrix", "drive", "states")
+SCREENS = ("mesh", "matrix", "drive", "states", "spectrum", "routes")
 
 
 @dataclass(frozen=True)
@@ -69,6 +69,17 @@ ACTIONS = (
     Action("d", "d", "difference", "what changes from the plan in hand to it", "states", "difference"),
     Action("n", "n", "step(1)", "take the next state", "states", "next"),
     Action("p", "p", "step(-1)", "take the state before", "states"),
+    Action("down", "down", "output(1)", "the next output", "spectrum", "output"),
+    Action("up", "up", "output(-1)", "the output before", "spectrum"),
+    Action("minus", "-", "wider(1)", "wider", "spectrum", "wider"),
+    Action("plus,equals_sign", "+", "wider(-1)", "narrower", "spectrum", "narrower"),
+    Action("left", "left", "choose(-1, 0)", "the input before", "routes"),
+    Action("right", "right", "choose(1, 0)", "the next input", "routes", "input"),
+    Action("up", "up", "choose(0, -1)", "the output before", "routes"),
+    Action("down", "down", "choose(0, 1)", "the next output", "routes", "output"),
+    Action("enter", "enter", "add", "add this route to the wishes", "routes", "add"),
+    Action("backspace", "backspace", "drop", "take the last wish away", "routes"),
+    Action("g", "g", "find", "find the wished routes", "routes", "find"),
 )
 
 

@@ -25,6 +25,8 @@ from meshctl.screens.base import Ask, Base, Tell
 from meshctl.screens.drive import DriveScreen
 from meshctl.screens.matrix import MatrixScreen
 from meshctl.screens.mesh import MeshScreen
+from meshctl.screens.routes import RoutesScreen
+from meshctl.screens.spectrum import SpectrumScreen
 from meshctl.screens.states import StatesScreen
 from meshctl.screens.tints import GROUND, LIGHT, TINTS, Looks
 from meshctl.session import Session
@@ -78,6 +80,8 @@ class Dashboard(App[None]):
         "matrix": MatrixScreen,
         "drive": DriveScreen,
         "states": StatesScreen,
+        "spectrum": SpectrumScreen,
+        "routes": RoutesScreen,
     }
     DEFAULT_MODE = "mesh"
     BINDINGS: ClassVar[list[BindingType]] = [*bindings_of("")]
@@ -91,7 +95,10 @@ class Dashboard(App[None]):
     .window {{ background: {_hex(GROUND)}; border: round {_hex(TINTS["bar"])}; }}
     """
     CSS = """
-    .header, .words, .keys, #title { height: 1; width: 100%; }
+    .header, .keys, #title { height: 1; width: 100%; }
+    .words { height: auto; min-height: 1; max-height: 3; width: 100%; }
+    #wished { height: auto; max-height: 3; }
+    Curve { height: 1fr; width: 1fr; }
     .body { height: 1fr; }
     .small { display: none; }
     .tiny .small { display: block; height: 1fr; }
@@ -204,6 +211,10 @@ class Dashboard(App[None]):
 
         threading.Thread(target=run, daemon=True, name=what).start()
 
+    def start_route(self, words: str) -> None:
+        """Find routes on a thread; the search itself ends after its seconds."""
+        self.start(f"routing {words}", lambda _: self.work.route(words))
+
     def on_dashboard_progressed(self, event: Progressed) -> None:
         """Show how far it is."""
         if event.job is self._job:
@@ -227,6 +238,7 @@ class Dashboard(App[None]):
     # ---- keys
     def action_go(self, name: str) -> None:
         if self.current_mode != name and not isinstance(self.screen, Ask | Tell):
+            self.remark = ""
             self.switch_mode(name)
 
     def action_help(self) -> None:
@@ -252,11 +264,8 @@ class Dashboard(App[None]):
         self.start("finding what keeps it from being closer", self.work.explain)
 
     def action_route(self) -> None:
-        def begin(words: str) -> None:
-            self.start(f"routing {words}", lambda _: self.work.route(words))
-
         net = self.work.session.mesh.net
-        self.ask(f"routes IN:OUT, a space between; such as {net.inputs[0]}:{net.outputs[-1]}", begin)
+        self.ask(f"routes IN:OUT, a space between; such as {net.inputs[0]}:{net.outputs[-1]}", self.start_route)
 
     def action_cancel(self) -> None:
         if self._job is None:

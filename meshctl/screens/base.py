@@ -89,14 +89,18 @@ class Base(Screen[None]):
         self.query_one(".keys", Static).update(self._keys())
 
     def _keys(self) -> Text:
+        """As many keys as there is room for; the one for help always."""
         shown = [a for a in (*actions_of(self.WHERE), *actions_of("")) if a.brief]
-        line, room = Text(), self.app.size.width - 1
+        shown.sort(key=lambda action: action.name != "help")
+        room, kept = self.app.size.width - 1, []
         for action in shown:
-            part = f" {action.shown} {action.brief} "
-            if len(line) + len(part) > room and action.name != "help":
-                continue
+            wide = len(f" {action.shown} {action.brief} ")
+            if wide <= room:
+                room -= wide
+                kept.append(action)
+        line = Text()
+        for action in (*kept[1:], *kept[:1]):
             line.append(f" {action.shown}", "bold").append(f" {action.brief} ")
-        line.truncate(max(room, 1))
         return line
 
     def changed(self, topics: frozenset[str]) -> None:  # noqa: ARG002

@@ -57,10 +57,7 @@ class MatrixView(ScrollView, can_focus=True):
             return Strip([Segment(text[:wide].ljust(wide), plain)], wide)
         room = NARROW if self.compact else WIDE
         if y == 0:
-            names = [
-                (n if not self.compact else n[-1]).rjust(room)[-room:] if room > NARROW or k % 2 == 0 else "  "
-                for k, n in enumerate(self.inputs)
-            ]
+            names = [(n if not self.compact else _short(n)).rjust(room)[-room:] for n in self.inputs]
             line = Strip([Segment(" " * NAME + "".join(names), plain)])
         else:
             segments = [Segment(self.outputs[row][:NAME].ljust(NAME), plain)]
@@ -74,6 +71,10 @@ class MatrixView(ScrollView, can_focus=True):
         if self.compact:
             return 2 * SHADES[sum(level >= least for least in LEAST_DB)]
         return (f"{value:.1f}" if abs(value) < 999.0 else "dark").rjust(WIDE)
+
+
+def _short(name: str) -> str:
+    return name[-2:] if name[-2:].isdigit() else name[-1:]
 
 
 class MatrixScreen(Base):
