@@ -202,9 +202,9 @@ def test_missing_required_parameters_are_breaches():
     p = {"r_ohm": np.array([600.0, NAN])}
     found = {(b.row, b.param.name, b.allowed) for b in check_params(law, p)}
     assert found == {
-        (0, "p2pi_mw", "above 0 mW"),
-        (1, "p2pi_mw", "above 0 mW"),
-        (1, "r_ohm", "above 0 ohm"),
+        (0, "p2pi_mw", "1e-06 to 1e+06 mW"),
+        (1, "p2pi_mw", "1e-06 to 1e+06 mW"),
+        (1, "r_ohm", "0.001 to 1e+09 ohm"),
     }
     with pytest.raises(MissingRow, match=r"needs p2pi_mw"):
         law.volts([1.0, 1.0], p)

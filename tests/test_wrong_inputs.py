@@ -93,6 +93,17 @@ def ends_with_one_line(run, place, words, exit_code, *says):
 
 # what is spoilt, the command, exit code, and what the line must name: file or key, value, remedy
 MESH_FILES = [
+    (lambda p: p.edit('name = "', 'name = ""\n#'), ["'name'", "the value is ''", "one character or more"]),
+    (lambda p: p.edit('name = "', "name = 5\n#"), ["'name'", "the value is 5", "a text, such as"]),
+    (lambda p: p.edit("pitch_um = [400.0, 127.0]", "pitch_um = 400.0"), ["pitch_um'", "400.0", "[400.0, 127.0]"]),
+    (lambda p: p.edit('name = "', "links = ''\nname = \""), ["'links'", "the value is ''", "allowed is a list, such"]),
+    (lambda p: p.edit("modes = 4", 'modes = "4"'), ["'lattice.modes'", "'4' stands where a whole number", "2 to 4096"]),
+    (lambda p: p.edit("modes = 4", 'modes = 4\nbalanced = "yes"'), ["balanced'", "'yes'", "true or false"]),
+    (lambda p: p.edit("bits = 16", "bits = 8.5"), ["'channel.bits'", "8.5 stands where a whole number", "1 to 32"]),
+    (lambda p: p.edit("max_v = 10.0", 'max_v = "10"'), ["'channel.max_v'", "'10' stands where a number"]),
+    (lambda p: p.edit('name = "', 'name = "\\u001b[31m'), ["mesh.toml", "control codes", "leave them out"]),
+    (lambda p: p.edit("p2pi_mw = 24.0", "p2pi_mw = 1e-300"), ["p2pi_mw'", "1e-300", "1e-06 to 1e+06 mW"]),
+    (lambda p: p.edit("p2pi_mw = 24.0", "p2pi_mw = 24.0\noffset_rad = 1e16"), ["offset_rad'", "-1e+06 to 1e+06 rad"]),
     (lambda p: p.toml.write_text(p.toml.read_text()[:300]), ["mesh.toml", "line", "mend"]),
     (lambda p: p.toml.write_bytes(b"\xff\xfe" + p.toml.read_bytes()), ["mesh.toml", "UTF-8", "save it as UTF-8"]),
     (lambda p: p.toml.unlink(), ["m: no mesh.toml", "name a mesh folder"]),
@@ -102,7 +113,7 @@ MESH_FILES = [
     (lambda p: p.edit("[spread]", "[spred]"), ["'spred'", "did you mean 'spread'"]),
     (lambda p: p.edit("modes = 4", "modes = 1"), ["'lattice.modes'", "1 is out of range", "allowed is 2 to 4096"]),
     (lambda p: p.edit("modes = 4", "modes = 4.5"), ["'lattice.modes'", "4.5"]),
-    (lambda p: p.edit("modes = 4", "modes = true"), ["'lattice.modes'", "true stands where a number must"]),
+    (lambda p: p.edit("modes = 4", "modes = true"), ["'lattice.modes'", "true stands where a whole number must"]),
     (lambda p: p.edit("modes = 4\n", ""), ["'lattice'", "needs 'modes'"]),
     (lambda p: p.edit('"rectangular"', '"round"'), ["'lattice'", "'round' is not known", "rectangular"]),
     (lambda p: p.edit('cell = "mzi"', 'cell = "ring"'), ["'lattice.cell'", "'ring'", "'mzi'"]),
@@ -118,13 +129,17 @@ MESH_FILES = [
     (lambda p: p.edit("max_v = 10.0", 'max_v = 10.0\nground = "G9"'), ["ground 'G9' is not known"]),
     (lambda p: p.edit('law = "heater"', 'law = "heeter"'), ["'actuator.phase.law'", "did you mean 'heater'"]),
     (lambda p: p.edit('law = "heater"', 'law = "gap"'), ["'actuator.phase.law'", "moves a coupler, not a phase"]),
-    (lambda p: p.edit("p2pi_mw = 24.0", "p2pi_mw = -24.0"), ["'actuator.phase.p2pi_mw'", "-24", "above 0 mW"]),
-    (lambda p: p.edit("p2pi_mw = 24.0\n", ""), ["p2pi_mw is missing", "above 0 mW"]),
+    (lambda p: p.edit("p2pi_mw = 24.0", "p2pi_mw = -24.0"), ["'actuator.phase.p2pi_mw'", "-24", "1e-06 to 1e+06 mW"]),
+    (lambda p: p.edit("p2pi_mw = 24.0\n", ""), ["p2pi_mw is missing", "1e-06 to 1e+06 mW"]),
     (lambda p: p.edit("p2pi_mw", "p2pi_w"), ["'actuator.phase.p2pi_w'", "did you mean 'p2pi_mw'"]),
     (lambda p: p.edit("[spread]", TAP.replace("in1", "in9") + "[spread]"), ["insert", "place 'in9' is not known"]),
     (lambda p: p.table("element", ["element"]), ["table 'element.csv' is not known", "elements.csv"]),
 ]
 TABLES = [
+    ("elements", [["element", "loss_db"], ["c1_1.split1", "1_0"]], ["line 2", "'1_0', which is no number"]),
+    ("elements", [["element", "error_rad"], ["c1_1.split1", "1e16"]], ["line 2", "1e16", "-1e+06 to 1e+06 rad"]),
+    ("elements", [["element"], ["c1\x1b[31m"]], ["line 2", "control codes", "leave them out"]),
+    ("actuators", [["actuator", "r_ohm"], ["c1_1.inner", "1e-300"]], ["line 2", "0.001 to 1e+09 ohm"]),
     ("elements", [["element", "error_rad"], ["c1_1.split1", "nan"]], ["elements.csv line 2", "error_rad is nan"]),
     ("elements", [["element", "error_rad"], ["c1_1.split1", "0,1"]], ["elements.csv line 2", "'0,1'", "no number"]),
     ("elements", [["element", "loss_db"], ["c1_1.split1", -1]], ["elements.csv line 2", "loss_db is -1", "0 to 1000"]),
@@ -140,7 +155,11 @@ TABLES = [
     ("actuators", [["actuator", "law"], ["c1_1.inner", "table"]], ["tables.csv", "'c1_1.inner'", "no rows"]),
     ("actuators", [["actuator", "law"], ["c1_1.inner", "gap"]], ["line 2", "moves a coupler; 'c1_1.inner' is a phase"]),
     ("actuators", [["actuator", "gap_nm"], ["c1_1.inner", 5]], ["line 2", "parameter of law 'heater' 'gap_nm'"]),
-    ("actuators", [["actuator", "r_ohm"], ["c1_1.inner", 0]], ["line 2", "'c1_1.inner': r_ohm is 0 ohm", "above 0"]),
+    (
+        "actuators",
+        [["actuator", "r_ohm"], ["c1_1.inner", 0]],
+        ["line 2", "'c1_1.inner': r_ohm is 0 ohm", "0.001 to 1e+09 ohm"],
+    ),
     ("actuators", [["actuator", "dead"], ["c1_1.inner", "yes"]], ["line 2", "dead is 'yes'", "write 0 or 1"]),
     ("actuators", [["actuator", "element"], ["out1.phase", "c1_1.inner"]], ["two actuators", "'out1.phase'"]),
     ("channels", [["channel", "bits"], ["k7", 8]], ["channels.csv line 2", "no actuator sits on channel 'k7'"]),
@@ -166,6 +185,8 @@ TABLES = [
     ),
 ]
 NETS = [
+    ('"i1"', '"i:1"', ["'inputs'", "port 'i:1' is no port name", "use none of . : = , @"]),
+    ('"o1"', '"o=1"', ["'outputs'", "port 'o=1' is no port name"]),
     ('"x.b1 y.a"', '"x.b1 y.a", "x.b2 y.a"', ["'links.3'", "'x.b2 y.a' uses a port", "link it once"]),
     ('"i1 x.a1", ', "", ["'links'", "port 'i1' is linked to nothing", "add a link"]),
     ('"x.b1 y.a"', '"x.b1 z.a"', ["'links.2'", "element 'z' is not known", "use one of: x, y"]),

@@ -20,12 +20,12 @@ class Comb(MovedCoupler):
 
     name = "comb"
     params = (
-        Param("force_n_per_v2", "N/V^2", None, 0.0, np.inf, "pull per square of the voltage", open_low=True),
-        Param("stiffness_n_per_m", "N/m", None, 0.0, np.inf, "stiffness of the springs along", open_low=True),
-        Param("side_travel_nm", "nm", None, 0.0, np.inf, "travel where fingers snap sideways", open_low=True),
+        Param("force_n_per_v2", "N/V^2", None, 1e-15, 1e3, "pull per square of the voltage"),
+        Param("stiffness_n_per_m", "N/m", None, 1e-6, 1e9, "stiffness of the springs along"),
+        Param("side_travel_nm", "nm", None, 1e-3, 1e6, "travel where fingers snap sideways"),
         *COUPLING,
         Param("margin", "", NOMINAL_MARGIN, 0.0, 0.99, "share of the snapping voltage in use", open_low=True),
-        Param("capacitance_ff", "fF", np.nan, 0.0, np.inf, "capacitance at rest; left out: not known"),
+        Param("capacitance_ff", "fF", np.nan, 0.0, 1e9, "capacitance at rest; left out: not known"),
         *HANDLING,
     )
 

@@ -38,23 +38,22 @@ def pull_in_v(stiffness_n_per_m: ArrayLike, gap_nm: ArrayLike, area_um2: ArrayLi
 
 
 COUPLING = (
-    Param("decay_nm", "nm", None, 0.0, np.inf, "gap over which the coupling falls by e", open_low=True),
-    Param("rest_rad", "rad", None, 0.0, np.inf, "angle with the springs at rest", open_low=True),
+    Param("decay_nm", "nm", None, 1e-3, 1e6, "gap over which the coupling falls by e"),
+    Param("rest_rad", "rad", None, 1e-6, 1e6, "angle with the springs at rest"),
     Param("direction", "", 1.0, -1.0, 1.0, "1: travel closes the optical gap, -1: travel opens it"),
     Param(
         "optical_gap_nm",
         "nm",
         np.nan,
-        0.0,
-        np.inf,
+        1e-3,
+        1e6,
         "optical gap at rest; left out: never closed",
-        open_low=True,
     ),
     Param("charge_v", "V", 0.0, -1e3, 1e3, "voltage of least force, shifted by trapped charge"),
     Param("polarity", "", 1.0, -1.0, 1.0, "side of charge_v on which the drive stays: 1 above, -1 below"),
     Param("decay_slope_per_nm", "1/nm", 0.0, -1.0, 1.0, "relative growth of decay_nm per nm of wavelength"),
-    Param("phase_rad_per_nm", "rad/nm", 0.0, -np.inf, np.inf, "parasitic phase per nm of travel"),
-    Param("phase_rad_per_nm2", "rad/nm^2", 0.0, -np.inf, np.inf, "parasitic phase per nm^2 of travel"),
+    Param("phase_rad_per_nm", "rad/nm", 0.0, -1e6, 1e6, "parasitic phase per nm of travel"),
+    Param("phase_rad_per_nm2", "rad/nm^2", 0.0, -1e6, 1e6, "parasitic phase per nm^2 of travel"),
 )
 
 
@@ -240,11 +239,11 @@ class Gap(MovedCoupler):
 
     name = "gap"
     params = (
-        Param("gap_nm", "nm", None, 0.0, np.inf, "electrode gap with the springs at rest", open_low=True),
-        Param("stiffness_n_per_m", "N/m", None, 0.0, np.inf, "stiffness of the springs", open_low=True),
-        Param("area_um2", "um^2", None, 0.0, np.inf, "area of the electrodes", open_low=True),
+        Param("gap_nm", "nm", None, 1e-3, 1e6, "electrode gap with the springs at rest"),
+        Param("stiffness_n_per_m", "N/m", None, 1e-6, 1e9, "stiffness of the springs"),
+        Param("area_um2", "um^2", None, 1e-6, 1e9, "area of the electrodes"),
         *COUPLING,
-        Param("v_pi_v", "V", np.nan, 0.0, np.inf, "measured pull-in; left out: from the plates", open_low=True),
+        Param("v_pi_v", "V", np.nan, 1e-6, 1e6, "measured pull-in; left out: from the plates"),
         Param(
             "margin",
             "",

@@ -49,9 +49,9 @@ class Heater(Law):
     moves = ("phase",)
     power_law = True
     params = (
-        Param("p2pi_mw", "mW", None, 0.0, np.inf, "power that turns the phase by 2 pi", open_low=True),
-        Param("r_ohm", "ohm", None, 0.0, np.inf, "resistance with all heaters cold", open_low=True),
-        Param("offset_rad", "rad", 0.0, -np.inf, np.inf, "phase with all heaters cold"),
+        Param("p2pi_mw", "mW", None, 1e-6, 1e6, "power that turns the phase by 2 pi"),
+        Param("r_ohm", "ohm", None, 1e-3, 1e9, "resistance with all heaters cold"),
+        Param("offset_rad", "rad", 0.0, -1e6, 1e6, "phase with all heaters cold"),
         Param("r_rise", "", 0.0, -1.0, 10.0, "relative rise of the resistance per turn of 2 pi of heat"),
         Param("arm", "", 1.0, -1.0, 1.0, "1: the heater lies on the arm of the phase, -1: on the other arm"),
     )

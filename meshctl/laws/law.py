@@ -68,7 +68,7 @@ class Param:
 HANDLING = (
     Param("approach", "", 0.0, -1.0, 1.0, "1: come from lower volts, -1: from higher, 0: from either side"),
     Param("release_v", "V", 0.0, -1e3, 1e3, "volts to pass through before travelling back; 0: none"),
-    Param("off_rad", "rad", np.nan, -np.inf, np.inf, "value with the power off; left out: the value at 0 V"),
+    Param("off_rad", "rad", np.nan, -1e6, 1e6, "value with the power off; left out: the value at 0 V"),
 )
 
 

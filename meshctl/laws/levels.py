@@ -53,8 +53,8 @@ class Levels(Law):
     stepwise = True
     params = (
         Param("off_level", "", 0.0, 0.0, 1e6, "row of the level before anything is written, from 0"),
-        Param("pulse_window_v", "V", 0.05, 0.0, np.inf, "how far a pulse may be from its listed volts"),
-        Param("pulse_energy_nj", "nJ", np.nan, 0.0, np.inf, "energy of a pulse; left out: not known"),
+        Param("pulse_window_v", "V", 0.05, 0.0, 1e4, "how far a pulse may be from its listed volts"),
+        Param("pulse_energy_nj", "nJ", np.nan, 0.0, 1e12, "energy of a pulse; left out: not known"),
     )
 
     def rows(self, p: Params) -> int:

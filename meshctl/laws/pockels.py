@@ -16,10 +16,10 @@ from meshctl.errors import VoltageOutOfRange
 from meshctl.laws.law import MW_PER_W, SLACK, Breach, Law, Param, Params, Rows, raise_where
 
 COEFFICIENTS = (
-    Param("linear_rad_per_v", "rad/V", 0.0, -np.inf, np.inf, "phase per volt"),
-    Param("quadratic_rad_per_v2", "rad/V^2", 0.0, -np.inf, np.inf, "phase per square of the voltage"),
-    Param("offset_rad", "rad", 0.0, -np.inf, np.inf, "phase at 0 V"),
-    Param("capacitance_ff", "fF", np.nan, 0.0, np.inf, "capacitance; left out: not known"),
+    Param("linear_rad_per_v", "rad/V", 0.0, -1e6, 1e6, "phase per volt"),
+    Param("quadratic_rad_per_v2", "rad/V^2", 0.0, -1e6, 1e6, "phase per square of the voltage"),
+    Param("offset_rad", "rad", 0.0, -1e6, 1e6, "phase at 0 V"),
+    Param("capacitance_ff", "fF", np.nan, 0.0, 1e9, "capacitance; left out: not known"),
 )
 
 
@@ -94,7 +94,7 @@ class Carrier(Pockels):
     name = "carrier"
     params = (
         *COEFFICIENTS,
-        Param("current_ma_per_v", "mA/V", 0.0, 0.0, np.inf, "static current per volt"),
+        Param("current_ma_per_v", "mA/V", 0.0, 0.0, 1e6, "static current per volt"),
     )
 
     def resistance_ohm(self, p: Params, heat_turns: ArrayLike | None = None) -> Rows:  # noqa: ARG002

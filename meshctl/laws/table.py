@@ -28,8 +28,8 @@ class Table(Law):
     moves = ("phase", "coupler")
     has_tables = True
     params = (
-        Param("r_ohm", "ohm", np.inf, 0.0, np.inf, "resistance; left out: draws no current", open_low=True),
-        Param("capacitance_ff", "fF", np.nan, 0.0, np.inf, "capacitance; left out: not known"),
+        Param("r_ohm", "ohm", np.inf, 1e-3, 1e9, "resistance; left out: draws no current"),
+        Param("capacitance_ff", "fF", np.nan, 0.0, 1e9, "capacitance; left out: not known"),
         *HANDLING,
     )
 

@@ -15,6 +15,7 @@ from pydantic import (
     BeforeValidator,
     ConfigDict,
     Field,
+    StrictBool,
     ValidationError,
     model_validator,
 )
@@ -50,18 +51,31 @@ def _quantity(name: str) -> AfterValidator:
     return AfterValidator(check)
 
 
-def _no_bool(value: Any) -> Any:
-    if isinstance(value, bool):
-        raise _Refused(UnsoundFile(f"{str(value).lower()} stands where a number must", remedy="write a number"))
-    return value
+def _only_numbers(name: str, *, whole: bool = False) -> BeforeValidator:
+    """Neither texts nor truths are taken for numbers."""
+
+    def check(value: Any) -> Any:
+        kind = "whole number" if whole else "number"
+        broken = whole and isinstance(value, float) and math.isfinite(value) and value != int(value)
+        if isinstance(value, bool) or not isinstance(value, int | float) or broken:
+            shown = str(value).lower() if isinstance(value, bool) else _shown(value)
+            said = f"{shown} stands where a {kind} must"
+            raise _Refused(UnsoundFile(said, remedy=f"write a {kind}, {QUANTITIES[name].allowed}"))
+        return value
+
+    return BeforeValidator(check)
 
 
 def _number(name: str) -> Any:
-    return Annotated[float, BeforeValidator(_no_bool), _quantity(name)]
+    return Annotated[float, _only_numbers(name), _quantity(name)]
 
 
 def _count(name: str) -> Any:
-    return Annotated[int, BeforeValidator(_no_bool), _quantity(name)]
+    return Annotated[int, _only_numbers(name, whole=True), _quantity(name)]
+
+
+def _shown(value: Any) -> str:
+    return f"a {'table' if isinstance(value, dict) else 'list'}" if isinstance(value, dict | list) else repr(value)
 
 
 class _Strict(BaseModel):
@@ -74,8 +88,8 @@ class LatticePart(_Strict):
     cell: Literal["mzi", "gap"] = "mzi"
     pitch_um: tuple[_number("pitch_um"), _number("pitch_um")] = (400.0, 127.0)  # type: ignore[valid-type]
     spare: _count("spare") = 0  # type: ignore[valid-type]
-    output_phases: bool = True
-    balanced: bool = False
+    output_phases: StrictBool = True
+    balanced: StrictBool = False
     rings: _count("rings") | None = None  # type: ignore[valid-type]
     rows: _count("rows") | None = None  # type: ignore[valid-type]
     columns: _count("columns") | None = None  # type: ignore[valid-type]
@@ -242,7 +256,7 @@ class InsertPart(_Strict):
 
 class CellPart(_Strict):
     elements: list[str]
-    at_um: tuple[float, float] | None = None
+    at_um: tuple[_number("at_um"), _number("at_um")] | None = None  # type: ignore[valid-type]
 
 
 class Description(_Strict):
@@ -311,6 +325,31 @@ class Description(_Strict):
         return self
 
 
+# what pydantic calls a fault, and what may stand there
+_ALLOWED = {
+    "string_type": "a text",
+    "string_too_short": "a text of one character or more",
+    "list_type": "a list",
+    "tuple_type": "a list",
+    "too_long": "a shorter list",
+    "dict_type": "a table",
+    "model_type": "a table",
+    "model_attributes_type": "a table",
+    "bool_type": "true or false",
+}
+_EXAMPLES = {
+    "name": '"mychip"',
+    "pitch_um": "[400.0, 127.0]",
+    "at_um": "[400.0, 127.0]",
+    "links": '["in1 a.a1", "a.b1 out1"]',
+    "elements": '[["a", "coupler"]]',
+    "inputs": '["in1", "in2"]',
+    "outputs": '["out1", "out2"]',
+    "monitors": '["m1"]',
+    "tunable": '["a"]',
+}
+
+
 def _allowed_keys(location: tuple[Any, ...]) -> list[str]:
     model: Any = Description
     for step in location[:-1]:
@@ -348,8 +387,19 @@ def _finding(problem: Any, source: str) -> Finding:
         allowed = problem["ctx"]["expected"]
         wrong = UnknownKey if isinstance(value, str) else UnsoundFile
         return wrong(f"the value is {value!r}; allowed is {allowed}", where=where, remedy="correct it")
-    shown = repr(value) if not isinstance(value, dict | list) else f"a {type(value).__name__}"
-    return UnsoundFile(f"the value is {shown}; {problem['msg'].lower()}", where=where, remedy="correct it")
+    if kind not in _ALLOWED:
+        return UnsoundFile(f"the value is {_shown(value)}; {problem['msg'].lower()}", where=where, remedy="correct it")
+    example = _EXAMPLES.get(str(location[-1]), "")
+    allowed = _ALLOWED[kind] + (f", such as {example}" if example else "")
+    return UnsoundFile(f"the value is {_shown(value)}; allowed is {allowed}", where=where, remedy="correct it")
+
+
+def _control_code(value: Any) -> str | None:
+    """The first text, key or value, with a character that would steer a terminal."""
+    if isinstance(value, str):
+        return value if any((ord(c) < 32 and c not in "\n\t") or 127 <= ord(c) < 160 for c in value) else None
+    parts = [*value, *value.values()] if isinstance(value, dict) else value if isinstance(value, list) else []
+    return next((found for found in map(_control_code, parts) if found is not None), None)
 
 
 def parse_description(text: str, source: str = MESH_TOML) -> Description:
@@ -363,6 +413,9 @@ def parse_description(text: str, source: str = MESH_TOML) -> Description:
         raw = tomllib.loads(text)
     except tomllib.TOMLDecodeError as problem:
         raise UnsoundFile(f"not readable as TOML: {problem}", where=source, remedy="mend that line") from None
+    spoilt = _control_code(raw)
+    if spoilt is not None:
+        raise UnsoundFile(f"the text {spoilt!r} has control codes", where=source, remedy="leave them out")
     if raw.get("format") not in (None, 1):
         raise UnsoundFile(
             f"format is {raw['format']!r}; this version reads format 1",

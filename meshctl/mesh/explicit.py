@@ -24,6 +24,8 @@ from meshctl.mesh.parts import KIND_NAMES, Part, part_of
 from meshctl.mesh.tables import unknown_name
 from meshctl.optics.elements import COUPLER, KINDS, PHASE, kind_row
 
+NOT_IN_PORTS = ".:=,@"
+
 
 class _Parts:
     """Elements of an explicit net as they are read."""
@@ -162,6 +164,17 @@ def _cells(parts: _Parts, description: Description, setting_of: np.ndarray) -> t
     return cell_of, names, np.array(places, float).reshape(-1, 2)
 
 
+def _check_port_name(name: str, where: str) -> None:
+    """Refuse a name that a route, written IN:OUT=SHARE,OUT@LENGTH, could not say."""
+    wrong = [c for c in NOT_IN_PORTS if c in name]
+    if wrong or not name or name.startswith("-") or any(c.isspace() for c in name):
+        raise UnknownKey(
+            f"port '{name}' is no port name",
+            where=where,
+            remedy=f"use none of {' '.join(NOT_IN_PORTS)} and no blank, and no - in front",
+        )
+
+
 def explicit_net(description: Description, folder: Path | None = None) -> tuple[Assembly, np.ndarray]:
     """The arrays of a net given by elements and links, and setting_of [E].
 
@@ -174,13 +187,9 @@ def explicit_net(description: Description, folder: Path | None = None) -> tuple[
     named = [*(description.inputs or ()), *(description.outputs or ()), *description.monitors]
     both_ways = description.inputs is None and description.outputs is None
     known = None if both_ways else set(named)
-    for name in named:
-        if "." in name or not name:
-            raise UnknownKey(
-                f"port '{name}' is no port name",
-                where=f"{MESH_TOML} key 'inputs'",
-                remedy="use no dot or blank",
-            )
+    for key in ("inputs", "outputs", "monitors"):
+        for name in getattr(description, key) or ():
+            _check_port_name(name, f"{MESH_TOML} key '{key}'")
     if not both_ways and len(set(named)) < len(named):
         twice = next(n for n in named if named.count(n) > 1)
         raise DuplicateName(
@@ -189,6 +198,8 @@ def explicit_net(description: Description, folder: Path | None = None) -> tuple[
             remedy="name it once",
         )
     mate, externals = _linked(parts, description.links or [], known)
+    for name in externals:
+        _check_port_name(name, f"{MESH_TOML} key 'links'")
     for name in named:
         if name not in externals:
             raise MissingRow(

@@ -10,6 +10,7 @@ import math
 from dataclasses import dataclass
 
 INF = math.inf
+RAD_MOST = 1e6  # beyond, a phase kept in double precision is worth less than any measured one
 
 
 @dataclass(frozen=True)
@@ -48,10 +49,10 @@ QUANTITIES: dict[str, Quantity] = {
     q.name: q
     for q in (
         # elements.csv
-        _q("error_rad", "rad", -INF, INF, 0.0, "angle or phase that the part has beyond its wanted value"),
+        _q("error_rad", "rad", -RAD_MOST, RAD_MOST, 0.0, "angle or phase that the part has beyond its wanted value"),
         _q("loss_db", "dB", 0.0, 1000.0, 0.0, "power lost in the part"),
-        _q("stuck_rad", "rad", -INF, INF, math.nan, "value at which the setting is stuck"),
-        _q("sigma_rad", "rad", 0.0, INF, 0.0, "standard uncertainty of error_rad"),
+        _q("stuck_rad", "rad", -RAD_MOST, RAD_MOST, math.nan, "value at which the setting is stuck"),
+        _q("sigma_rad", "rad", 0.0, RAD_MOST, 0.0, "standard uncertainty of error_rad"),
         # channels.csv
         _q("bits", "", 1, 32, 16, "resolution of the source"),
         _q("min_v", "V", -1e4, 1e4, 0.0, "voltage of code 0"),
@@ -66,7 +67,7 @@ QUANTITIES: dict[str, Quantity] = {
         _q("ramp_v_per_s", "V/s", 0.0, 1e9, INF, "fastest change of the voltage", True),
         # tables.csv, crosstalk.csv
         _q("volts_v", "V", -1e4, 1e4, math.nan, "voltage of the measured point"),
-        _q("value_rad", "rad", -INF, INF, math.nan, "phase or angle measured there"),
+        _q("value_rad", "rad", -RAD_MOST, RAD_MOST, math.nan, "phase or angle measured there"),
         _q("coefficient", "", -100.0, 100.0, math.nan, "rad in the element per rad of the actuator's own"),
         # mesh.toml
         _q("wavelength_nm", "nm", 200.0, 20000.0, math.nan, "centre wavelength"),
@@ -75,15 +76,16 @@ QUANTITIES: dict[str, Quantity] = {
         _q("loss_db_per_cm", "dB/cm", 0.0, 1000.0, 0.0, "propagation loss of waveguides"),
         _q("angle_slope_per_nm", "1/nm", -1.0, 1.0, 0.0, "relative change of a coupler angle per nm"),
         _q("length_um", "um", 0.0, 1e9, math.nan, "length of a waveguide"),
-        _q("angle_rad", "rad", -INF, INF, math.pi / 4, "angle of a coupler"),
+        _q("angle_rad", "rad", -RAD_MOST, RAD_MOST, math.pi / 4, "angle of a coupler"),
         _q("cross_power", "", 0.0, 1.0, 0.5, "share of power that a coupler sends across"),
-        _q("phase_rad", "rad", -INF, INF, 0.0, "phase of a part that nothing moves"),
+        _q("phase_rad", "rad", -RAD_MOST, RAD_MOST, 0.0, "phase of a part that nothing moves"),
         _q("transmitted_power", "", 0.0, 1.0, 1.0, "share of power that a reflecting part lets through"),
         _q("reflected_power", "", 0.0, 1.0, 0.0, "share of power that a part returns"),
         _q("reflection_db", "dB", 0.0, 1000.0, INF, "returned power below what enters"),
-        _q("reflection_rad", "rad", -INF, INF, math.pi / 2, "phase of what returns over what passes"),
+        _q("reflection_rad", "rad", -RAD_MOST, RAD_MOST, math.pi / 2, "phase of what returns over what passes"),
         _q("resistance_ohm", "ohm", 0.0, 1e6, 0.0, "resistance of a shared ground"),
         _q("pitch_um", "um", 0.0, 1e6, math.nan, "distance between columns, between lanes", True),
+        _q("at_um", "um", -1e9, 1e9, math.nan, "place of a cell"),
         _q("side_um", "um", 0.0, 1e6, 250.0, "length of a lattice cell", True),
         _q("modes", "", 2, 4096, math.nan, "number of lanes"),
         _q("spare", "", 0, 256, 0, "extra columns"),

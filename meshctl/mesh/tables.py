@@ -63,6 +63,8 @@ class Table:
 
 def _number(text: str, quantity: Quantity, where: str) -> float:
     try:
+        if "_" in text:  # Python's own way of writing numbers, no one else's
+            raise ValueError
         value = float(text)
     except ValueError:
         raise UnsoundFile(
@@ -162,6 +164,12 @@ def _parsed(
                     )
                 into.append(None)
             elif quantity is None:
+                if not cell.isprintable():
+                    raise UnsoundFile(
+                        f"column '{h}' is {cell!r}, which has control codes",
+                        where=f"{name} line {line}",
+                        remedy="leave them out",
+                    )
                 into.append(cell)
             else:
                 into.append(_number(cell, quantity, f"{name} line {line}"))

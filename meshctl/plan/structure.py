@@ -27,6 +27,10 @@ def _is_number(value: Any) -> bool:
     return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)
 
 
+def _is_plain(text: str) -> bool:
+    return all(c.isprintable() or c in "\n\t" for c in text)
+
+
 def _list_of(one: Form, said: str, *, some: bool = False, count: int | None = None) -> Form:
     def holds(value: Any) -> bool:
         long_enough = isinstance(value, list) and (bool(value) or not some) and count in (None, len(value))
@@ -39,7 +43,7 @@ def _or_none(one: Form) -> Form:
     return Form(f"{one.said} or null", lambda value: value is None or one.holds(value))
 
 
-TEXT = Form("a text", lambda value: isinstance(value, str))
+TEXT = Form("a text without control codes", lambda value: isinstance(value, str) and _is_plain(value))
 NUMBER = Form("a number", _is_number)
 ABOVE_ZERO = Form("a number above 0", lambda value: _is_number(value) and value > 0)
 COUNT = Form("a whole number, 0 or more", lambda v: isinstance(v, int) and not isinstance(v, bool) and v >= 0)

@@ -159,6 +159,8 @@ def _from_csv(path: Path) -> np.ndarray:
                 for column, field in enumerate(row, 1):
                     text = field.strip().replace(" ", "").replace("i", "j") if "inf" not in field else field.strip()
                     try:
+                        if "_" in text:
+                            raise ValueError
                         values.append(complex(text))
                     except ValueError:
                         raise UnsoundFile(
