@@ -107,9 +107,14 @@ def test_corrected_dies_beat_codes_as_set():
     assert error["refined"] < error["corrected"] < 0.2 * error["as-set"]
 
 
-def test_corrected_dies_do_what_solving_them_says():
+@pytest.mark.parametrize("heaters", ["together", "alone"])
+def test_corrected_dies_do_what_solving_them_says(heaters):
     spread = Spread(split_rad=0.05, phase_rad=0.5, p2pi_share=0.02, r_share=0.02)
-    task = task_of(PLOVER, solve(PLOVER, "haar:2"), spread=spread, policy="corrected")
+    mesh = PLOVER
+    if heaters == "alone":
+        mesh, spread = lattice("rectangular", modes=8), Spread(split_rad=0.05, phase_rad=0.5)
+    task = task_of(mesh, solve(mesh, "haar:2"), spread=spread, policy="corrected")
+    assert task.dies.alone == (heaters == "alone")
     for trial in range(3):
         errors = task.drawing.errors(task.drawing.normals(3, trial))
         die = mesh_of(task.drawing, errors)

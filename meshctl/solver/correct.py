@@ -110,8 +110,6 @@ def _step_block(half, outer):  # type: ignore[no-untyped-def]
     return g * e * s, g * c, g * e * c, -g * s
 
 
-# the same rule outside kernels, where compiling it would take longer than it does
-nearest = _nearest.py_func  # type: ignore[attr-defined]
 _IN = given(float64)
 
 
@@ -249,9 +247,15 @@ def _output_phases(
     above = np.mod(value[None, :] + common[:, None] - reach.low[s][None, :] + SLACK, 2 * np.pi)
     over = np.maximum(reach.low[s] + above - reach.high[s] - 2 * SLACK, 0.0)
     best = int(np.argmin(1e6 * over.sum(1) + above.sum(1)))
-    low, high, period = reach.low[s].tolist(), reach.high[s].tolist(), reach.period[s].tolist()
+    low, high, period = reach.low[s], reach.high[s], reach.period[s]
     want = value + common[best]
-    found = np.array([nearest(*row) for row in zip(want.tolist(), low, high, period, strict=True)])
+    turning = period > 0.0
+    step = np.where(turning, period, 1.0)
+    x = want + np.ceil((low - SLACK - want) / step) * step
+    # out of reach: the nearer end, as `_nearest` has it
+    ends = np.where(x - high <= low - (x - step), high, low)
+    inside = np.clip(np.where(turning, x, want), low, high)
+    found = np.where(turning & (x > high + SLACK), ends, inside)
     settings[s] = found
     off = found - want - 2 * math.pi * np.floor((found - want) / (2 * math.pi) + 0.5)
     missed = np.flatnonzero(np.abs(off) > 2 * SLACK)

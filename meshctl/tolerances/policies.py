@@ -87,6 +87,7 @@ class Light:
         return matrix
 
 
+_OVER = 1e-9  # V beyond a limit that rounding may ask for
 _NEPER = -np.log(10.0) / 20.0  # of an amplitude, by dB of loss
 
 
@@ -161,6 +162,26 @@ class Corrected(Policy):
         self.reach = reach_of(self.chip)
         self.closed, self.free = closed, target.free
         self.steps, self.step_of = closed.places[closed.best_place(self.reach)]
+        self.alone = self._alone()
+
+    def _alone(self) -> bool:
+        """True where each setting has a live heater and a channel of its own, and none touches another."""
+        actuators, chip, n = self.mesh.actuators, self.chip, self.mesh.net.n_settings
+        own = len(actuators) == len(self.mesh.channels) == n and all(
+            np.array_equal(rows, np.arange(n)) for rows in (actuators.setting, actuators.channel)
+        )
+        touched = actuators.crosstalk is not None or chip.coupled or bool(chip.by_current.any())
+        fixed = bool(actuators.dead.any()) or not bool(np.isnan(self.mesh.as_built.stuck_rad).all())
+        return own and not touched and not fixed and all(group.law.power_law for group in chip.groups)
+
+    def _nearest(self, settings: np.ndarray) -> np.ndarray:
+        """What `place` finds where heaters stand alone: settings within reach need no further whole turns."""
+        chip, (_, highest) = self.chip, self.chip.level_range
+        change, levels = settings - chip.reference_rad, np.empty(len(settings))
+        for group in chip.groups:
+            levels[group.rows] = group.law.volts(change[group.rows], group.p)
+        codes: np.ndarray = chip.source.nearest_codes(levels)
+        return codes - (chip.levels(codes) > highest + _OVER)
 
     def run(self, errors: Errors) -> tuple[np.ndarray, float]:
         electric = any(cause in errors for cause in ELECTRIC)
@@ -169,7 +190,10 @@ class Corrected(Policy):
             self.mesh.net, as_built, closed.response.circuit, closed.table, self.steps, self.step_of,
             reach_of(chip) if electric else self.reach, self.free,
         )  # fmt: skip
-        levels = chip.levels(place(chip, fitted.settings, best_effort=True).codes)
+        codes = self._nearest(fitted.settings) if self.alone and not electric else None
+        if codes is None:
+            codes = place(chip, fitted.settings, best_effort=True).codes
+        levels = chip.levels(codes)
         return self._measured(chip, errors, levels + errors["noise_v"] if "noise_v" in errors else levels)
 
 
