@@ -81,7 +81,14 @@ def draw(
 
     Example
     -------
-    >>> print(draw(lattice("rectangular", modes=4), width=60))
+    >>> from meshctl import lattice
+    >>> print(draw(lattice("rectangular", modes=2), width=60, ascii=True))
+            1
+    in1 ---+ +-- out1
+            o
+    in2 ---+ +-- out2
+    <BLANKLINE>
+    o cell, state not known
     """
     if width < LEAST_WIDTH:
         raise OutOfRange(f"a picture {width} characters wide has no room", remedy=f"allow {LEAST_WIDTH} or more")

@@ -38,6 +38,7 @@ def light(mesh: Mesh, settings: np.ndarray, input_port: str) -> np.ndarray:
 
     Example
     -------
+    >>> from meshctl import lattice
     >>> light(lattice("rectangular", modes=2), np.zeros(4), "in1")[0].round(3)
     array([1., 0., 0., 1.])
     """

@@ -133,6 +133,7 @@ def sites_of(mesh: Mesh, settings: np.ndarray | None = None) -> Sites:
 
     Example
     -------
+    >>> from meshctl import lattice
     >>> sites_of(lattice("rectangular", modes=4), np.zeros(16)).cross_power.round(2)
     array([1., 1., 1., 1., 1., 1.])
     """

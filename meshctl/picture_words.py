@@ -53,6 +53,7 @@ def describe(mesh: Mesh, settings: np.ndarray | None = None) -> str:
 
     Example
     -------
+    >>> from meshctl import lattice
     >>> print(describe(lattice("rectangular", modes=2), np.zeros(4)))
     c1_1: cross power 1.00, inner 0.000 rad, outer 0.000 rad
     """

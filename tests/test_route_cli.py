@@ -205,7 +205,7 @@ def test_saved_routes_are_listed_and_shown(run):
 
 def test_two_states_are_told_apart(run):
     said = run("states", "dunlin", "through", "in1>drop1")[1]
-    assert "from 'through' to 'in1>drop1': 1 cells, 1 channels change" in said
+    assert "from 'through' to 'in1>drop1': change in 1 cell and 1 channel" in said
     (row,) = (line.split() for line in said.splitlines() if line.startswith("x11"))
     assert [float(v) for v in row[1:]] == [0.0, 1.0]
     found = json.loads(run("states", "dunlin", "through", "in1>drop1", "--json")[1])

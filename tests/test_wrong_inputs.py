@@ -208,7 +208,7 @@ TARGETS = [
     ("t.npy", np.array(["a", "b"]), ["t.npy", "not numbers", "complex array"]),
     ("t.csv", "", ["t.csv", "empty", "one row per output"]),
     ("t.csv", "1,0\n0,x\n", ["t.csv", "row 2 column 2 is 'x'", "0.5-0.2j"]),
-    ("t.csv", "1,0\n0\n", ["t.csv", "row 2 has 1 cells where row 1 has 2"]),
+    ("t.csv", "1,0\n0\n", ["t.csv", "row 2 has 1, row 1 has 2 cells"]),
     ("t.csv", '1,0\n0,"1\n1\n1\n', ["t.csv", "not readable as CSV", "mend"]),
     ("t.csv", b"\xff\xfe1", ["t.csv", "UTF-8"]),
     ("t.csv", "1e200,0,0,0\n0,1,0,0\n0,0,1,0\n0,0,0,1", ["t.csv", "not unitary", "inf"]),

@@ -212,7 +212,8 @@ def _difference_text(before: str, after: str, found: Difference) -> str:
     cell = max([4, *(len(c.cell) for c in found.cells)])
     channel = max([7, *(len(c.channel) for c in found.channels)])
     element = max([5, *(len(p.element) for p in found.phases)])
-    lines = [f"from '{before}' to '{after}': {len(found.cells)} cells, {len(found.channels)} channels change"]
+    count = f"{printing.counted(len(found.cells), 'cell')} and {printing.counted(len(found.channels), 'channel')}"
+    lines = [f"from '{before}' to '{after}': change in {count}"]
     if found.cells:
         lines.append(f"{'cell':<{cell}}  {'cross power':>11}  {'then':>7}")
         lines += [f"{c.cell:<{cell}}  {c.before:11.4f}  {c.after:7.4f}" for c in found.cells]

@@ -170,7 +170,7 @@ def _from_csv(path: Path) -> np.ndarray:
                         ) from None
                 if rows and len(values) != len(rows[0]):
                     raise WrongSize(
-                        f"row {line} has {len(values)} cells where row 1 has {len(rows[0])}",
+                        f"row {line} has {len(values)}, row 1 has {len(rows[0])} cells",
                         where=str(path),
                         remedy="give one row per output, one cell per input",
                     )
