@@ -341,7 +341,7 @@ def test_same_seed_gives_same_routes():
         (["p99:p1"], {}, "p99"),
         (["p1:p2", "p1:p3"], {}, "start at the same port"),
         (["p1:p9"], {"avoid": ["c99"]}, "c99"),
-        (["p1:p9"], {"priorities": [1, 2]}, "2 priorities for 1 routes"),
+        (["p1:p9"], {"priorities": [1, 2]}, "priorities are 2, routes 1"),
         ([], {}, "no route is asked for"),
     ],
 )

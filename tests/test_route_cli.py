@@ -133,7 +133,7 @@ def test_wished_length_is_kept_exactly(run):
         ("route dunlin in1:out1,out1", 2, ["names 'out1' twice"]),
         ("route dunlin in1:out1 --save a/b", 2, ["'a/b' is no name for a state", "letters, digits"]),
         ("route dunlin in1:out1 --avoid x13", 2, ["cell 'x13' is not known", "x12"]),
-        ("route dunlin in1:out1 --priorities 1,2", 2, ["2 priorities for 1 routes"]),
+        ("route dunlin in1:out1 --priorities 1,2", 2, ["priorities are 2, routes 1"]),
         ("route dunlin in1:out1 --priorities 1,x", 2, ["--priorities 1,x are no numbers"]),
         ("route dunlin in1:out1 --priorities nan", 2, ["--priorities nan are no numbers"]),
         ("route dunlin in1:out1 --unused dark", 2, ["invalid choice: 'dark'"]),

@@ -318,9 +318,9 @@ def test_spoilt_file_of_routes_is_refused(dunlin, tmp_path, spoil, error, says):
 @pytest.mark.parametrize(
     ("spoil", "says"),
     [
-        (lambda e: e["target"].update(words=["x"]), "wish cannot be read: route 'x' is not complete"),
-        (lambda e: e["target"].update(band="1540"), "wish cannot be read: --band 1540 is no range"),
-        (lambda e: e["routes"][0].update(output="out9"), "route in1:out9 is not on mesh 'dunlin'"),
+        (lambda e: e["target"].update(words=["x"]), "'target' cannot be used: route 'x' is not complete"),
+        (lambda e: e["target"].update(band="1540"), "'target' cannot be used: band 1540 is no range"),
+        (lambda e: e["routes"][0].update(output="out9"), "route in1:out9 that its wish lacks"),
         (lambda e: e["target"].update(words=["in1:drop2"]), "route in1:drop1 that its wish lacks"),
     ],
 )

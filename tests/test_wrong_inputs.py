@@ -250,6 +250,7 @@ PLANS = [
     (lambda p: p.plan(continuous={}), ["p.json", "'continuous.fidelity' is missing"]),
     (lambda p: p.plan(codes=lambda c: [float("nan"), *c[1:]]), ["p.json", "'codes'", "whole numbers"]),
     (lambda p: p.plan(codes=lambda c: [2**63, *c[1:]]), ["p.json", "'codes'", "whole numbers"]),
+    (lambda p: p.plan(throughput_per_input=[1.0]), ["p.json", "'throughput_per_input' has 1 entries", "4 inputs"]),
     (lambda p: p.plan(mesh_hash=5), ["p.json", "'mesh_hash' is 5", "a text"]),
     (lambda p: p.file("p.json", "[" * 100_000), ["p.json", "nested too deep", "solve again"]),
     (lambda p: p.file("p.json", "1" * 5000), ["p.json", "not readable as JSON", "solve again"]),
@@ -280,6 +281,9 @@ WORDS = [
     ("new rectangular n", 2, ["needs a number of modes", "such as 8"]),
     ("new rectangular n --modes 1", 2, ["modes is 1", "2 to 4096"]),
     ("new rectangular n --modes four", 2, ["--modes", "'four' is no whole number"]),
+    ("new rectangular n --modes 1_0", 2, ["--modes", "'1_0' is no whole number"]),
+    ("solve m dft --seconds 1_0", 2, ["--seconds", "'1_0' is no number"]),
+    ("predict m p.json --wavelengths 1_540:1560:3", 2, ["1_540:1560:3 is no range"]),
     ("new rectangular n --modes 4 --spare 999", 2, ["spare is 999", "0 to 256"]),
     ("new tree n --modes 6", 2, ["6 outputs is not binary", "such as 8"]),
     ("new switch n --modes 8", 2, ["a switch has 4 modes, not 8"]),
@@ -356,6 +360,39 @@ def test_unsound_plan_is_one_line(run, place, spoil, says):
 @pytest.mark.parametrize(("words", "exit_code", "says"), WORDS, ids=case_id)
 def test_wrong_words_are_one_line(run, place, words, exit_code, says):
     ends_with_one_line(run, place, words, exit_code, *says)
+
+
+@pytest.mark.parametrize(
+    ("changed", "says"),
+    [
+        ({"words": ["zzz"]}, ["'target'", "route 'zzz' is not complete"]),
+        ({"words": ["in1:out1"], "band": "q"}, ["'target'", "band q is no range"]),
+        ({"unused": "zz"}, ["'target.unused' is 'zz'", "cleanest"]),
+    ],
+)
+def test_unsound_plan_for_routes_is_one_line(run, place, changed, says):
+    assert run("route", "m", "in1:out2", "-o", "p.json")[0] == 0
+    place.plan(target=lambda t: {**t, **changed})
+    for words in ("show m p.json", "predict m p.json --matrix u.npy", "energy m p.json"):
+        ends_with_one_line(run, place, words, 3, "p.json: ", *says, "route again" if "words" in changed else "again")
+
+
+def test_route_to_port_that_is_not_there_is_one_line(run, place):
+    assert run("route", "m", "in1:out2", "-o", "p.json")[0] == 0
+    text = (place.folder / "p.json").read_text()
+    place.file("p.json", text.replace('"out2"', '"out9"').replace("in1:out2", "in1:out9"))
+    ends_with_one_line(run, place, "show m p.json", 3, "p.json: ", "in1:out9 is not on mesh", "route again")
+
+
+def test_folder_in_place_of_a_state_is_one_line(run, place):
+    (place.folder / "m" / "states" / "x.json").mkdir(parents=True)
+    for words in ("states m x", "solve m dft --save x"):
+        ends_with_one_line(run, place, words, 3, "x.json", "is a folder where a state must be", "move it away")
+
+
+def test_table_with_other_letters_is_not_overlooked(run, place):
+    place.file("m/Elements.CSV", "element\n")
+    ends_with_one_line(run, place, "check m", 3, "table 'Elements.CSV' is not known", "elements.csv")
 
 
 def test_missing_command_is_asked_for(run):

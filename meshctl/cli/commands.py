@@ -138,9 +138,9 @@ def predict(words: Namespace) -> int:
             require_suffix(path, *suffixes)
     if wavelengths is None and (words.feature or words.figure):
         raise WrongUsage("--feature and --figure need --wavelengths", remedy="give a range, such as 1540:1560:2001")
+    pairs = [session.port_pair(word, "--between") for word in words.between] or None
     if words.between and not (words.out or words.figure):
         raise WrongUsage("--between needs -o or --figure", remedy="name a file to write, or leave it out")
-    pairs = [session.port_pair(word, "--between") for word in words.between] or None
     marked, kind = printing.marked(words.feature)
     pair = session.port_pair(marked, "--feature") if marked else None
     plan = session.open_plan(words.plan, stale_ok=words.stale_ok)

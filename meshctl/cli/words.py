@@ -22,10 +22,15 @@ class _Parser(argparse.ArgumentParser):
         self.exit(2, f"{self.prog}: {message}; see '{self.prog} --help'\n")
 
 
+def _plain(text: str) -> bool:
+    """False for what only Python takes for a number: 1_0, or digits of other scripts."""
+    return text.isascii() and "_" not in text
+
+
 def _whole(low: int) -> Callable[[str], int]:
     def convert(text: str) -> int:
         try:
-            value = int(text)
+            value = int(text if _plain(text) else "")
         except ValueError:
             raise argparse.ArgumentTypeError(f"'{text}' is no whole number") from None
         if value < low:
@@ -37,7 +42,7 @@ def _whole(low: int) -> Callable[[str], int]:
 
 def _positive(text: str) -> float:
     try:
-        value = float(text)
+        value = float(text if _plain(text) else "")
     except ValueError:
         raise argparse.ArgumentTypeError(f"'{text}' is no number") from None
     if not 0.0 < value < 1e9:

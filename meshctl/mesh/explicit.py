@@ -1,6 +1,6 @@
 """Nets given part by part: elements and links of mesh.toml.
 
-Public: explicit_net.
+Public: explicit_net, check_port_name.
 """
 
 from __future__ import annotations
@@ -164,7 +164,7 @@ def _cells(parts: _Parts, description: Description, setting_of: np.ndarray) -> t
     return cell_of, names, np.array(places, float).reshape(-1, 2)
 
 
-def _check_port_name(name: str, where: str) -> None:
+def check_port_name(name: str, where: str) -> None:
     """Refuse a name that a route, written IN:OUT=SHARE,OUT@LENGTH, could not say."""
     wrong = [c for c in NOT_IN_PORTS if c in name]
     if wrong or not name or name.startswith("-") or any(c.isspace() for c in name):
@@ -189,7 +189,7 @@ def explicit_net(description: Description, folder: Path | None = None) -> tuple[
     known = None if both_ways else set(named)
     for key in ("inputs", "outputs", "monitors"):
         for name in getattr(description, key) or ():
-            _check_port_name(name, f"{MESH_TOML} key '{key}'")
+            check_port_name(name, f"{MESH_TOML} key '{key}'")
     if not both_ways and len(set(named)) < len(named):
         twice = next(n for n in named if named.count(n) > 1)
         raise DuplicateName(
@@ -199,7 +199,7 @@ def explicit_net(description: Description, folder: Path | None = None) -> tuple[
         )
     mate, externals = _linked(parts, description.links or [], known)
     for name in externals:
-        _check_port_name(name, f"{MESH_TOML} key 'links'")
+        check_port_name(name, f"{MESH_TOML} key 'links'")
     for name in named:
         if name not in externals:
             raise MissingRow(

@@ -15,6 +15,7 @@ import numpy as np
 
 from meshctl.errors import DuplicateName, MissingRow, UnsoundFile
 from meshctl.mesh.description import MESH_TOML, InsertPart
+from meshctl.mesh.explicit import check_port_name
 from meshctl.mesh.graph import FREE, ListedNames
 from meshctl.mesh.lattices import Assembly
 from meshctl.mesh.parts import Part, part_of
@@ -92,6 +93,8 @@ def _check_words(assembly: Assembly, part: InsertPart, where: str) -> None:
             where=where,
             remedy="name the monitor port of a tap, and only of a tap",
         )
+    if part.monitor is not None:
+        check_port_name(part.monitor, where)
     if part.monitor is not None and part.monitor in assembly.externals:
         raise DuplicateName(f"port '{part.monitor}' exists already", where=where, remedy="rename the monitor")
 

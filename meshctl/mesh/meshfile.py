@@ -92,7 +92,7 @@ def load(folder: str | Path) -> Mesh:
     description = parse_description(text)
     measured = measured_files(description)
     for entry in folder.iterdir():
-        if entry.suffix == ".csv" and entry.name not in KNOWN and entry.name not in measured:
+        if entry.suffix.lower() == ".csv" and entry.name not in KNOWN and entry.name not in measured:
             raise UnknownKey(
                 f"table '{entry.name}' is not known",
                 where=str(folder),

@@ -41,6 +41,8 @@ def wavelengths_of(words: str, option: str = "--wavelengths") -> np.ndarray:
     """
     parts = words.lower().split(":")
     try:
+        if "_" in words:
+            raise ValueError
         if parts[0] == "itu":
             found = _channels(words, [float(p) for p in parts[1:]], option)
         else:

@@ -14,11 +14,13 @@ from typing import Any
 import numpy as np
 
 from meshctl import __version__
-from meshctl.errors import Finding, MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize
+from meshctl.errors import Finding, MissingRow, NotFinite, StalePlan, UnknownKey, UnsoundFile, WrongSize, WrongUsage
 from meshctl.mesh.files import read_text
 from meshctl.mesh.graph import Mesh, frozen
+from meshctl.optics.grid import wavelengths_of
 from meshctl.plan.structure import LEVEL, NUMBER, PLAN, ROUTE, ROUTES_ASKED, SEARCH, TARGET, require
 from meshctl.plan.wanted import Wanted
+from meshctl.solver.wish import parse_wish
 
 FORMAT = 1
 ARRAYS = {
@@ -159,6 +161,18 @@ def _check_routes(entry: dict[str, Any], where: str) -> None:
         raise UnsoundFile("'routes' must list one route or more", where=where, remedy="route again")
     for k, route in enumerate(listed):
         require(route, ROUTE, where, f"routes[{k}]")
+    try:
+        wishes = [parse_wish(words) for words in entry["target"]["words"]]
+        if entry["target"]["band"]:
+            wavelengths_of(entry["target"]["band"], "band")
+    except WrongUsage as finding:  # what the file asks, not what the user wrote
+        said = f"'target' cannot be used: {finding.what}"
+        raise UnsoundFile(said, where=where, remedy="route again") from None
+    asked = {(wish.source, sink) for wish in wishes for sink in wish.sinks}
+    for k, route in enumerate(listed):
+        if (route["input"], route["output"]) not in asked:
+            said = f"'routes[{k}]' is a route {route['input']}:{route['output']} that its wish lacks"
+            raise UnsoundFile(said, where=where, remedy="route again")
     entry |= {"fidelity": math.nan, "matrix_error": math.nan}
 
 
@@ -249,6 +263,9 @@ def _check_fits(mesh: Mesh, plan: Plan, where: str) -> None:
         if route["input"] not in inputs or route["output"] not in outputs:
             said = f"the route {route['input']}:{route['output']} is not on mesh '{mesh.name}'"
             raise UnsoundFile(said, where=where, remedy="route again")
+    if len(plan.throughput_per_input) != len(inputs):
+        said = f"'throughput_per_input' has {len(plan.throughput_per_input)} entries, the mesh {len(inputs)} inputs"
+        raise WrongSize(said, where=where, remedy="solve again")
     size = tuple(plan.target.get("size", (len(outputs), len(inputs))))
     if size != (len(outputs), len(inputs)):
         said = f"'target.size' is {size[0]} outputs and {size[1]} inputs; the mesh has {len(outputs)} and {len(inputs)}"

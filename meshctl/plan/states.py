@@ -50,14 +50,18 @@ def state_file(mesh: Mesh, name: str) -> Path:
             f"'{shown}' is no name for a state",
             remedy=f"use letters, digits, . _ - and >, no . in front, {_MOST} characters at most",
         )
-    return _folder(mesh) / f"{name}.json"
+    path = _folder(mesh) / f"{name}.json"
+    if path.is_dir():
+        raise UnsoundFile("is a folder where a state must be", where=str(path), remedy="move it away")
+    return path
 
 
 def state_names(mesh: Mesh) -> list[str]:
     """Names of all states that the mesh folder keeps, sorted."""
     if mesh.folder is None or not (mesh.folder / STATES).is_dir():
         return []
-    names = [path.name.removesuffix(".json") for path in (mesh.folder / STATES).glob("*.json")]
+    files = [path for path in (mesh.folder / STATES).glob("*.json") if not path.is_dir()]
+    names = [path.name.removesuffix(".json") for path in files]
     return sorted(name for name in names if _NAME.fullmatch(name))
 
 

@@ -53,6 +53,8 @@ TEXTS = _list_of(TEXT, "a list of texts")
 NUMBERS = _list_of(NUMBER, "a list of numbers, one or more", some=True)
 LEVEL = _or_none(NUMBER)
 
+UNUSED = ("", "cross", "bar", "cleanest", "rest")  # keys of solver.unused.POLICIES, whose kernels stay unloaded
+
 PLAN = {
     "mesh_name": TEXT,
     "mesh_hash": TEXT,
@@ -75,7 +77,7 @@ ROUTES_ASKED = {
     "words": _list_of(TEXT, "a list of routes, one or more", some=True),
     "avoid": TEXTS,
     "priorities": _or_none(NUMBERS),
-    "unused": TEXT,
+    "unused": Form(f"empty or one of {', '.join(UNUSED[1:])}", lambda v: isinstance(v, str) and v in UNUSED),
     "seed": COUNT,
     "seconds": ABOVE_ZERO,
     "band": TEXT,

@@ -127,7 +127,9 @@ def find_routes(
     if not asked:
         raise WrongUsage("no route is asked for", remedy="name at least one, such as in1:out3")
     if priorities is not None and len(priorities) != len(asked):
-        raise WrongUsage(f"{len(priorities)} priorities for {len(asked)} routes", remedy="give one for each route")
+        raise WrongUsage(
+            f"priorities are {len(priorities)}, routes {len(asked)}", remedy="give one priority for each route"
+        )
     avoid = tuple(avoid)
     graph = graph.avoiding(avoid) if avoid else graph
     _check_ports(graph, asked)

@@ -296,7 +296,11 @@ def read_target(
         return make_target(read_matrix(path), shape, free, words)
     name, colon, argument = words.partition(":")
     if name not in TARGETS:
-        known = [f"{n}:.." if n in WITH_ARGUMENT else n for n in TARGETS] + ["FILE.npy", "FILE.csv", "FILE.toml"]
+        known = [WITH_ARGUMENT.get(n, n).partition(" ")[0].rstrip(",") for n in TARGETS] + [
+            "FILE.npy",
+            "FILE.csv",
+            "FILE.toml",
+        ]
         finding = unknown_name("target", words, known, "")
         raise WrongUsage(finding.what, remedy=finding.remedy)
     if shape[0] != shape[1]:
