@@ -5,6 +5,7 @@ Public: Base, Ask, Tell.
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Iterator
 from typing import TYPE_CHECKING, ClassVar
 
@@ -32,6 +33,7 @@ class Base(Screen[None]):
 
     WHERE = ""
     fresh = False  # nothing has changed since it was last drawn
+    said_lines = 0  # of the line of words
 
     def __init_subclass__(cls) -> None:
         cls.BINDINGS = [*bindings_of(cls.WHERE)]
@@ -120,8 +122,13 @@ class Base(Screen[None]):
         """Header and line of words; a solve that runs, or the last remark, stands before the selection."""
         if not self.is_mounted:
             return
-        self.query_one(".header", Static).update(phrases.header(self.work, self.app.size.width))
-        self.query_one(".words", Static).update(self.board.job or self.board.remark or self.words())
+        wide = self.app.size.width
+        self.query_one(".header", Static).update(phrases.header(self.work, wide), layout=False)
+        said = self.board.job or self.board.remark or self.words()
+        lines = len(textwrap.wrap(said, max(wide, 1)))
+        # another layout paints the whole window again: only where the number of lines asks for it
+        self.query_one(".words", Static).update(said, layout=lines != self.said_lines)
+        self.said_lines = lines
 
 
 class Ask(ModalScreen[str | None]):

@@ -235,7 +235,10 @@ class MeshCanvas(ScrollView, can_focus=True):
         if at is not None:
             row, column = at
             wide, high = raster.CARD, 3
-            self.scroll_to_region(Region(column - wide // 2, row - high // 2, wide, high), animate=False, force=True)
+            around = Region(max(column - wide // 2, 0), max(row - high // 2, 0), wide, high)
+            around = around.intersection(Region(0, 0, self.raster.width, self.raster.height))
+            if not Region(*self.scroll_offset, *self.size).contains_region(around):
+                self.scroll_to_region(around, animate=False, force=True)
         self._changed()
 
     def _mark(self, cell: int) -> tuple[int, int] | None:

@@ -24,6 +24,7 @@ class MeshScreen(Base):
     """Screen 1."""
 
     WHERE = "mesh"
+    inspected_lines = -1  # of the words beside the mesh; another number asks for another layout
 
     def body(self) -> Iterator[Widget]:
         zoom = 0 if self.work.mesh.net.n_cells > MANY else 1
@@ -45,7 +46,9 @@ class MeshScreen(Base):
     def _inspect(self) -> None:
         panel = self.query_one("#inspector")
         if panel.display:
-            panel.query_one(Static).update("\n".join(phrases.inspector(self.work, self.board.cell)))
+            lines = phrases.inspector(self.work, self.board.cell)
+            panel.query_one(Static).update("\n".join(lines), layout=len(lines) != self.inspected_lines)
+            self.inspected_lines = len(lines)
 
     def on_screen_resume(self) -> None:
         """Perhaps another cell was chosen elsewhere."""
