@@ -161,6 +161,17 @@ def is_crossing(net: Net, sites: Sites) -> np.ndarray:
     return found
 
 
+def before_crossing(net: Net, sites: Sites) -> np.ndarray:
+    """Sites right before a waveguide crossing of the same block: there the block's lanes are still exchanged.
+
+    Light is known behind whole blocks only, and a crossing is fused with the cell before it.
+    """
+    leave = sites.last_block
+    before = np.zeros(len(sites), bool)
+    before[:-1] = is_crossing(net, sites)[1:] & (leave[1:] == leave[:-1])
+    return before
+
+
 class _Strokes:
     """Which stroke shows the power in front of and behind each site on each lane."""
 
@@ -173,7 +184,7 @@ class _Strokes:
             return
         start, end = lane_ends(net, lit)
         leave = sites.last_block
-        turned = circuit.lane_a[leave] != sites.lane_a
+        turned = (circuit.lane_a[leave] != sites.lane_a) ^ before_crossing(net, sites)
         self.behind = [
             self._drawn(lit[leave, np.where(turned, 3, 2)], marks),
             self._drawn(lit[leave, np.where(turned, 2, 3)], marks),

@@ -1,6 +1,7 @@
 """The mesh as text: what is drawn, that it fits, and that its light is the response's."""
 
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -9,7 +10,7 @@ from meshctl.errors import LoopInNet, OutOfRange, UnknownKey, WrongSize
 from meshctl.mesh.building import Tables, build_mesh
 from meshctl.mesh.description import parse_description
 from meshctl.mesh.lattices import LATTICES, PLANE_SIZES
-from meshctl.mesh.meshfile import lattice
+from meshctl.mesh.meshfile import lattice, load
 from meshctl.mesh.response import Response
 from meshctl.optics.elements import cell_block
 from meshctl.picture import describe, draw, light
@@ -290,3 +291,16 @@ def test_wrong_words_and_sizes_refused(four):
         draw(four, settings, lit=np.zeros((3, 4)))
     with pytest.raises(OutOfRange):
         draw(four, width=10)
+
+
+def test_light_changes_lanes_at_crossings():
+    # rows and columns cross behind each coupler: straight on, in1 is on its own lane up to the first crossing only
+    mesh = load(Path(__file__).resolve().parent.parent / "meshes" / "dunlin")
+    settings = np.full(4, np.pi)
+    rows = {line[:5].strip(): line for line in draw(mesh, settings, lit=light(mesh, settings, "in1")).splitlines()}
+    first = rows["in1"].index("╲")
+    assert set(rows["in1"][5:first]) == {"━"}
+    assert "━" not in rows["in1"][first:]
+    assert "━" not in rows["add1"][5:first]
+    assert "━" in rows["add1"][first:]
+    assert "━" not in rows["in2"]

@@ -16,7 +16,7 @@ from textual.message import Message
 from textual.scroll_view import ScrollView
 from textual.strip import Strip
 
-from meshctl.picture_lanes import LINES, WEIGHTS_DB, Layout, is_crossing, layout_of
+from meshctl.picture_lanes import LINES, WEIGHTS_DB, Layout, before_crossing, is_crossing, layout_of
 from meshctl.picture_light import lane_ends
 from meshctl.picture_states import BAR, CROSS, UNKNOWN, state_of
 from meshctl.screens import raster
@@ -87,11 +87,8 @@ class MeshCanvas(ScrollView, can_focus=True):
         assert layout is not None
         start, end = lane_ends(net, lit)
         leave = sites.last_block
-        turned = layout.circuit.lane_a[leave] != sites.lane_a
+        turned = (layout.circuit.lane_a[leave] != sites.lane_a) ^ before_crossing(net, sites)
         behind = np.column_stack([lit[leave, np.where(turned, 3, 2)], lit[leave, np.where(turned, 2, 3)]])
-        # a waveguide crossing right behind a cell is one block with it: before it the lanes are the other way round
-        after = np.flatnonzero(is_crossing(net, sites)[1:] & (leave[1:] == leave[:-1]))
-        behind[after] = behind[after][:, ::-1]
         lane = np.column_stack([sites.lane_a, sites.lane_b]).ravel()
         last = np.full(len(start), -1)
         last[lane] = np.arange(len(lane))  # the last write of each lane stays
