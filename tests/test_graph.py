@@ -6,8 +6,7 @@ import networkx as nx
 import numpy as np
 import pytest
 
-from meshctl.errors import UnsoundNet
-from meshctl.mesh.graph import check_net, network
+from meshctl.mesh.graph import network
 from meshctl.mesh.meshfile import lattice, load
 
 
@@ -61,14 +60,6 @@ def test_arrays_of_a_mesh_are_read_only():
     arrays = [a for record in records for a in vars(record).values() if isinstance(a, np.ndarray)]
     assert len(arrays) > 20
     assert not any(array.flags.writeable for array in arrays)
-
-
-def test_one_sided_link_is_refused():
-    net = lattice("rectangular", modes=2).net
-    mate = net.mate.copy()
-    mate[0] = 5
-    with pytest.raises(UnsoundNet, match=r"c1_1\.outer\.a is linked to"):
-        check_net(dataclasses.replace(net, mate=mate))
 
 
 def test_as_built_holds_stuck_settings():

@@ -16,7 +16,6 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from meshctl.errors import UnsoundNet
 from meshctl.mesh.spread import Spread
 from meshctl.optics.elements import KINDS
 
@@ -295,16 +294,3 @@ class Mesh:
         ]
         body = "".join(f"<tr><th>{k}</th><td>{escape(str(v))}</td></tr>" for k, v in rows)
         return f"<table><caption>mesh {escape(self.name)}</caption>{body}</table>"
-
-
-def check_net(net: Net) -> None:
-    """Refuse links that are not mutual; everything else is caught where the net is read."""
-    linked = np.flatnonzero(net.mate >= 0)
-    back = net.mate[net.mate[linked]]
-    wrong = linked[back != linked]
-    if len(wrong):
-        port = int(wrong[0])
-        raise UnsoundNet(
-            f"port {net.port_name(port)} is linked to {net.port_name(int(net.mate[port]))}, which is linked elsewhere",
-            remedy="link each port once",
-        )
